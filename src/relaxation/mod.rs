@@ -1,0 +1,3 @@
+//! The semidefinite relaxation: words, monomial levels, moment matrices and the programme made of them.
+
+pub mod program;
