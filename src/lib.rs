@@ -2,8 +2,12 @@
 
 #![deny(unsafe_code)]
 
+pub mod certificate;
+pub mod certify;
 pub mod counts;
 pub mod fault;
 pub mod relaxation;
+pub mod request;
 pub mod scenario;
 pub mod solver;
+pub mod witness;

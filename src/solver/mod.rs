@@ -48,5 +48,12 @@ pub struct Candidate {
 /// Solves one programme.
 pub fn solve(program: &Program, limits: Limits) -> Candidate {
     let _ = (program, limits);
-    Candidate { status: Status::Failed, iterations: 0, values: vec![], equality_multipliers: vec![], inequality_multipliers: vec![], block_multipliers: vec![] }
+    Candidate {
+        status: Status::Failed,
+        iterations: 0,
+        values: vec![],
+        equality_multipliers: vec![],
+        inequality_multipliers: vec![],
+        block_multipliers: vec![],
+    }
 }

@@ -1,0 +1,123 @@
+//! What certification says about a request: the record's body, in plain types.
+
+use serde::{Deserialize, Serialize};
+
+use crate::{
+    counts::{Behaviour, Table},
+    relaxation::level::{Level, LevelChoice},
+    request::{LostRounds, RoundModel},
+    scenario::{Scenario, Setting},
+};
+
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Verdict {
+    /// Bits may be extracted.
+    Certified,
+    /// A checked bound from frequencies taken as probabilities; no bits are released.
+    Estimate,
+    /// No bits.
+    Refused,
+}
+
+/// Why bits are refused.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Reason {
+    /// The bound on the guessing probability reaches 1, or finite-size terms eat all bits.
+    ZeroBound,
+    /// The counts cannot come from the declared dimension and leakage, at the stated confidence.
+    OutsideModel,
+    /// No witness passed the exact check.
+    Unverified,
+}
+
+/// Failure probabilities as recorded.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct FailureTotal {
+    pub estimation: f64,
+    pub hashing: f64,
+    /// Sum of the above, rounded up.
+    pub total: f64,
+}
+
+/// The bound of one target setting.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct TargetCertificate {
+    pub preparation: usize,
+    pub measurement: usize,
+    /// Rounds at this setting; `null` for a stated behaviour.
+    pub rounds: Option<u64>,
+    /// Upper bound on the guessing probability, rounded up, at most 1; `null` when no witness passed the exact check.
+    pub guessing_probability_bound: Option<f64>,
+    /// `−log2` of the bound, in bits per target round, rounded down.
+    pub min_entropy_per_round: f64,
+    /// Min-entropy of the target string, in bits, rounded down, before anything is subtracted.
+    pub min_entropy: f64,
+    /// Bits subtracted because the counts are public, rounded up.
+    pub publication_cost: f64,
+    /// Bits subtracted for the hash, rounded up.
+    pub hashing_cost: f64,
+    /// Whole bits that may be extracted from the outcomes of this setting.
+    pub certified_bits: u64,
+    /// Level of the witness; `null` when there is none.
+    pub level: Option<Level>,
+    /// `sha256:` digest of the witness document; `null` when there is none.
+    pub witness: Option<String>,
+    /// What rounding the witness to integers cost in guessing probability, an approximate figure for information.
+    pub rounding_cost: Option<f64>,
+}
+
+impl TargetCertificate {
+    pub fn setting(&self) -> Setting {
+        Setting { x: self.preparation, y: self.measurement }
+    }
+}
+
+/// Proof that the numbers contradict the declaration, and what would explain them.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct OutsideModel {
+    /// `sha256:` digest of the witness of the contradiction.
+    pub witness: String,
+    /// No smaller uniform leakage, read on average, explains the numbers: a lower bound, rounded down. `null` when it could
+    /// not be verified.
+    pub smallest_uniform_leakage: Option<f64>,
+    /// `sha256:` digest of the witness of that figure.
+    pub smallest_uniform_leakage_witness: Option<String>,
+}
+
+/// The outcome of certifying one request. Everything in it follows from the request alone.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct Certificate {
+    pub verdict: Verdict,
+    pub reason: Option<Reason>,
+    pub scenario: Scenario,
+    /// Counts as certified, after lost rounds were folded in if that was asked for.
+    pub counts: Option<Table<u64>>,
+    /// `sha256:` digest of the counts' canonical bytes.
+    pub counts_digest: Option<String>,
+    pub behaviour: Option<Behaviour>,
+    pub lost_rounds: Option<LostRounds>,
+    pub rounds: RoundModel,
+    pub total_rounds: Option<u64>,
+    /// `null` for plug-in figures, which claim no confidence.
+    pub failure: Option<FailureTotal>,
+    /// The level that was asked for.
+    pub level: LevelChoice,
+    /// Confidence interval `[low, high]` of every probability, `[x][y][b]`; `null` for plug-in figures.
+    pub region: Option<Table<[f64; 2]>>,
+    pub targets: Vec<TargetCertificate>,
+    pub certified_bits: u64,
+    /// Certified bits over all rounds of the batch, rounded down.
+    pub bits_per_round: f64,
+    pub outside_model: Option<OutsideModel>,
+    /// What the figures rest on, in words.
+    pub assumptions: Vec<String>,
+    pub warnings: Vec<String>,
+    /// Software that made the figures.
+    pub version: String,
+}

@@ -1,0 +1,186 @@
+//! What is to be certified: a scenario, the counts or a stated behaviour, and how the rounds are accounted for.
+
+use serde::{Deserialize, Serialize};
+
+use crate::{
+    counts::{Behaviour, Counts, Table},
+    fault::Fault,
+    relaxation::level::LevelChoice,
+    scenario::{Scenario, ScenarioDocument, Setting},
+};
+
+/// What is assumed about the sequence of rounds.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum RoundModel {
+    /// Frequencies are taken as probabilities. A diagnostic: no bits are released.
+    PlugIn,
+    /// Rounds are independent and identically distributed, given the distribution of the hidden variable.
+    Independent,
+    /// No independence is assumed; factors are committed ahead of the data.
+    Memory,
+}
+
+/// Failure probabilities that the poster is willing to accept, each in `[1e-100, 0.5]`.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct Failure {
+    /// That the confidence region misses the true behaviour.
+    pub estimation: f64,
+    /// Distance from uniform left by the two-universal hash.
+    pub hashing: f64,
+}
+
+impl Default for Failure {
+    fn default() -> Self {
+        Self { estimation: 1e-10, hashing: 1e-10 }
+    }
+}
+
+impl Failure {
+    /// # Errors
+    /// The first probability outside `[1e-100, 0.5]`.
+    pub fn check(&self) -> Result<(), Fault> {
+        for (name, value) in [("estimation", self.estimation), ("hashing", self.hashing)] {
+            if !(1e-100..=0.5).contains(&value) {
+                return Err(Fault::new(format!("/{name}"), format!("a failure probability is from 1e-100 to 0.5, is {value}")));
+            }
+        }
+        Ok(())
+    }
+}
+
+/// Rounds in which no outcome was registered, per setting `[x][y]`, and what the poster asks to be done with them.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct LostRounds {
+    pub counts: Vec<Vec<u64>>,
+    pub treatment: LostTreatment,
+}
+
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum LostTreatment {
+    /// They are left out, on the explicit assumption that a loss does not depend on the setting or the would-be outcome.
+    FairSampling,
+    /// They are counted as this outcome. Always allowed.
+    AsOutcome(usize),
+}
+
+/// The document that `certify` reads and that a posted batch and its rig's profile make together.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct RequestDocument {
+    pub scenario: ScenarioDocument,
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub counts: Option<Table<u64>>,
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub behaviour: Option<Table<f64>>,
+    pub rounds: RoundModel,
+    #[serde(default)]
+    pub failure: Failure,
+    #[serde(default)]
+    pub level: LevelChoice,
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub lost_rounds: Option<LostRounds>,
+}
+
+/// Counts, or probabilities in their place.
+#[derive(Debug, Clone, PartialEq)]
+pub enum Data {
+    Counts(Counts),
+    Behaviour(Behaviour),
+}
+
+/// A valid request.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Request {
+    pub(crate) scenario: Scenario,
+    pub(crate) data: Data,
+    pub(crate) rounds: RoundModel,
+    pub(crate) failure: Failure,
+    pub(crate) level: LevelChoice,
+    pub(crate) lost_rounds: Option<LostRounds>,
+}
+
+impl TryFrom<RequestDocument> for Request {
+    type Error = Fault;
+
+    fn try_from(document: RequestDocument) -> Result<Self, Fault> {
+        let RequestDocument { scenario, counts, behaviour, rounds, failure, level, lost_rounds } = document;
+        let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
+        failure.check().map_err(|fault| fault.under("/failure"))?;
+        if rounds == RoundModel::Memory {
+            return Err(Fault::new("/rounds", "rounds with memory need a commitment made before the data; this version has none"));
+        }
+        let geometry = scenario.geometry();
+        let data = match (counts, behaviour) {
+            (Some(mut table), None) => {
+                if let Some(lost) = &lost_rounds {
+                    lost.fold_into(&mut table, geometry.outcomes)?;
+                }
+                Data::Counts(Counts::try_new(table, geometry).map_err(|fault| fault.under("/counts"))?)
+            }
+            (None, Some(table)) => {
+                if rounds != RoundModel::PlugIn {
+                    return Err(Fault::new("/behaviour", "a stated behaviour has no rounds: it goes with \"plug-in\" only"));
+                }
+                if lost_rounds.is_some() {
+                    return Err(Fault::new("/lost_rounds", "a stated behaviour has no rounds to lose"));
+                }
+                Data::Behaviour(Behaviour::try_new(table, geometry).map_err(|fault| fault.under("/behaviour"))?)
+            }
+            (Some(_), Some(_)) => return Err(Fault::new("/behaviour", "give counts or a behaviour, not both")),
+            (None, None) => return Err(Fault::new("/counts", "counts are missing")),
+        };
+        Ok(Self { scenario, data, rounds, failure, level, lost_rounds })
+    }
+}
+
+impl LostRounds {
+    /// Adds the lost rounds to the counts if they are to be counted as an outcome.
+    fn fold_into(&self, table: &mut Table<u64>, outcomes: usize) -> Result<(), Fault> {
+        let shape = |pointer: String| Fault::new(pointer, "needs one number per preparation and measurement, as the counts have");
+        if self.counts.len() != table.len() {
+            return Err(shape("/lost_rounds/counts".into()));
+        }
+        for (x, (lost, counted)) in self.counts.iter().zip(table.iter_mut()).enumerate() {
+            if lost.len() != counted.len() {
+                return Err(shape(format!("/lost_rounds/counts/{x}")));
+            }
+            let LostTreatment::AsOutcome(outcome) = self.treatment else { continue };
+            if outcome >= outcomes {
+                let detail = format!("there is no outcome {outcome}; they are numbered from 0 to {}", outcomes - 1);
+                return Err(Fault::new("/lost_rounds/treatment/as-outcome", detail));
+            }
+            for (n, cells) in lost.iter().zip(counted) {
+                if let Some(cell) = cells.get_mut(outcome) {
+                    *cell = cell.saturating_add(*n);
+                }
+            }
+        }
+        Ok(())
+    }
+
+    pub fn total(&self) -> u64 {
+        self.counts.iter().flatten().fold(0, |sum: u64, n| sum.saturating_add(*n))
+    }
+}
+
+impl Request {
+    pub fn scenario(&self) -> &Scenario {
+        &self.scenario
+    }
+
+    pub fn data(&self) -> &Data {
+        &self.data
+    }
+
+    /// Rounds at a setting; `None` for a stated behaviour.
+    pub fn rounds_at(&self, setting: Setting) -> Option<u64> {
+        match &self.data {
+            Data::Counts(counts) => Some(counts.rounds_at(setting)),
+            Data::Behaviour(_) => None,
+        }
+    }
+}
