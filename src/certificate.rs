@@ -3,7 +3,7 @@
 use serde::{Deserialize, Serialize};
 
 use crate::{
-    counts::{Behaviour, Table},
+    counts::Table,
     relaxation::level::{Level, LevelChoice},
     request::{LostRounds, RoundModel},
     scenario::{Scenario, Setting},
@@ -100,7 +100,7 @@ pub struct Certificate {
     pub counts: Option<Table<u64>>,
     /// `sha256:` digest of the counts' canonical bytes.
     pub counts_digest: Option<String>,
-    pub behaviour: Option<Behaviour>,
+    pub behaviour: Option<Table<f64>>,
     pub lost_rounds: Option<LostRounds>,
     pub rounds: RoundModel,
     pub total_rounds: Option<u64>,

@@ -1,6 +1,6 @@
 //! Integer tallies `n(b|x,y)` of one batch, and behaviours `p(b|x,y)` stated in their place.
 
-use serde::{Deserialize, Serialize};
+use serde::Serialize;
 use sha2::{Digest, Sha256};
 
 use crate::{
@@ -103,7 +103,7 @@ impl Counts {
 pub const NORMALISATION_SLACK: f64 = 1e-6;
 
 /// A behaviour `p(b|x,y)` with probabilities in `[0, 1]` that add up to 1 at every setting.
-#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[derive(Debug, Clone, PartialEq, Serialize)]
 #[serde(transparent)]
 pub struct Behaviour {
     table: Table<f64>,
