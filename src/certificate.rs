@@ -54,12 +54,12 @@ pub struct TargetCertificate {
     pub guessing_probability_bound: Option<f64>,
     /// `−log2` of the bound, in bits per target round, rounded down.
     pub min_entropy_per_round: f64,
-    /// Min-entropy of the target string, in bits, rounded down, before anything is subtracted.
-    pub min_entropy: f64,
-    /// Bits subtracted because the counts are public, rounded up.
-    pub publication_cost: f64,
-    /// Bits subtracted for the hash, rounded up.
-    pub hashing_cost: f64,
+    /// Min-entropy of the target string, in bits, rounded down, before anything is subtracted; `null` for plug-in figures.
+    pub min_entropy: Option<f64>,
+    /// Bits subtracted because the counts are public, rounded up; `null` for plug-in figures.
+    pub publication_cost: Option<f64>,
+    /// Bits subtracted for the hash, rounded up; `null` for plug-in figures.
+    pub hashing_cost: Option<f64>,
     /// Whole bits that may be extracted from the outcomes of this setting.
     pub certified_bits: u64,
     /// Level of the witness; `null` when there is none.

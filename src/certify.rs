@@ -1,9 +1,22 @@
 //! The pure pipeline: a request in, a certificate and its witnesses out.
 
+use num_rational::BigRational;
+
 use crate::{
-    certificate::{Certificate, Reason, Verdict},
-    request::{Data, Request},
-    witness::witness::Witness,
+    bound::{Answer, guessing_probability},
+    certificate::{Certificate, FailureTotal, OutsideModel, Reason, TargetCertificate, Verdict},
+    counts::Table,
+    entropy::extraction::{extractable, hashing_cost, min_entropy, min_entropy_per_round, publication_cost},
+    exact::round_down,
+    relaxation::{cost::choose, level::Level},
+    request::{Data, LostTreatment, Request, RoundModel},
+    scenario::{LeakageReading, Setting},
+    solver::Limits,
+    statistics::region::{frequencies, region},
+    witness::{
+        check::{CheckedBound, CheckedWitness, Place},
+        witness::Witness,
+    },
 };
 
 /// A certificate with the witnesses that it names by digest.
@@ -15,32 +28,236 @@ pub struct Certification {
 
 /// Certifies one request. Never fails: what cannot be certified is refused, with the reason in the certificate.
 pub fn certify(request: &Request) -> Certification {
-    let counts = match request.data() {
-        Data::Counts(counts) => Some(counts),
-        Data::Behaviour(_) => None,
-    };
-    Certification {
-        certificate: Certificate {
+    let evidence = evidence(request);
+    let level = choose(request.level, request.scenario());
+    let mut draft = Draft::new(request, &evidence);
+    for target in request.scenario().targets() {
+        match guessing_probability(request.scenario(), *target, evidence.place(), level, Limits::default()) {
+            Answer::Outside(contradiction) => {
+                let least = contradiction.least_leakage.as_ref().map(|(least, witness)| (least, witness));
+                return draft.outside(&contradiction.found.witness, least);
+            }
+            Answer::Bounded(found) => draft.add(request, *target, found.level, &found.witness, &found.bound),
+            Answer::Unverified => draft.add_unverified(request, *target),
+        }
+    }
+    draft.conclude()
+}
+
+/// What is known of the behaviour.
+pub(crate) enum Evidence {
+    Point(Table<f64>),
+    Region(Table<[f64; 2]>),
+}
+
+impl Evidence {
+    pub(crate) fn place(&self) -> Place<'_> {
+        match self {
+            Self::Point(table) => Place::Behaviour(table),
+            Self::Region(table) => Place::Region(table),
+        }
+    }
+}
+
+pub(crate) fn evidence(request: &Request) -> Evidence {
+    match (&request.data, request.rounds) {
+        (Data::Behaviour(behaviour), _) => Evidence::Point(behaviour.table().clone()),
+        (Data::Counts(counts), RoundModel::PlugIn) => Evidence::Point(frequencies(counts)),
+        (Data::Counts(counts), RoundModel::Independent | RoundModel::Memory) => {
+            Evidence::Region(region(counts, request.failure.estimation))
+        }
+    }
+}
+
+/// A certificate in the making.
+pub(crate) struct Draft {
+    certificate: Certificate,
+    witnesses: Vec<Witness>,
+}
+
+impl Draft {
+    /// Everything that is known before the first bound.
+    pub(crate) fn new(request: &Request, evidence: &Evidence) -> Self {
+        let (counts, behaviour) = match &request.data {
+            Data::Counts(counts) => (Some(counts), None),
+            Data::Behaviour(behaviour) => (None, Some(behaviour.table().clone())),
+        };
+        let region = match evidence {
+            Evidence::Point(_) => None,
+            Evidence::Region(table) => Some(table.clone()),
+        };
+        let failure = region.is_some().then(|| FailureTotal::new(request.failure));
+        let certificate = Certificate {
             verdict: Verdict::Refused,
-            reason: Some(Reason::Unverified),
+            reason: None,
             scenario: request.scenario.clone(),
-            counts: counts.map(|c| c.table().clone()),
-            counts_digest: counts.map(|c| c.digest()),
-            behaviour: None,
+            counts: counts.map(|counts| counts.table().clone()),
+            counts_digest: counts.map(|counts| counts.digest()),
+            behaviour,
             lost_rounds: request.lost_rounds.clone(),
             rounds: request.rounds,
-            total_rounds: counts.map(|c| c.total()),
-            failure: None,
+            total_rounds: counts.map(|counts| counts.total()),
+            failure,
             level: request.level,
-            region: None,
-            targets: vec![],
+            region,
+            targets: Vec::new(),
             certified_bits: 0,
             bits_per_round: 0.0,
             outside_model: None,
-            assumptions: vec![],
-            warnings: vec![],
-            version: concat!("bitassay ", env!("CARGO_PKG_VERSION")).into(),
-        },
-        witnesses: vec![],
+            assumptions: assumptions(request),
+            warnings: warnings(request),
+            version: concat!("bitassay ", env!("CARGO_PKG_VERSION")).to_owned(),
+        };
+        Self { certificate, witnesses: Vec::new() }
     }
+
+    fn keep(&mut self, witness: &CheckedWitness) -> String {
+        if self.witnesses.iter().all(|kept| kept != witness.witness()) {
+            self.witnesses.push(witness.witness().clone());
+        }
+        witness.digest().to_owned()
+    }
+
+    pub(crate) fn add(&mut self, request: &Request, target: Setting, level: Level, witness: &CheckedWitness, bound: &CheckedBound) {
+        let digest = self.keep(witness);
+        let mut entry = TargetCertificate::without_bound(target, request.rounds_at(target));
+        entry.level = Some(level);
+        entry.witness = Some(digest);
+        entry.rounding_cost = Some(witness.rounding_cost());
+        entry.fill(bound.rounded_up(), request);
+        self.certificate.targets.push(entry);
+    }
+
+    pub(crate) fn add_unverified(&mut self, request: &Request, target: Setting) {
+        self.certificate.targets.push(TargetCertificate::without_bound(target, request.rounds_at(target)));
+    }
+
+    /// The verdict follows from the targets.
+    pub(crate) fn conclude(mut self) -> Certification {
+        let certificate = &mut self.certificate;
+        let bits = certificate.targets.iter().fold(0u64, |sum, target| sum.saturating_add(target.certified_bits));
+        let (bounded, random) = (
+            certificate.targets.iter().any(|target| target.guessing_probability_bound.is_some()),
+            certificate.targets.iter().any(|target| target.min_entropy_per_round > 0.0),
+        );
+        (certificate.verdict, certificate.reason) = match certificate.rounds {
+            RoundModel::PlugIn if random => (Verdict::Estimate, None),
+            RoundModel::Independent | RoundModel::Memory if bits > 0 => (Verdict::Certified, None),
+            RoundModel::PlugIn | RoundModel::Independent | RoundModel::Memory if bounded => (Verdict::Refused, Some(Reason::ZeroBound)),
+            RoundModel::PlugIn | RoundModel::Independent | RoundModel::Memory => (Verdict::Refused, Some(Reason::Unverified)),
+        };
+        certificate.certified_bits = bits;
+        if let Some(rounds) = certificate.total_rounds.filter(|_| bits > 0) {
+            certificate.bits_per_round = (bits as f64 / rounds as f64).next_down();
+        }
+        Certification { certificate: self.certificate, witnesses: self.witnesses }
+    }
+
+    /// The numbers contradict the declaration: there is no model to speak of, and bounds found so far are of no interest.
+    pub(crate) fn outside(
+        mut self,
+        contradiction: &CheckedWitness,
+        least_leakage: Option<(&BigRational, &CheckedWitness)>,
+    ) -> Certification {
+        self.witnesses.clear();
+        self.certificate.targets.clear();
+        self.certificate.verdict = Verdict::Refused;
+        self.certificate.reason = Some(Reason::OutsideModel);
+        self.certificate.outside_model = Some(OutsideModel {
+            witness: self.keep(contradiction),
+            smallest_uniform_leakage: least_leakage.map(|(least, _)| round_down(least)),
+            smallest_uniform_leakage_witness: least_leakage.map(|(_, witness)| self.keep(witness)),
+        });
+        Certification { certificate: self.certificate, witnesses: self.witnesses }
+    }
+}
+
+impl TargetCertificate {
+    /// A target of which nothing is known: the trivial bound, no bits.
+    pub fn without_bound(target: Setting, rounds: Option<u64>) -> Self {
+        Self {
+            preparation: target.x,
+            measurement: target.y,
+            rounds,
+            guessing_probability_bound: None,
+            min_entropy_per_round: 0.0,
+            min_entropy: None,
+            publication_cost: None,
+            hashing_cost: None,
+            certified_bits: 0,
+            level: None,
+            witness: None,
+            rounding_cost: None,
+        }
+    }
+
+    /// Fills in everything that follows from a bound on the guessing probability.
+    fn fill(&mut self, bound: f64, request: &Request) {
+        let bound = bound.min(1.0);
+        self.guessing_probability_bound = Some(bound);
+        self.min_entropy_per_round = min_entropy_per_round(bound);
+        let (RoundModel::Independent | RoundModel::Memory, Some(rounds)) = (request.rounds, self.rounds) else { return };
+        let targets = request.scenario.targets().len() as f64;
+        let entropy = min_entropy(rounds, self.min_entropy_per_round);
+        let publication = publication_cost(rounds, request.scenario.geometry().outcomes);
+        // Each target's outcomes are hashed on their own.
+        let hashing = hashing_cost((request.failure.hashing / targets).next_down());
+        self.min_entropy = Some(entropy);
+        self.publication_cost = Some(publication);
+        self.hashing_cost = Some(hashing);
+        self.certified_bits = extractable(entropy, &[publication, hashing]);
+    }
+}
+
+impl FailureTotal {
+    fn new(failure: crate::request::Failure) -> Self {
+        let crate::request::Failure { estimation, hashing } = failure;
+        Self { estimation, hashing, total: (estimation + hashing).next_up() }
+    }
+}
+
+fn assumptions(request: &Request) -> Vec<String> {
+    let scenario = request.scenario();
+    let dimension = scenario.geometry().carrier_dimension;
+    let leakage = match scenario.leakage_holds() {
+        LeakageReading::OnAverage => format!(
+            "For every preparation the weight outside some {dimension}-dimensional carrier is at most the declared leakage, on average over \
+             everything classical."
+        ),
+        LeakageReading::EveryEmission => format!(
+            "Each pure state that is emitted, given everything classical, has at most the declared leakage outside some \
+             {dimension}-dimensional carrier. For a phase-randomised source, whose components are Fock states, this is false even where the \
+             mixture satisfies it."
+        ),
+    };
+    let mut assumptions = vec![
+        leakage,
+        "Settings are chosen independently of the devices and of the adversary.".to_owned(),
+        "The adversary holds classical side information only; one entangled with the devices is outside the model.".to_owned(),
+        "The target outcomes stay secret until they have been hashed; the counts may be public.".to_owned(),
+    ];
+    match request.rounds {
+        RoundModel::PlugIn => {
+            assumptions.push("Frequencies are taken as probabilities: a diagnostic from which no bits may be released.".to_owned())
+        }
+        RoundModel::Independent => {
+            assumptions
+                .push("Rounds are independent and identically distributed, given the distribution of the hidden variable.".to_owned());
+        }
+        RoundModel::Memory => {}
+    }
+    if request.lost_rounds.as_ref().is_some_and(|lost| lost.treatment == LostTreatment::FairSampling) {
+        assumptions.push(
+            "Fair sampling: whether a round is lost does not depend on the settings or on what its outcome would have been.".to_owned(),
+        );
+    }
+    assumptions
+}
+
+fn warnings(request: &Request) -> Vec<String> {
+    let mut warnings = Vec::new();
+    if let Some(lost) = request.lost_rounds.as_ref().filter(|lost| lost.treatment == LostTreatment::FairSampling) {
+        warnings.push(format!("{} lost rounds were left out on the assumption of fair sampling.", lost.total()));
+    }
+    warnings
 }

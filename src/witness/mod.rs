@@ -1,5 +1,7 @@
 //! Witnesses: exact proofs of bounds.
 
+pub mod check;
+pub mod rounding;
 // The document is the folder's one noun; the repetition is intended.
 #[allow(clippy::module_inception)]
 pub mod witness;

@@ -1,0 +1,4 @@
+//! From bounds on the guessing probability to whole bits that may be extracted.
+
+pub mod extraction;
+pub mod logarithm;

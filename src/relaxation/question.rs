@@ -1,0 +1,289 @@
+//! Questions about a geometry, turned into a programme over the moments.
+//!
+//! Moments are kept per *group* of values of the hidden variable, sub-normalised: `⟨R_x⟩_e = q_e` and `⟨V⟩_e = d q_e` for
+//! every group e, and `Σ_e q_e = 1`. A question says how many groups there are, what is maximised in each, what is known of the
+//! behaviour `p(b|x,y) = Σ_e ⟨R_x M_{b|y}⟩_e` and how the leakage `⟨N R_x⟩` is limited. The last outcome is
+//! `R_x − Σ_b R_x M_{b|y}`.
+
+use super::{
+    moments::Moments,
+    program::{Block, Program, Row, Term},
+    word::{Letter, WordError},
+};
+use crate::{
+    counts::Table,
+    scenario::{Geometry, LeakageReading, Setting},
+    witness::witness::Claim,
+};
+
+/// What is known of the behaviour.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub enum Knowledge<'a> {
+    Nothing,
+    /// Probabilities `[x][y][b]`; the last outcome follows from the others.
+    Exactly(&'a Table<f64>),
+    /// Intervals `[low, high]`, `[x][y][b]`.
+    Within(&'a Table<[f64; 2]>),
+}
+
+/// How far constraints may be relaxed to make the question answerable whatever the numbers are.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Slack {
+    /// Not at all.
+    None,
+    /// Every probability may miss its interval by `t`; `−t` is maximised. A positive least `t` is a contradiction.
+    Behaviour,
+    /// Every leakage is at most `t` in place of its declared tolerance; `−t` is maximised.
+    Leakage,
+}
+
+/// A question. Shapes: `leakage` has one entry per preparation.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Question<'a> {
+    pub claim: Claim,
+    pub knowledge: Knowledge<'a>,
+    pub leakage: &'a [f64],
+    pub leakage_holds: LeakageReading,
+    pub slack: Slack,
+}
+
+/// A programme and the key to its rows, so that multipliers can be read back.
+#[derive(Debug, Clone)]
+pub struct Posed {
+    pub program: Program,
+    pub groups: usize,
+    /// The setting and outcome of each behaviour row. Intervals give two inequalities for one row: first `p ≤ high`, then
+    /// `−p ≤ −low`.
+    pub behaviour_rows: Vec<(Setting, usize)>,
+    pub behaviour_within: bool,
+    /// The group (`None` for a sum over all) and preparation of each leakage row, after the behaviour inequalities.
+    pub leakage_rows: Vec<(Option<usize>, usize)>,
+    /// Factors by which the elements of each basis were scaled; a multiplier of the unscaled block is `s_i s_j Z_ij`.
+    pub scales: Vec<Vec<f64>>,
+}
+
+/// A linear form over one group's moments: `(moment, coefficient)`.
+type Form = Vec<(usize, f64)>;
+
+/// Variables: moment k of group e is `e · stride + column[k]`, times `factor[k]`.
+struct Layout {
+    stride: usize,
+    column: Vec<usize>,
+    factor: Vec<f64>,
+}
+
+impl Layout {
+    /// All `⟨R_x⟩` and `⟨V⟩/d` of a group are one variable, column 0.
+    fn new(moments: &Moments) -> Self {
+        let dimension = f64::from(moments.algebra().geometry().carrier_dimension);
+        let mut next = 1;
+        let (mut column, mut factor) = (Vec::new(), Vec::new());
+        for word in moments.words() {
+            let (place, times) = match word.letters() {
+                [Letter::State(_)] => (0, 1.0),
+                [Letter::Carrier] => (0, dimension),
+                _ => {
+                    next += 1;
+                    (next - 1, 1.0)
+                }
+            };
+            column.push(place);
+            factor.push(times);
+        }
+        Self { stride: next, column, factor }
+    }
+
+    fn variable(&self, group: usize, moment: usize) -> usize {
+        group * self.stride + self.column[moment]
+    }
+
+    /// Collects a form of one group into terms over variables.
+    fn place(&self, group: usize, form: &[(usize, f64)], into: &mut Vec<(usize, f64)>) {
+        for (moment, coefficient) in form {
+            let variable = self.variable(group, *moment);
+            let value = coefficient * self.factor[*moment];
+            match into.iter_mut().find(|(known, _)| *known == variable) {
+                Some((_, sum)) => *sum += value,
+                None => into.push((variable, value)),
+            }
+        }
+    }
+}
+
+/// `⟨R_x M_{b|y}⟩` as a form, for every outcome.
+fn probability(moments: &mut Moments, geometry: Geometry, setting: Setting, outcome: usize) -> Result<Form, WordError> {
+    let (state, y) = (Letter::State(setting.x as u8), setting.y as u8);
+    let mut form = Form::new();
+    let last = geometry.outcomes - 1;
+    let mut add = |letters: &[Letter], sign: f64| -> Result<(), WordError> {
+        form.extend(moments.trace(letters)?.into_iter().map(|(moment, c)| (moment, sign * c as f64)));
+        Ok(())
+    };
+    if outcome < last {
+        add(&[state, Letter::Outcome { b: outcome as u8, y }], 1.0)?;
+    } else {
+        add(&[state], 1.0)?;
+        for b in 0..last as u8 {
+            add(&[state, Letter::Outcome { b, y }], -1.0)?;
+        }
+    }
+    Ok(form)
+}
+
+/// What one group maximises under a claim.
+fn objective(moments: &mut Moments, geometry: Geometry, claim: &Claim, group: usize) -> Result<Form, WordError> {
+    match claim {
+        Claim::Guess { target } => probability(moments, geometry, *target, group),
+        Claim::Score { coefficients } => {
+            let mut form = Form::new();
+            for setting in geometry.settings() {
+                for (b, coefficient) in coefficients[setting.x][setting.y].iter().enumerate() {
+                    let weight = *coefficient as f64;
+                    form.extend(probability(moments, geometry, setting, b)?.into_iter().map(|(moment, c)| (moment, weight * c)));
+                }
+            }
+            Ok(form)
+        }
+        Claim::Contradiction => Ok(Form::new()),
+    }
+}
+
+/// Scale of each element of the bases: one over its norm up to a constant, with `N R_x` of norm `√ε_x`.
+fn scales(moments: &Moments, leakage: &[f64]) -> Vec<Vec<f64>> {
+    let outside = |letters: &[Letter]| {
+        let states = letters.iter().find_map(|letter| match letter {
+            Letter::State(x) => leakage.get(usize::from(*x)).copied(),
+            _ => None,
+        });
+        if letters.contains(&Letter::Outside) { states.unwrap_or(1.0).clamp(1e-8, 1.0).sqrt() } else { 1.0 }
+    };
+    let scale = |letters: &[Letter]| {
+        let own_adjoint = letters.len() == 1;
+        (if own_adjoint { 0.5 } else { std::f64::consts::FRAC_1_SQRT_2 }) / outside(letters)
+    };
+    moments.bases().iter().map(|basis| basis.monomials.iter().map(|monomial| scale(monomial.letters())).collect()).collect()
+}
+
+/// Writes a question as a programme.
+///
+/// # Errors
+/// A product whose trace is not bounded; the named levels have none.
+pub fn pose(moments: &mut Moments, question: &Question) -> Result<Posed, WordError> {
+    let geometry = moments.algebra().geometry();
+    let groups = question.claim.groups(geometry);
+    let settings: Vec<Setting> = geometry.settings().collect();
+    // All moments that rows mention are numbered before the variables are laid out.
+    let mut probabilities = Vec::new();
+    for setting in &settings {
+        for b in 0..geometry.outcomes {
+            probabilities.push((*setting, b, probability(moments, geometry, *setting, b)?));
+        }
+    }
+    let objectives = (0..groups).map(|e| objective(moments, geometry, &question.claim, e)).collect::<Result<Vec<_>, _>>()?;
+    let mut leakages = Vec::new();
+    for x in 0..geometry.preparations {
+        let form = moments.trace(&[Letter::Outside, Letter::State(x as u8)])?;
+        leakages.push(form.into_iter().map(|(moment, c)| (moment, c as f64)).collect::<Form>());
+    }
+    let layout = Layout::new(moments);
+    let slack_variable = groups * layout.stride;
+    let variables = slack_variable + usize::from(question.slack != Slack::None);
+
+    let mut program = Program { objective: vec![0.0; variables], equalities: vec![], inequalities: vec![], blocks: vec![] };
+    if question.slack == Slack::None {
+        for (group, form) in objectives.iter().enumerate() {
+            let mut terms = Vec::new();
+            layout.place(group, form, &mut terms);
+            for (variable, value) in terms {
+                program.objective[variable] += value;
+            }
+        }
+    } else {
+        program.objective[slack_variable] = -1.0;
+    }
+
+    program.equalities.push(Row { terms: (0..groups).map(|e| (e * layout.stride, 1.0)).collect(), right: 1.0 });
+    let over_all_groups = |form: &Form| {
+        let mut terms = Vec::new();
+        (0..groups).for_each(|group| layout.place(group, form, &mut terms));
+        terms
+    };
+    let mut behaviour_rows = Vec::new();
+    for (setting, b, form) in &probabilities {
+        let Setting { x, y } = *setting;
+        let last = *b + 1 == geometry.outcomes;
+        match question.knowledge {
+            Knowledge::Nothing => {}
+            Knowledge::Exactly(_) if last => {}
+            Knowledge::Exactly(table) => {
+                behaviour_rows.push((*setting, *b));
+                program.equalities.push(Row { terms: over_all_groups(form), right: table[x][y][*b] });
+            }
+            // With two outcomes the second interval is the mirror image of the first.
+            Knowledge::Within(_) if last && geometry.outcomes == 2 => {}
+            Knowledge::Within(table) => {
+                behaviour_rows.push((*setting, *b));
+                let [mut low, mut high] = table[x][y][*b];
+                if geometry.outcomes == 2 {
+                    let [mirror_low, mirror_high] = table[x][y][1];
+                    (low, high) = (low.max(1.0 - mirror_high), high.min(1.0 - mirror_low));
+                }
+                let slack = if question.slack == Slack::Behaviour { vec![(slack_variable, -1.0)] } else { vec![] };
+                let terms = over_all_groups(form);
+                let negated = terms.iter().map(|(variable, value)| (*variable, -value));
+                let below = negated.chain(slack.iter().copied()).collect();
+                let above = terms.iter().copied().chain(slack.iter().copied()).collect();
+                program.inequalities.push(Row { terms: above, right: high });
+                program.inequalities.push(Row { terms: below, right: -low });
+            }
+        }
+    }
+    let mut leakage_rows = Vec::new();
+    for (x, form) in leakages.iter().enumerate().filter(|(_, form)| !form.is_empty()) {
+        let tolerance = question.leakage[x];
+        match (question.slack, question.leakage_holds) {
+            (Slack::Leakage, _) => {
+                leakage_rows.push((None, x));
+                let mut terms = over_all_groups(form);
+                terms.push((slack_variable, -1.0));
+                program.inequalities.push(Row { terms, right: 0.0 });
+            }
+            (_, LeakageReading::OnAverage) => {
+                leakage_rows.push((None, x));
+                program.inequalities.push(Row { terms: over_all_groups(form), right: tolerance });
+            }
+            (_, LeakageReading::EveryEmission) => {
+                for group in 0..groups {
+                    leakage_rows.push((Some(group), x));
+                    let mut terms = vec![(group * layout.stride, -tolerance)];
+                    layout.place(group, form, &mut terms);
+                    program.inequalities.push(Row { terms, right: 0.0 });
+                }
+            }
+        }
+    }
+
+    let leakage_scale: Vec<f64> =
+        if question.slack == Slack::Leakage { vec![1.0; geometry.preparations] } else { question.leakage.to_vec() };
+    let scales = scales(moments, &leakage_scale);
+    for group in 0..groups {
+        for (entries, scale) in moments.blocks().iter().zip(&scales) {
+            let mut terms = Vec::new();
+            for entry in entries {
+                let mut places = Vec::new();
+                let form: Form = entry.terms.iter().map(|(moment, c)| (*moment, *c as f64)).collect();
+                layout.place(group, &form, &mut places);
+                let factor = scale[entry.row] * scale[entry.column];
+                terms.extend(places.into_iter().map(|(variable, value)| Term {
+                    row: entry.row,
+                    column: entry.column,
+                    variable,
+                    coefficient: value * factor,
+                }));
+            }
+            program.blocks.push(Block { side: scale.len(), terms });
+        }
+    }
+    let behaviour_within = matches!(question.knowledge, Knowledge::Within(_));
+    Ok(Posed { program, groups, behaviour_rows, behaviour_within, leakage_rows, scales })
+}

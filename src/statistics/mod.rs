@@ -1,0 +1,4 @@
+//! From counts to frequencies and confidence regions.
+
+pub mod interval;
+pub mod region;

@@ -1,0 +1,135 @@
+//! From a solver's candidate to a witness of exact integers.
+//!
+//! Nothing here has to be right for a bound to be right: the exact check decides. What is done well here makes bounds tight.
+
+use nalgebra::{DMatrix, SymmetricEigen};
+
+use super::{
+    check::{CheckError, CheckedWitness, complete},
+    witness::{FORMAT, Span, Witness},
+};
+use crate::{
+    relaxation::{
+        moments::Moments,
+        question::{Posed, Question, Slack},
+    },
+    scenario::LeakageReading,
+    solver::Candidate,
+};
+
+/// Integers stay below 2⁵³ with room for what is computed from them.
+const INTEGER_BITS: u32 = 51;
+/// Finest unit: `2^-44`.
+const MOST_BITS: u32 = 44;
+
+/// Why a candidate gives no witness.
+#[derive(Debug, Clone, PartialEq, thiserror::Error)]
+pub enum RoundingError {
+    #[error("the solver left nothing usable")]
+    Unusable,
+    #[error(transparent)]
+    Check(#[from] CheckError),
+}
+
+/// Rounds a candidate's multipliers to a witness and confirms it.
+///
+/// # Errors
+/// A candidate with missing or non-finite numbers, or a witness that does not pass the check.
+pub fn witness(moments: &Moments, question: &Question, posed: &Posed, candidate: &Candidate) -> Result<CheckedWitness, RoundingError> {
+    let shapes = candidate.equality_multipliers.len() == posed.program.equalities.len()
+        && candidate.inequality_multipliers.len() == posed.program.inequalities.len()
+        && candidate.block_multipliers.len() == posed.program.blocks.len();
+    if !shapes {
+        return Err(RoundingError::Unusable);
+    }
+    let geometry = moments.algebra().geometry();
+    let mut behaviour = vec![vec![vec![0.0; geometry.outcomes]; geometry.measurements]; geometry.preparations];
+    for (i, (setting, b)) in posed.behaviour_rows.iter().enumerate() {
+        behaviour[setting.x][setting.y][*b] = if posed.behaviour_within {
+            candidate.inequality_multipliers[2 * i] - candidate.inequality_multipliers[2 * i + 1]
+        } else {
+            // The first equality is the normalisation.
+            candidate.equality_multipliers[1 + i]
+        };
+    }
+    let reading = if question.slack == Slack::Leakage { LeakageReading::OnAverage } else { question.leakage_holds };
+    let rows = match reading {
+        LeakageReading::OnAverage => 1,
+        LeakageReading::EveryEmission => posed.groups,
+    };
+    let mut leakage = vec![vec![0.0; geometry.preparations]; rows];
+    let first = if posed.behaviour_within { 2 * posed.behaviour_rows.len() } else { 0 };
+    for ((group, x), multiplier) in posed.leakage_rows.iter().zip(&candidate.inequality_multipliers[first..]) {
+        leakage[group.unwrap_or(0)][*x] = multiplier.max(0.0);
+    }
+    let mut factors = Vec::new();
+    for (index, z) in candidate.block_multipliers.iter().enumerate() {
+        let scale = posed.scales.get(index % posed.scales.len()).ok_or(RoundingError::Unusable)?;
+        factors.push(factor(z, scale)?);
+    }
+
+    let values = behaviour.iter().flatten().flatten().chain(leakage.iter().flatten()).copied();
+    let multiplier_bits = bits_for(values.chain(candidate.equality_multipliers.iter().copied()))?;
+    let factor_bits = bits_for(factors.iter().flat_map(|factor| factor.iter().copied()))?.max(multiplier_bits.div_ceil(2));
+    let multiplier = |value: f64| scaled(value, multiplier_bits);
+    let witness = Witness {
+        format: FORMAT.to_owned(),
+        geometry,
+        exact: moments.algebra().exact().to_vec(),
+        leakage_holds: reading,
+        claim: question.claim.clone(),
+        multiplier_bits,
+        behaviour: behaviour
+            .iter()
+            .map(|table| table.iter().map(|values| values.iter().map(|v| multiplier(*v)).collect()).collect())
+            .collect(),
+        leakage: leakage.iter().map(|row| row.iter().map(|value| multiplier(*value)).collect()).collect(),
+        constants: Vec::new(),
+        factor_bits,
+        bases: moments.bases().iter().map(|basis| Span { parity: basis.parity, monomials: basis.monomials.clone() }).collect(),
+        factors: factors.chunks(posed.scales.len()).map(|group| group.iter().map(|l| lower_rows(l, factor_bits)).collect()).collect(),
+    };
+    Ok(complete(witness)?)
+}
+
+/// Lower triangular `L` with `L Lᵀ` the positive part of the unscaled multiplier.
+fn factor(z: &DMatrix<f64>, scale: &[f64]) -> Result<DMatrix<f64>, RoundingError> {
+    let side = scale.len();
+    if z.shape() != (side, side) || z.iter().any(|value| !value.is_finite()) {
+        return Err(RoundingError::Unusable);
+    }
+    // Eigenvalues are cut off in the solver's scaling, where its errors are uniform.
+    let eigen = SymmetricEigen::try_new(z.clone(), f64::EPSILON, 10_000).ok_or(RoundingError::Unusable)?;
+    let roots = eigen.eigenvalues.map(|value| value.max(0.0).sqrt());
+    let mut root = eigen.eigenvectors * DMatrix::from_diagonal(&roots);
+    for (mut row, factor) in root.row_iter_mut().zip(scale) {
+        row *= *factor;
+    }
+    // root rootᵀ = (QR)ᵀ(QR) = RᵀR with rootᵀ = QR.
+    let mut lower = root.transpose().qr().r().transpose();
+    for mut column in lower.column_iter_mut() {
+        // One sign convention, so that equal multipliers give equal documents.
+        if column.iter().find(|value| **value != 0.0).is_some_and(|value| *value < 0.0) {
+            column.neg_mut();
+        }
+    }
+    Ok(lower)
+}
+
+/// Bits after the binary point such that all values fit.
+fn bits_for(values: impl Iterator<Item = f64>) -> Result<u32, RoundingError> {
+    let largest = values.fold(0.0f64, |largest, value| if value.is_nan() { f64::INFINITY } else { largest.max(value.abs()) });
+    if !largest.is_finite() {
+        return Err(RoundingError::Unusable);
+    }
+    let whole = largest.max(1.0).log2().ceil() as u32;
+    Ok(INTEGER_BITS.saturating_sub(whole).min(MOST_BITS))
+}
+
+fn scaled(value: f64, bits: u32) -> i64 {
+    (value * 2f64.powi(bits as i32)).round() as i64
+}
+
+fn lower_rows(lower: &DMatrix<f64>, bits: u32) -> Vec<Vec<i64>> {
+    (0..lower.nrows()).map(|i| (0..=i).map(|j| scaled(lower[(i, j)], bits)).collect()).collect()
+}
