@@ -132,6 +132,11 @@ impl Draft {
         self.certificate.targets.push(TargetCertificate::without_bound(target, request.rounds_at(target)));
     }
 
+    /// Targets that were added so far.
+    pub(crate) fn targets(&self) -> usize {
+        self.certificate.targets.len()
+    }
+
     /// The verdict follows from the targets.
     pub(crate) fn conclude(mut self) -> Certification {
         let certificate = &mut self.certificate;

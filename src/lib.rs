@@ -14,4 +14,5 @@ pub mod request;
 pub mod scenario;
 pub mod solver;
 pub mod statistics;
+pub mod verify;
 pub mod witness;
