@@ -1,5 +1,9 @@
 //! A request to a numerical solver and what comes back: a candidate, never a proof.
 
+mod clarabel;
+mod lapack;
+mod packing;
+
 use crate::relaxation::program::Program;
 
 /// Limits of one solve. Iterations bound the work, so that the answer does not depend on the speed of the machine;
@@ -45,15 +49,52 @@ pub struct Candidate {
     pub block_multipliers: Vec<nalgebra::DMatrix<f64>>,
 }
 
-/// Solves one programme.
+/// Solves one programme, up to rounding and within the limits. A programme that makes no sense (no variables, an index
+/// out of range, a number that is not finite) or is too large comes back as [`Status::Failed`] without numbers.
+///
+/// For [`Status::Infeasible`] the multipliers are a certificate instead of a solution: they satisfy the equations of
+/// the dual with `c = 0`, and `Σ_i y_i r_i < 0`. For [`Status::Unbounded`] the values are a direction in which the
+/// objective grows for ever. The same programme and iteration limit give the same bits on the same machine.
+///
+/// ```
+/// use bitassay::relaxation::program::{Block, Program, Row, Term};
+/// use bitassay::solver::{Limits, Status, solve};
+///
+/// // The largest v such that the matrix with rows (w, v) and (v, w) is positive semidefinite, where w = 3.
+/// let term = |row, column, variable| Term { row, column, variable, coefficient: 1.0 };
+/// let program = Program {
+///     objective: vec![1.0, 0.0],
+///     equalities: vec![Row { terms: vec![(1, 1.0)], right: 3.0 }],
+///     inequalities: vec![],
+///     blocks: vec![Block { side: 2, terms: vec![term(0, 0, 1), term(1, 0, 0), term(1, 1, 1)] }],
+/// };
+/// let candidate = solve(&program, Limits::default());
+/// assert_eq!(candidate.status, Status::Solved);
+/// assert!((candidate.values[0] - 3.0).abs() < 1e-6);
+/// ```
 pub fn solve(program: &Program, limits: Limits) -> Candidate {
-    let _ = (program, limits);
-    Candidate {
-        status: Status::Failed,
-        iterations: 0,
-        values: vec![],
-        equality_multipliers: vec![],
-        inequality_multipliers: vec![],
-        block_multipliers: vec![],
+    clarabel::solve(program, limits)
+}
+
+/// Numbers that look random and are the same in every run.
+#[cfg(test)]
+mod pseudorandom {
+    /// SplitMix64.
+    pub struct Numbers(u64);
+
+    impl Numbers {
+        pub fn new(seed: u64) -> Self {
+            Self(seed)
+        }
+
+        /// Uniform on [−1, 1).
+        pub fn symmetric(&mut self) -> f64 {
+            self.0 = self.0.wrapping_add(0x9E37_79B9_7F4A_7C15);
+            let mut bits = self.0;
+            bits = (bits ^ (bits >> 30)).wrapping_mul(0xBF58_476D_1CE4_E5B9);
+            bits = (bits ^ (bits >> 27)).wrapping_mul(0x94D0_49BB_1331_11EB);
+            bits ^= bits >> 31;
+            (bits >> 11) as f64 / (1_u64 << 52) as f64 - 1.0
+        }
     }
 }
