@@ -44,6 +44,10 @@ pub enum Answer {
     Unverified,
 }
 
+/// A solve that did not end within the solver's tolerances is good enough all the same if rounding its witness costs no more than this
+/// in guessing probability; the bound is what the exact check says in any case.
+const GOOD_ENOUGH: f64 = 2e-6;
+
 /// Upper bound on the guessing probability of a target of the scenario, for every model whose behaviour lies in the place.
 ///
 /// Starts at `level` and falls to coarser ones where a solve does not end well; the least of the bounds that were checked is
@@ -67,7 +71,7 @@ pub fn guessing_probability(scenario: &Scenario, target: Setting, place: Place, 
         }
         let improves = |found: &Found| best.as_ref().is_none_or(|best| found.bound.exact() < best.bound.exact());
         best = found.filter(improves).or(best);
-        if status == Status::Solved && best.is_some() {
+        if best.as_ref().is_some_and(|best| status == Status::Solved || best.witness.rounding_cost() <= GOOD_ENOUGH) {
             break;
         }
     }

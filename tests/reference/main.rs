@@ -1,0 +1,4 @@
+//! Values from outside: published, handbook, derived by hand, or reached by explicit strategies. The source stands beside each.
+
+mod codes;
+mod guessing;
