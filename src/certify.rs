@@ -8,7 +8,7 @@ use crate::{
     counts::Table,
     entropy::extraction::{extractable, hashing_cost, min_entropy, min_entropy_per_round, publication_cost},
     exact::round_down,
-    relaxation::{cost::choose, level::Level},
+    relaxation::level::Level,
     request::{Data, LostTreatment, Request, RoundModel},
     scenario::{LeakageReading, Setting},
     solver::Limits,
@@ -29,10 +29,9 @@ pub struct Certification {
 /// Certifies one request. Never fails: what cannot be certified is refused, with the reason in the certificate.
 pub fn certify(request: &Request) -> Certification {
     let evidence = evidence(request);
-    let level = choose(request.level, request.scenario());
     let mut draft = Draft::new(request, &evidence);
     for target in request.scenario().targets() {
-        match guessing_probability(request.scenario(), *target, evidence.place(), level, Limits::default()) {
+        match guessing_probability(request.scenario(), *target, evidence.place(), request.start, Limits::default()) {
             Answer::Outside(contradiction) => {
                 let least = contradiction.least_leakage.as_ref().map(|(least, witness)| (least, witness));
                 return draft.outside(&contradiction.found.witness, least);

@@ -5,7 +5,10 @@ use serde::{Deserialize, Serialize};
 use crate::{
     counts::{Behaviour, Counts, Table},
     fault::Fault,
-    relaxation::level::LevelChoice,
+    relaxation::{
+        cost::choose,
+        level::{Level, LevelChoice},
+    },
     scenario::{Scenario, ScenarioDocument, Setting},
 };
 
@@ -100,6 +103,8 @@ pub struct Request {
     pub(crate) rounds: RoundModel,
     pub(crate) failure: Failure,
     pub(crate) level: LevelChoice,
+    /// The level that the choice comes to.
+    pub(crate) start: Level,
     pub(crate) lost_rounds: Option<LostRounds>,
 }
 
@@ -110,6 +115,8 @@ impl TryFrom<RequestDocument> for Request {
         let RequestDocument { scenario, counts, behaviour, rounds, failure, level, lost_rounds } = document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
+        let culprit = if level == LevelChoice::Auto { "/scenario" } else { "/level" };
+        let start = choose(level, &scenario).map_err(|fault| fault.under(culprit))?;
         if rounds == RoundModel::Memory {
             return Err(Fault::new("/rounds", "rounds with memory need a commitment made before the data; this version has none"));
         }
@@ -133,7 +140,7 @@ impl TryFrom<RequestDocument> for Request {
             (Some(_), Some(_)) => return Err(Fault::new("/behaviour", "give counts or a behaviour, not both")),
             (None, None) => return Err(Fault::new("/counts", "counts are missing")),
         };
-        Ok(Self { scenario, data, rounds, failure, level, lost_rounds })
+        Ok(Self { scenario, data, rounds, failure, level, start, lost_rounds })
     }
 }
 

@@ -22,7 +22,7 @@ use num_rational::BigRational;
 use num_traits::{One, Signed, Zero};
 use std::collections::BTreeMap;
 
-use super::witness::{Claim, FORMAT, Witness};
+use super::witness::{Claim, Constant, FORMAT, Witness};
 use crate::{
     counts::Table,
     exact::{decimal, dyadic, round_up},
@@ -97,13 +97,13 @@ pub enum Place<'a> {
 /// The first reason not to accept it.
 pub fn check(witness: &Witness) -> Result<CheckedWitness, CheckError> {
     let checked = complete(witness.clone())?;
-    if checked.witness.constants != witness.constants {
+    if checked.witness != *witness {
         return Err(CheckError::Constants);
     }
     Ok(checked)
 }
 
-/// Computes the constants of a witness from the rest of it, replacing whatever stood there, and confirms it.
+/// Computes the constants and remainders of a witness from the rest of it, replacing whatever stood there, and confirms it.
 ///
 /// # Errors
 /// The first reason not to accept it.
@@ -114,20 +114,17 @@ pub fn complete(mut witness: Witness) -> Result<CheckedWitness, CheckError> {
         algebra.check_letters(monomial)?;
     }
     let grams = gram_matrices(&algebra, &witness)?;
-    let (mut constants, mut rounding_cost) = (Vec::new(), 0.0f64);
+    let (mut constants, mut remainders) = (Vec::new(), Vec::new());
     for group in 0..witness.claim.groups(witness.geometry) {
         let remainder = remainder(&algebra, &witness, &grams, group)?;
         let (constant, paid) = constant(&remainder, witness.geometry.carrier_dimension)?;
-        // From 2^(2f) to 2^m, rounded up.
-        let shift = 2 * witness.factor_bits - witness.multiplier_bits;
-        let rounded = constant.checked_add((1i128 << shift) - 1).ok_or(CheckError::Range)? >> shift;
-        constants.push(i64::try_from(rounded).map_err(|_| CheckError::Range)?);
-        rounding_cost = rounding_cost.max(paid as f64 / 2f64.powi(2 * witness.factor_bits as i32));
+        constants.push(Constant(constant));
+        remainders.push(Constant(paid));
     }
-    if constants.iter().any(|constant| constant.abs() >= MAX_INTEGER) {
-        return Err(CheckError::Range);
-    }
+    let largest = remainders.iter().map(|remainder| remainder.0).max().unwrap_or(0);
+    let rounding_cost = largest as f64 / 2f64.powi(2 * witness.factor_bits as i32);
     witness.constants = constants;
+    witness.remainders = remainders;
     let digest = witness.digest();
     Ok(CheckedWitness { witness, digest, rounding_cost })
 }
@@ -166,6 +163,9 @@ fn check_shape(witness: &Witness) -> Result<(), CheckError> {
     }
     if witness.leakage.iter().flatten().any(|multiplier| *multiplier < 0) {
         return Err(CheckError::NegativeMultiplier);
+    }
+    if witness.leakage.iter().any(|row| row.iter().zip(&witness.exact).any(|(multiplier, exact)| *exact && *multiplier != 0)) {
+        return malformed("a leakage that is exactly zero has no multiplier");
     }
     if witness.multiplier_bits > 52 || witness.factor_bits > 52 || 2 * witness.factor_bits < witness.multiplier_bits {
         return malformed("bits are out of range");
@@ -336,7 +336,7 @@ impl CheckedWitness {
             let multipliers = self.witness.leakage.get(group).or(self.witness.leakage.first());
             let products =
                 multipliers.into_iter().flatten().zip(leakage).map(|(multiplier, epsilon)| self.unit(*multiplier) * decimal(*epsilon));
-            self.unit(*constant) + products.sum::<BigRational>()
+            self.constant(*constant) + products.sum::<BigRational>()
         });
         let constant = constants.max().ok_or(CheckError::Range)?;
         Ok(CheckedBound { value: constant + self.worst_behaviour(place)? })
@@ -352,7 +352,7 @@ impl CheckedWitness {
         if self.witness.claim != Claim::Contradiction || !on_average || self.witness.exact.contains(&true) {
             return Err(CheckError::Inapplicable("it is not a contradiction for leaking carriers".into()));
         }
-        let constants = self.witness.constants.iter().map(|constant| self.unit(*constant));
+        let constants = self.witness.constants.iter().map(|constant| self.constant(*constant));
         let value = constants.max().ok_or(CheckError::Range)? + self.worst_behaviour(place)?;
         let slope: BigRational = self.witness.leakage.iter().flatten().map(|multiplier| self.unit(*multiplier)).sum();
         Ok(slope.is_positive().then(|| -value / slope))
@@ -360,6 +360,10 @@ impl CheckedWitness {
 
     fn unit(&self, integer: i64) -> BigRational {
         dyadic(integer, self.witness.multiplier_bits)
+    }
+
+    fn constant(&self, constant: Constant) -> BigRational {
+        dyadic(constant.0, 2 * self.witness.factor_bits)
     }
 
     fn applies(&self, leakage: &[f64], leakage_holds: LeakageReading) -> Result<(), CheckError> {

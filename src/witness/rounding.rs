@@ -84,8 +84,9 @@ pub fn witness(moments: &Moments, question: &Question, posed: &Posed, candidate:
             .map(|table| table.iter().map(|values| values.iter().map(|v| multiplier(*v)).collect()).collect())
             .collect(),
         leakage: leakage.iter().map(|row| row.iter().map(|value| multiplier(*value)).collect()).collect(),
-        constants: Vec::new(),
         factor_bits,
+        constants: Vec::new(),
+        remainders: Vec::new(),
         bases: moments.bases().iter().map(|basis| Span { parity: basis.parity, monomials: basis.monomials.clone() }).collect(),
         factors: factors.chunks(posed.scales.len()).map(|group| group.iter().map(|l| lower_rows(l, factor_bits)).collect()).collect(),
     };

@@ -1,7 +1,7 @@
 //! The witness document: exact integers that prove an affine bound for every behaviour and every leakage.
 //!
-//! Read with `2^m` (`m = multiplier_bits`) under the multipliers and constants and `2^f` (`f = factor_bits`) under the
-//! factors, a witness states, for every model of its geometry with behaviour `p` and leakage `ε`,
+//! Read with `2^m` (`m = multiplier_bits`) under the multipliers, `2^f` (`f = factor_bits`) under the factors and `4^f` under the
+//! constants, a witness states, for every model of its geometry with behaviour `p` and leakage `ε`,
 //!
 //! ```text
 //! Σ_e c_e  ≤  max_e (κ_e + Σ_x μ^e_x ε_x) + Σ_{x,y,b} ν_{xyb} p(b|x,y),      μ ≥ 0,
@@ -66,7 +66,26 @@ pub struct Span {
     pub monomials: Vec<Monomial>,
 }
 
-/// A self-contained document of exact integers, each below 2⁵³ in size so that any JSON reader keeps it.
+/// An integer written as a decimal string.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, PartialOrd, Ord)]
+pub struct Constant(pub i128);
+
+impl Serialize for Constant {
+    fn serialize<S: Serializer>(&self, serializer: S) -> Result<S::Ok, S::Error> {
+        serializer.collect_str(&self.0)
+    }
+}
+
+impl<'de> Deserialize<'de> for Constant {
+    fn deserialize<D: Deserializer<'de>>(deserializer: D) -> Result<Self, D::Error> {
+        let text = String::deserialize(deserializer)?;
+        let integer: i128 = text.parse().map_err(|_| de::Error::custom("an integer written as a string"))?;
+        // One spelling per number, so that equal documents have equal digests.
+        if integer.to_string() == text { Ok(Self(integer)) } else { Err(de::Error::custom("an integer in its shortest form")) }
+    }
+}
+
+/// A self-contained document of exact integers; those written as numbers stay below 2⁵³ in size, so that any JSON reader keeps them.
 #[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct Witness {
@@ -82,9 +101,12 @@ pub struct Witness {
     pub behaviour: Table<i64>,
     /// `μ ≥ 0`: one row `[x]` on average, one row per group for every emission.
     pub leakage: Vec<Vec<i64>>,
-    /// `κ`, one per group, rounded up.
-    pub constants: Vec<i64>,
     pub factor_bits: u32,
+    /// `κ · 4^f`, one per group, exactly what follows from the rest of the document. Written as decimal strings, since they exceed
+    /// what every JSON reader keeps.
+    pub constants: Vec<Constant>,
+    /// The part of each constant that pays for words which did not cancel.
+    pub remainders: Vec<Constant>,
     pub bases: Vec<Span>,
     /// `[group][basis][row]`, row i holding the entries `L_i0 … L_ii`.
     pub factors: Vec<Vec<Vec<Vec<i64>>>>,

@@ -1,4 +1,8 @@
 //! Values from outside: published, handbook, derived by hand, or reached by explicit strategies. The source stands beside each.
 
 mod codes;
+mod extraction;
 mod guessing;
+mod intervals;
+
+mod scores;

@@ -1,0 +1,6 @@
+//! What must hold whatever the numbers are.
+
+mod monotone;
+mod relabelling;
+mod rig;
+mod witnesses;
