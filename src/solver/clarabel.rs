@@ -24,9 +24,10 @@ use crate::relaxation::program::{Program, Row};
 const TOLERANCE: f64 = 1e-10;
 
 /// What the solver adds to the diagonal of its linear systems before it factorises them, and takes back by iterative
-/// refinement. Its default of 1e-8 is too little for blocks that are singular at every feasible point, which moment
-/// matrices often are: residuals then stall at 1e-6 relative, with this value at 1e-9. It costs refinement steps only.
-const REGULARISATION: f64 = 1e-5;
+/// refinement. Its default of 1e-8 is too little for moment matrices, which often have no interior at the optimum: on noisy
+/// codes what stationarity misses, summed over the words, stalls at 1e-4, with this value below 1e-7. Ten times more costs
+/// a digit again.
+const REGULARISATION: f64 = 1e-6;
 
 /// The most numbers that the dense scalings of all blocks may take together, `Σ (side (side + 1) / 2)²`: 0.8 GB, and
 /// the factors of the linear system take more than that again. Beyond it a solve could end the process for lack of
@@ -207,9 +208,6 @@ fn settings(limits: Limits) -> DefaultSettings<f64> {
         iterative_refinement_max_iter: 50,
         iterative_refinement_stop_ratio: 1.5,
         direct_solve_method: "faer".into(),
-        // Far above the default: moment problems have no interior at the optimum, and the refinement steps remove what this adds.
-        // Measured on noisy codes: what stationarity misses, summed over the words, falls from 1e-4 to below 1e-7.
-        static_regularization_constant: 1e-6,
         // Rows and blocks have to come back as they went in, for the multipliers to fit the programme.
         presolve_enable: false,
         chordal_decomposition_enable: false,
