@@ -430,8 +430,9 @@ mod tests {
             let candidate = solved(&program);
             assert!(matches!(candidate.status, Status::Solved | Status::Inaccurate));
             let size = program.objective.iter().fold(1.0_f64, |size, c| size.max(c.abs()));
+            // Rounding ends these solves early, so the multipliers are good to a digit less than those of regular programmes.
             for (sum, c) in dual_objective(&program, &candidate).iter().zip(&program.objective) {
-                assert!((sum - c).abs() < 1e-8 * size, "dual equation off by {:e}", sum - c);
+                assert!((sum - c).abs() < 1e-7 * size, "dual equation off by {:e}", sum - c);
             }
             let expected = bound(&regular, &solved(&regular));
             assert!((bound(&program, &candidate) - expected).abs() < 1e-8 * expected.abs());
