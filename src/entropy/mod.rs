@@ -2,3 +2,4 @@
 
 pub mod extraction;
 pub mod logarithm;
+pub mod power;

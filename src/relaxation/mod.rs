@@ -1,5 +1,6 @@
 //! The semidefinite relaxation: words, monomial levels, moment matrices and the programme made of them.
 
+pub mod cells;
 pub mod cost;
 pub mod level;
 pub mod moments;

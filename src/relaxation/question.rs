@@ -5,13 +5,17 @@
 //! behaviour `p(b|x,y) = Σ_e ⟨R_x M_{b|y}⟩_e` and how the leakage `⟨N R_x⟩` is limited. The last outcome is
 //! `R_x − Σ_b R_x M_{b|y}`.
 
+use nalgebra::{DMatrix, DVector};
+
 use super::{
+    cells::{Cell, cells},
     moments::Moments,
     program::{Block, Program, Row, Term},
     word::{Letter, WordError},
 };
 use crate::{
     counts::Table,
+    entropy::power::power_entropy_down,
     scenario::{Geometry, LeakageReading, Setting},
     witness::witness::Claim,
 };
@@ -58,6 +62,10 @@ pub struct Posed {
     pub behaviour_within: bool,
     /// The group (`None` for a sum over all) and preparation of each leakage row, after the behaviour inequalities.
     pub leakage_rows: Vec<(Option<usize>, usize)>,
+    /// The first of the rows that keep each group inside its cell, one per vertex: minus its barycentric coordinate is at most zero.
+    pub facet_rows: usize,
+    /// Variables of one group; the first of them is its weight `q`.
+    pub stride: usize,
     /// Factors by which the elements of each basis were scaled; a multiplier of the unscaled block is `s_i s_j Z_ij`.
     pub scales: Vec<Vec<f64>>,
 }
@@ -131,7 +139,7 @@ fn probability(moments: &mut Moments, geometry: Geometry, setting: Setting, outc
 }
 
 /// What one group maximises under a claim.
-fn objective(moments: &mut Moments, geometry: Geometry, claim: &Claim, group: usize) -> Result<Form, WordError> {
+fn objective(moments: &mut Moments, geometry: Geometry, claim: &Claim, shapes: &[Shape], group: usize) -> Result<Form, WordError> {
     match claim {
         Claim::Guess { target } => probability(moments, geometry, *target, group),
         Claim::Score { coefficients } => {
@@ -144,7 +152,69 @@ fn objective(moments: &mut Moments, geometry: Geometry, claim: &Claim, group: us
             }
             Ok(form)
         }
+        // Minus the chord through the values of η_β at the vertices of the cell.
+        Claim::Power { target, power, .. } => {
+            let Some(cell) = shapes.get(group) else { return Ok(Form::new()) };
+            let values = cell.values(*power);
+            combination(moments, geometry, *target, &cell.affine_through(&values).map(|l| -l))
+        }
         Claim::Contradiction => Ok(Form::new()),
+    }
+}
+
+/// `Σ_b weights_b ⟨R_x M_{b|y}⟩` as a form.
+fn combination(moments: &mut Moments, geometry: Geometry, setting: Setting, weights: &DVector<f64>) -> Result<Form, WordError> {
+    let mut form = Form::new();
+    for (b, weight) in weights.iter().enumerate() {
+        form.extend(probability(moments, geometry, setting, b)?.into_iter().map(|(moment, c)| (moment, weight * c)));
+    }
+    Ok(form)
+}
+
+/// A cell in approximate numbers.
+#[derive(Debug, Clone)]
+pub struct Shape {
+    /// Vertices as columns.
+    vertices: DMatrix<f64>,
+    /// Its inverse: row j is the barycentric coordinate of vertex j as a linear form of the distribution.
+    pub barycentric: DMatrix<f64>,
+}
+
+impl Shape {
+    /// The cells of a claim; none for claims without cells.
+    pub fn of(claim: &Claim, outcomes: usize) -> Vec<Self> {
+        let Claim::Power { cuts, .. } = claim else { return Vec::new() };
+        let shape = |cell: &Cell| {
+            let vertices = cell.matrix();
+            let barycentric = vertices.clone().try_inverse().unwrap_or_else(|| DMatrix::zeros(outcomes, outcomes));
+            Self { vertices, barycentric }
+        };
+        cells(outcomes, cuts).unwrap_or_default().iter().map(shape).collect()
+    }
+
+    /// `η_β` at the vertices.
+    pub fn values(&self, power: u32) -> DVector<f64> {
+        let value = |j: usize| power_entropy_down(self.vertices.column(j).as_slice(), power);
+        DVector::from_fn(self.vertices.ncols(), |j, _| value(j))
+    }
+
+    /// Coefficients `ℓ_b` of the linear form that takes these values at the vertices.
+    pub fn affine_through(&self, values: &DVector<f64>) -> DVector<f64> {
+        self.barycentric.transpose() * values
+    }
+
+    /// The distribution with these barycentric coordinates.
+    pub fn distribution(&self, coordinates: &DVector<f64>) -> DVector<f64> {
+        &self.vertices * coordinates
+    }
+
+    pub fn vertex(&self, j: usize) -> DVector<f64> {
+        self.vertices.column(j).into_owned()
+    }
+
+    /// `η_β` of the distribution with these barycentric coordinates.
+    pub fn value_at(&self, coordinates: &DVector<f64>, power: u32) -> f64 {
+        power_entropy_down((&self.vertices * coordinates).as_slice(), power)
     }
 }
 
@@ -170,7 +240,16 @@ pub fn pose(moments: &mut Moments, question: &Question) -> Result<Posed, WordErr
             probabilities.push((*setting, b, probability(moments, geometry, *setting, b)?));
         }
     }
-    let objectives = (0..groups).map(|e| objective(moments, geometry, &question.claim, e)).collect::<Result<Vec<_>, _>>()?;
+    let shapes = Shape::of(&question.claim, geometry.outcomes);
+    let mut facets = Vec::new();
+    if let Claim::Power { target, .. } = &question.claim {
+        for (group, shape) in shapes.iter().enumerate() {
+            for row in shape.barycentric.row_iter() {
+                facets.push((group, combination(moments, geometry, *target, &-row.transpose())?));
+            }
+        }
+    }
+    let objectives = (0..groups).map(|e| objective(moments, geometry, &question.claim, &shapes, e)).collect::<Result<Vec<_>, _>>()?;
     let mut leakages = Vec::new();
     for x in 0..geometry.preparations {
         let form = moments.trace(&[Letter::Outside, Letter::State(x as u8)])?;
@@ -254,6 +333,12 @@ pub fn pose(moments: &mut Moments, question: &Question) -> Result<Posed, WordErr
         }
     }
 
+    let facet_rows = program.inequalities.len();
+    for (group, form) in &facets {
+        let mut terms = Vec::new();
+        layout.place(*group, form, &mut terms);
+        program.inequalities.push(Row { terms, right: 0.0 });
+    }
     let scales = scales(moments);
     for group in 0..groups {
         for (entries, scale) in moments.blocks().iter().zip(&scales) {
@@ -274,5 +359,5 @@ pub fn pose(moments: &mut Moments, question: &Question) -> Result<Posed, WordErr
         }
     }
     let behaviour_within = matches!(question.knowledge, Knowledge::Within(_));
-    Ok(Posed { program, groups, behaviour_rows, behaviour_within, leakage_rows, scales })
+    Ok(Posed { program, groups, behaviour_rows, behaviour_within, leakage_rows, facet_rows, stride: layout.stride, scales })
 }

@@ -19,14 +19,16 @@
 
 use num_bigint::BigInt;
 use num_rational::BigRational;
-use num_traits::{One, Signed, Zero};
+use num_traits::{One, Signed, ToPrimitive, Zero};
 use std::collections::BTreeMap;
 
 use super::witness::{Claim, Constant, FORMAT, Witness};
 use crate::{
     counts::Table,
+    entropy::power::{POWER_BITS, power_entropy_down},
     exact::{decimal, dyadic, round_up},
     relaxation::{
+        cells::{MAX_CELLS, cells},
         parity::gram,
         word::{Algebra, Letter, Word, WordError},
     },
@@ -46,6 +48,8 @@ pub enum CheckError {
     NegativeMultiplier,
     #[error("an integer of the witness is out of range")]
     Range,
+    #[error("a chord of the witness is above the entropy it stands for")]
+    Chord,
     #[error("the constants of the witness do not follow from its factors and multipliers")]
     Constants,
     #[error("the witness does not apply: {0}")]
@@ -113,6 +117,7 @@ pub fn complete(mut witness: Witness) -> Result<CheckedWitness, CheckError> {
     for monomial in witness.bases.iter().flat_map(|span| &span.monomials) {
         algebra.check_letters(monomial)?;
     }
+    check_chords(&witness)?;
     let grams = gram_matrices(&algebra, &witness)?;
     let (mut constants, mut remainders) = (Vec::new(), Vec::new());
     for group in 0..witness.claim.groups(witness.geometry) {
@@ -150,8 +155,11 @@ fn check_shape(witness: &Witness) -> Result<(), CheckError> {
     }
     match &witness.claim {
         Claim::Guess { target } if target.x >= preparations || target.y >= measurements => return malformed("there is no such target"),
+        Claim::Power { target, .. } if target.x >= preparations || target.y >= measurements => return malformed("there is no such target"),
+        Claim::Power { power, .. } if *power == 0 || *power > 1 << POWER_BITS => return malformed("the power is not in (0, 1]"),
+        Claim::Power { cuts, .. } if cuts.len() > 2 * MAX_CELLS => return malformed("there are too many cells"),
         Claim::Score { coefficients } if !fits(coefficients) => return malformed("\"coefficients\" do not have the shape of the geometry"),
-        Claim::Guess { .. } | Claim::Score { .. } | Claim::Contradiction => {}
+        Claim::Guess { .. } | Claim::Power { .. } | Claim::Score { .. } | Claim::Contradiction => {}
     }
     let groups = witness.claim.groups(geometry);
     let rows = match witness.leakage_holds {
@@ -181,13 +189,38 @@ fn check_shape(witness: &Witness) -> Result<(), CheckError> {
         return malformed("\"factors\" do not have the shape of the groups and bases");
     }
     let integers = witness.behaviour.iter().flatten().flatten().chain(witness.leakage.iter().flatten());
-    let integers = integers.chain(witness.factors.iter().flatten().flatten().flatten());
+    let integers = integers.chain(witness.factors.iter().flatten().flatten().flatten()).chain(witness.chords.iter().flatten());
     let scores = match &witness.claim {
         Claim::Score { coefficients } => coefficients.as_slice(),
-        Claim::Guess { .. } | Claim::Contradiction => &[],
+        Claim::Guess { .. } | Claim::Power { .. } | Claim::Contradiction => &[],
     };
     if integers.chain(scores.iter().flatten().flatten()).any(|integer| integer.unsigned_abs() >= MAX_INTEGER.unsigned_abs()) {
         return Err(CheckError::Range);
+    }
+    Ok(())
+}
+
+/// Every chord of a power claim lies below `η_β` at the vertices of its cell. `η_β` is concave and the chord affine, so it lies below
+/// throughout the cell; and the cells cover every distribution.
+fn check_chords(witness: &Witness) -> Result<(), CheckError> {
+    let malformed = |what: &str| Err(CheckError::Malformed(what.to_owned()));
+    let Claim::Power { power, cuts, .. } = &witness.claim else {
+        return if witness.chords.is_empty() { Ok(()) } else { malformed("only a power claim has chords") };
+    };
+    let outcomes = witness.geometry.outcomes;
+    let Some(cells) = cells(outcomes, cuts) else { return malformed("the cuts do not make a cover") };
+    if witness.chords.len() != cells.len() || witness.chords.iter().any(|chord| chord.len() != outcomes) {
+        return malformed("\"chords\" do not have the shape of the cover");
+    }
+    for (cell, chord) in cells.iter().zip(&witness.chords) {
+        for vertex in &cell.vertices {
+            let probabilities: Vec<f64> = vertex.iter().map(|p| p.to_f64().unwrap_or(0.0)).collect();
+            let value: BigRational = chord.iter().zip(vertex).map(|(l, p)| dyadic(*l, witness.multiplier_bits) * p).sum();
+            let entropy = power_entropy_down(&probabilities, *power);
+            if BigRational::from_float(entropy).is_none_or(|entropy| value > entropy) {
+                return Err(CheckError::Chord);
+            }
+        }
     }
     Ok(())
 }
@@ -276,6 +309,11 @@ fn remainder(algebra: &Algebra, witness: &Witness, grams: &Grams, group: usize) 
     }
     match &witness.claim {
         Claim::Guess { target } => add_probability(*target, group, -one)?,
+        Claim::Power { target, .. } => {
+            for (b, chord) in witness.chords.get(group).into_iter().flatten().enumerate() {
+                add_probability(*target, b, i128::from(*chord) * multiplier_unit)?;
+            }
+        }
         Claim::Score { coefficients } => {
             for setting in geometry.settings() {
                 for (b, coefficient) in coefficients[setting.x][setting.y].iter().enumerate() {

@@ -2,16 +2,21 @@
 //!
 //! Nothing here has to be right for a bound to be right: the exact check decides. What is done well here makes bounds tight.
 
-use nalgebra::{DMatrix, SymmetricEigen};
+use nalgebra::{DMatrix, DVector, SymmetricEigen};
+use num_rational::BigRational;
+use num_traits::ToPrimitive;
 
 use super::{
     check::{CheckError, CheckedWitness, complete},
-    witness::{FORMAT, Span, Witness},
+    witness::{Claim, FORMAT, Span, Witness},
 };
 use crate::{
+    entropy::power::power_entropy_down,
+    exact::dyadic,
     relaxation::{
+        cells::{Cell, cells},
         moments::Moments,
-        question::{Posed, Question, Slack},
+        question::{Posed, Question, Shape, Slack},
     },
     scenario::LeakageReading,
     solver::Candidate,
@@ -68,7 +73,8 @@ pub fn witness(moments: &Moments, question: &Question, posed: &Posed, candidate:
         factors.push(factor(z, scale)?);
     }
 
-    let values = behaviour.iter().flatten().flatten().chain(leakage.iter().flatten()).copied();
+    let chords = chords(question, posed, candidate, geometry.outcomes);
+    let values = behaviour.iter().flatten().flatten().chain(chords.iter().flatten()).chain(leakage.iter().flatten()).copied();
     let multiplier_bits = bits_for(values.chain(candidate.equality_multipliers.iter().copied()))?;
     let factor_bits = bits_for(factors.iter().flat_map(|factor| factor.iter().copied()))?.max(multiplier_bits.div_ceil(2));
     let multiplier = |value: f64| scaled(value, multiplier_bits);
@@ -84,6 +90,7 @@ pub fn witness(moments: &Moments, question: &Question, posed: &Posed, candidate:
             .map(|table| table.iter().map(|values| values.iter().map(|v| multiplier(*v)).collect()).collect())
             .collect(),
         leakage: leakage.iter().map(|row| row.iter().map(|value| multiplier(*value)).collect()).collect(),
+        chords: integer_chords(question, &chords, geometry.outcomes, multiplier_bits),
         factor_bits,
         constants: Vec::new(),
         remainders: Vec::new(),
@@ -91,6 +98,35 @@ pub fn witness(moments: &Moments, question: &Question, posed: &Posed, candidate:
         factors: factors.chunks(posed.scales.len()).map(|group| group.iter().map(|l| lower_rows(l, factor_bits)).collect()).collect(),
     };
     Ok(complete(witness)?)
+}
+
+/// The affine function of each cell: the chord through `η_β − τ_j` at the vertices, with `τ` the multipliers of the cell's facets.
+fn chords(question: &Question, posed: &Posed, candidate: &Candidate, outcomes: usize) -> Vec<Vec<f64>> {
+    let Claim::Power { power, .. } = &question.claim else { return Vec::new() };
+    let multipliers = candidate.inequality_multipliers.get(posed.facet_rows..).unwrap_or_default();
+    let shapes = Shape::of(&question.claim, outcomes);
+    let chord = |(shape, facets): (&Shape, &[f64])| {
+        let values = shape.values(*power) - DVector::from_iterator(outcomes, facets.iter().map(|tau| tau.max(0.0)));
+        shape.affine_through(&values).iter().copied().collect()
+    };
+    shapes.iter().zip(multipliers.chunks_exact(outcomes)).map(chord).collect()
+}
+
+/// Rounds the chords to integers and lowers each, by equal amounts for all outcomes, until it is nowhere above `η_β`.
+fn integer_chords(question: &Question, chords: &[Vec<f64>], outcomes: usize, bits: u32) -> Vec<Vec<i64>> {
+    let Claim::Power { power, cuts, .. } = &question.claim else { return Vec::new() };
+    let lowered = |(chord, cell): (&Vec<f64>, Cell)| {
+        let integers: Vec<i64> = chord.iter().map(|value| scaled(*value, bits)).collect();
+        let excess = cell.vertices.iter().map(|vertex| {
+            let probabilities: Vec<f64> = vertex.iter().map(|p| p.to_f64().unwrap_or(0.0)).collect();
+            let value: BigRational = integers.iter().zip(vertex).map(|(l, p)| dyadic(*l, bits) * p).sum();
+            let entropy = BigRational::from_float(power_entropy_down(&probabilities, *power)).unwrap_or_default();
+            ((value - entropy) * dyadic(1i64 << bits, 0)).ceil().to_integer().to_i64().unwrap_or(0)
+        });
+        let excess = excess.max().unwrap_or(0).max(0);
+        integers.iter().map(|integer| integer - excess).collect()
+    };
+    chords.iter().zip(cells(outcomes, cuts).unwrap_or_default()).map(lowered).collect()
 }
 
 /// Lower triangular `L` with `L Lᵀ` the positive part of the unscaled multiplier.

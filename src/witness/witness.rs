@@ -17,7 +17,7 @@ use sha2::{Digest, Sha256};
 
 use crate::{
     counts::Table,
-    relaxation::{parity::Parity, word::Monomial},
+    relaxation::{cells::Cut, parity::Parity, word::Monomial},
     scenario::{Geometry, LeakageReading, Setting},
 };
 
@@ -32,6 +32,10 @@ pub enum Claim {
     Guess { target: Setting },
     /// A linear score of the behaviour with integer coefficients `[x][y][b]`. One group.
     Score { coefficients: Table<i64> },
+    /// The mean of `η_β` over the outcomes of the target setting, from below: `−Σ_λ q(λ) η_β` is what is bounded from above. One group per
+    /// cell of a cover of the distributions of the target's outcome; `c_e = −ℓ_e`, an affine function that is nowhere above `η_β` in
+    /// the cell. `power` is `β` in units of `2^-30`.
+    Power { target: Setting, power: u32, cuts: Vec<Option<Cut>> },
     /// Nothing: `c = 0`, one group. A right-hand side below zero proves that no model has this behaviour and leakage.
     Contradiction,
 }
@@ -42,6 +46,7 @@ impl Claim {
         match self {
             Self::Guess { .. } => geometry.outcomes,
             Self::Score { .. } | Self::Contradiction => 1,
+            Self::Power { cuts, .. } => cuts.iter().filter(|cut| cut.is_none()).count(),
         }
     }
 }
@@ -101,6 +106,9 @@ pub struct Witness {
     pub behaviour: Table<i64>,
     /// `μ ≥ 0`: one row `[x]` on average, one row per group for every emission.
     pub leakage: Vec<Vec<i64>>,
+    /// `ℓ` of a power claim, `[cell][b]`, so that `ℓ(p) = Σ_b ℓ_b p_b`; empty for other claims.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub chords: Vec<Vec<i64>>,
     pub factor_bits: u32,
     /// `κ · 4^f`, one per group, exactly what follows from the rest of the document. Written as decimal strings, since they exceed
     /// what every JSON reader keeps.

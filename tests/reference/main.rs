@@ -1,6 +1,7 @@
 //! Values from outside: published, handbook, derived by hand, or reached by explicit strategies. The source stands beside each.
 
 mod codes;
+mod entropies;
 mod extraction;
 mod guessing;
 mod intervals;
