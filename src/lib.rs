@@ -3,16 +3,24 @@
 #![deny(unsafe_code)]
 
 pub mod bound;
+#[cfg(feature = "service")]
+pub mod batch;
 pub mod certificate;
 pub mod certify;
+#[cfg(feature = "service")]
+pub mod clock;
 pub mod counts;
 pub mod entropy;
 pub mod exact;
 pub mod fault;
+#[cfg(feature = "service")]
+pub mod profile;
 pub mod relaxation;
 pub mod request;
 pub mod scenario;
 pub mod solver;
 pub mod statistics;
 pub mod verify;
+#[cfg(feature = "service")]
+pub mod submission;
 pub mod witness;
