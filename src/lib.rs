@@ -14,7 +14,13 @@ pub mod entropy;
 pub mod exact;
 pub mod fault;
 #[cfg(feature = "service")]
+pub mod ledger;
+#[cfg(feature = "service")]
 pub mod profile;
+#[cfg(feature = "service")]
+pub mod record;
+#[cfg(feature = "service")]
+pub mod refusal;
 pub mod relaxation;
 pub mod request;
 pub mod scenario;
