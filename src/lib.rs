@@ -23,7 +23,11 @@ pub mod record;
 pub mod refusal;
 pub mod relaxation;
 pub mod request;
+#[cfg(feature = "service")]
+pub mod rig_yield;
 pub mod scenario;
+#[cfg(feature = "service")]
+pub mod service;
 pub mod solver;
 pub mod statistics;
 pub mod verify;
