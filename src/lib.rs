@@ -14,6 +14,8 @@ pub mod entropy;
 pub mod exact;
 pub mod fault;
 #[cfg(feature = "service")]
+pub mod http;
+#[cfg(feature = "service")]
 pub mod ledger;
 #[cfg(feature = "service")]
 pub mod profile;
