@@ -10,6 +10,7 @@ use crate::{
 };
 
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(rename_all = "kebab-case")]
 pub enum Verdict {
     /// Bits may be extracted.
@@ -22,6 +23,7 @@ pub enum Verdict {
 
 /// Why bits are refused.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(rename_all = "kebab-case")]
 pub enum Reason {
     /// The bound on the guessing probability reaches 1, or finite-size terms eat all bits.
@@ -34,6 +36,7 @@ pub enum Reason {
 
 /// Failure probabilities as recorded.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(deny_unknown_fields)]
 pub struct FailureTotal {
     pub estimation: f64,
@@ -44,6 +47,7 @@ pub struct FailureTotal {
 
 /// The bound of one target setting.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(deny_unknown_fields)]
 pub struct TargetCertificate {
     pub preparation: usize,
@@ -78,6 +82,7 @@ impl TargetCertificate {
 
 /// Proof that the numbers contradict the declaration, and what would explain them.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(deny_unknown_fields)]
 pub struct OutsideModel {
     /// `sha256:` digest of the witness of the contradiction.
@@ -91,15 +96,19 @@ pub struct OutsideModel {
 
 /// The outcome of certifying one request. Everything in it follows from the request alone.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(deny_unknown_fields)]
 pub struct Certificate {
     pub verdict: Verdict,
     pub reason: Option<Reason>,
+    #[cfg_attr(feature = "service", schema(value_type = crate::scenario::ScenarioDocument))]
     pub scenario: Scenario,
     /// Counts as certified, after lost rounds were folded in if that was asked for.
+    #[cfg_attr(feature = "service", schema(value_type = Option<Vec<Vec<Vec<u64>>>>))]
     pub counts: Option<Table<u64>>,
     /// `sha256:` digest of the counts' canonical bytes.
     pub counts_digest: Option<String>,
+    #[cfg_attr(feature = "service", schema(value_type = Option<Vec<Vec<Vec<f64>>>>))]
     pub behaviour: Option<Table<f64>>,
     pub lost_rounds: Option<LostRounds>,
     pub rounds: RoundModel,
@@ -109,6 +118,7 @@ pub struct Certificate {
     /// The level that was asked for.
     pub level: LevelChoice,
     /// Confidence interval `[low, high]` of every probability, `[x][y][b]`; `null` for plug-in figures.
+    #[cfg_attr(feature = "service", schema(value_type = Option<Vec<Vec<Vec<Vec<f64>>>>>))]
     pub region: Option<Table<[f64; 2]>>,
     pub targets: Vec<TargetCertificate>,
     pub certified_bits: u64,

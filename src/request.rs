@@ -14,6 +14,7 @@ use crate::{
 
 /// What is assumed about the sequence of rounds.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(rename_all = "kebab-case")]
 pub enum RoundModel {
     /// Frequencies are taken as probabilities. A diagnostic: no bits are released.
@@ -26,6 +27,7 @@ pub enum RoundModel {
 
 /// Failure probabilities that the poster is willing to accept, each in `[1e-100, 0.5]`.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(deny_unknown_fields)]
 pub struct Failure {
     /// That the confidence region misses the true behaviour.
@@ -55,6 +57,7 @@ impl Failure {
 
 /// Rounds in which no outcome was registered, per setting `[x][y]`, and what the poster asks to be done with them.
 #[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(deny_unknown_fields)]
 pub struct LostRounds {
     pub counts: Vec<Vec<u64>>,
@@ -62,6 +65,7 @@ pub struct LostRounds {
 }
 
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(rename_all = "kebab-case")]
 pub enum LostTreatment {
     /// They are left out, on the explicit assumption that a loss does not depend on the setting or the would-be outcome.

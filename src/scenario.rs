@@ -33,6 +33,7 @@ impl<'de> Deserialize<'de> for Setting {
 
 /// How the leakage tolerance is meant.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Default, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(rename_all = "kebab-case")]
 pub enum LeakageReading {
     /// The mean weight outside the carrier, over everything classical, is at most `ε_x`.
@@ -89,6 +90,7 @@ impl<'de> Deserialize<'de> for LeakageDocument {
 
 /// A scenario as it is written in a document; [`Scenario`] is the validated form.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(deny_unknown_fields)]
 pub struct ScenarioDocument {
     pub preparations: usize,
@@ -98,6 +100,7 @@ pub struct ScenarioDocument {
     pub leakage: LeakageDocument,
     #[serde(default)]
     pub leakage_holds: LeakageReading,
+    #[cfg_attr(feature = "service", schema(value_type = Vec<Vec<usize>>))]
     pub targets: Vec<Setting>,
 }
 

@@ -14,6 +14,7 @@ use super::word::{Algebra, Letter, Monomial};
 
 /// A named set of monomials; each contains the ones before it.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, PartialOrd, Ord, Hash, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(rename_all = "kebab-case")]
 pub enum Level {
     Lean,
@@ -74,6 +75,7 @@ impl Level {
 
 /// The level that is asked for.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Default, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(rename_all = "kebab-case")]
 pub enum LevelChoice {
     /// The sharpest level within the cost budget.

@@ -1,0 +1,36 @@
+//! The command line: one file a command.
+
+mod openapi;
+mod serve;
+
+use std::process::ExitCode;
+
+use clap::{Parser, Subcommand};
+
+/// Certifies randomness from an untrusted prepare-and-measure rig whose carrier is almost d-dimensional.
+///
+/// Exit status: 0 if all went well, 2 for bad usage or bad input, 3 if something was refused or not verified.
+#[derive(Parser)]
+#[command(name = "bitassay", version, max_term_width = 100)]
+pub struct CommandLine {
+    #[command(subcommand)]
+    command: Command,
+}
+
+#[derive(Subcommand)]
+enum Command {
+    Serve(serve::Serve),
+    Openapi(openapi::Openapi),
+}
+
+/// Reads the arguments and runs the command. What goes wrong is told in one line on standard error.
+pub fn run() -> ExitCode {
+    let outcome = match CommandLine::parse().command {
+        Command::Serve(command) => command.run(),
+        Command::Openapi(command) => command.run(),
+    };
+    outcome.unwrap_or_else(|error| {
+        eprintln!("bitassay: {error:#}");
+        ExitCode::from(2)
+    })
+}

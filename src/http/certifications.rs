@@ -1,0 +1,235 @@
+//! `/v1/certifications`: what was certified, and what was refused.
+
+use std::sync::Arc;
+
+use axum::{
+    body::Body,
+    extract::State,
+    http::{Response, StatusCode, header},
+    response::IntoResponse,
+};
+use serde::Serialize;
+use utoipa::{IntoParams, ToSchema};
+
+use super::{
+    negotiation::{Offer, TakesJson, TakesTable},
+    problem::{Problem, ProblemDocument},
+    wire::{CertificationPath, FromParameters, Parameters, Query, cursor, json, link_next, no_certification, page},
+};
+use crate::{
+    certificate::Verdict,
+    clock::Stamp,
+    ledger::{
+        history::{Filter, Page},
+        rows::Recorded,
+    },
+    profile::RigName,
+    record::{Record, Summary},
+    service::Service,
+    witness::witness::Witness,
+};
+
+const CURSOR: &str = "certifications:";
+
+/// One record, byte for byte as it was first answered.
+#[utoipa::path(
+    get, path = "/v1/certifications/{id}", tag = "certifications", operation_id = "get_certification",
+    params(("id" = String, Path, description = "Identifier of the certification.")),
+    responses(
+        (status = 200, description = "The record.", body = Record),
+        (status = 404, description = "No such certification.", body = ProblemDocument, content_type = "application/problem+json"),
+    )
+)]
+pub async fn get(
+    CertificationPath(id): CertificationPath,
+    Query(()): Query<()>,
+    TakesJson: TakesJson,
+    State(service): State<Arc<Service>>,
+) -> Result<Response<Body>, Problem> {
+    let record = service.record(id).await?.ok_or_else(no_certification)?;
+    Ok(json(StatusCode::OK, record))
+}
+
+/// The witnesses that a certification rests on.
+#[derive(Serialize, ToSchema)]
+pub struct Witnesses {
+    /// Identifier of the certification.
+    certification: uuid::Uuid,
+    /// Each witness under its `sha256:` digest; exact integers, enough to check the bound offline.
+    #[schema(value_type = std::collections::BTreeMap<String, Object>)]
+    witnesses: std::collections::BTreeMap<String, Witness>,
+}
+
+/// The witnesses of a certification.
+#[utoipa::path(
+    get, path = "/v1/certifications/{id}/witness", tag = "certifications", operation_id = "get_witness",
+    params(("id" = String, Path, description = "Identifier of the certification.")),
+    responses(
+        (status = 200, description = "The witnesses, by digest.", body = Witnesses),
+        (status = 404, description = "No such certification.", body = ProblemDocument, content_type = "application/problem+json"),
+    )
+)]
+pub async fn witness(
+    CertificationPath(id): CertificationPath,
+    Query(()): Query<()>,
+    TakesJson: TakesJson,
+    State(service): State<Arc<Service>>,
+) -> Result<Response<Body>, Problem> {
+    let found = service.witnesses(id).await?.ok_or_else(no_certification)?;
+    // The documents are texts that were kept as they are, so that their digests still hold.
+    let members: Vec<String> = found.into_iter().map(|(digest, document)| format!("\"{digest}\":{document}")).collect();
+    Ok(json(StatusCode::OK, format!("{{\"certification\":\"{id}\",\"witnesses\":{{{}}}}}", members.join(","))))
+}
+
+#[derive(IntoParams)]
+#[into_params(parameter_in = Query)]
+pub struct HistoryQuery {
+    /// Only this rig's.
+    #[param(value_type = Option<String>)]
+    rig: Option<RigName>,
+    /// Only of this verdict.
+    #[param(value_type = Option<Verdict>)]
+    verdict: Option<Verdict>,
+    /// Only those recorded at this time or later, RFC 3339.
+    #[param(value_type = Option<String>)]
+    since: Option<Stamp>,
+    /// Only those recorded before this time, RFC 3339.
+    #[param(value_type = Option<String>)]
+    until: Option<Stamp>,
+    /// Where the page begins: the `next` of the page before.
+    #[param(value_type = Option<String>)]
+    cursor: Option<u64>,
+    /// Items on the page.
+    #[param(minimum = 1, maximum = 200, default = 50, value_type = Option<u32>)]
+    limit: u32,
+}
+
+impl FromParameters for HistoryQuery {
+    fn from_parameters(parameters: &mut Parameters) -> Result<Self, Problem> {
+        let rig = parameters.text("rig")?.map(RigName::try_from).transpose();
+        let verdict = match parameters.text("verdict")?.as_deref() {
+            None => None,
+            Some("certified") => Some(Verdict::Certified),
+            Some("estimate") => Some(Verdict::Estimate),
+            Some("refused") => Some(Verdict::Refused),
+            Some(_) => return Err(Problem::parameter("verdict", "A verdict is certified, estimate or refused.")),
+        };
+        Ok(Self {
+            rig: rig.map_err(|error| Problem::parameter("rig", error.to_string()))?,
+            verdict,
+            since: parameters.value("since")?,
+            until: parameters.value("until")?,
+            cursor: parameters.cursor(CURSOR)?,
+            limit: parameters.limit()?,
+        })
+    }
+}
+
+impl HistoryQuery {
+    /// Path and query of the page that begins at a cursor.
+    fn target(&self, next: &str) -> String {
+        let mut target = format!("/v1/certifications?limit={}", self.limit);
+        let word = self.verdict.map(|verdict| match verdict {
+            Verdict::Certified => "certified".to_owned(),
+            Verdict::Estimate => "estimate".to_owned(),
+            Verdict::Refused => "refused".to_owned(),
+        });
+        let rest = [
+            ("rig", self.rig.as_ref().map(RigName::to_string)),
+            ("verdict", word),
+            ("since", self.since.map(|time| time.to_string())),
+            ("until", self.until.map(|time| time.to_string())),
+            ("cursor", Some(next.to_owned())),
+        ];
+        // None of these texts has a character that a query would have to escape.
+        for (name, value) in rest {
+            if let Some(value) = value {
+                target.push_str(&format!("&{name}={value}"));
+            }
+        }
+        target
+    }
+}
+
+/// Records, newest first.
+#[derive(Serialize, ToSchema)]
+pub struct HistoryPage {
+    items: Vec<Record>,
+    /// Where the next page begins; `null` at the end.
+    next: Option<String>,
+}
+
+/// The history, newest first. Records that arrive meanwhile do not move the pages that follow.
+#[utoipa::path(
+    get, path = "/v1/certifications", tag = "certifications", operation_id = "list_certifications", params(HistoryQuery),
+    responses(
+        (status = 200, description = "One page. As CSV, one row a record; the `Link` header leads on.", headers(("Link" = String)),
+            content((HistoryPage = "application/json"), (String = "text/csv"))),
+        (status = 400, description = "A parameter is unknown or out of range.", body = ProblemDocument, content_type = "application/problem+json"),
+        (status = 406, description = "The answer comes as JSON or CSV only.", body = ProblemDocument, content_type = "application/problem+json"),
+    )
+)]
+pub async fn list(
+    Query(query): Query<HistoryQuery>,
+    TakesTable(offer): TakesTable,
+    State(service): State<Arc<Service>>,
+) -> Result<Response<Body>, Problem> {
+    let HistoryQuery { rig, verdict, since, until, cursor: before, limit } = &query;
+    let filter = Filter { rig: rig.clone(), verdict: *verdict, since: *since, until: *until, before: *before };
+    let Page { items, more } = service.history(&filter, *limit).await?;
+    let next = items.last().filter(|_| more).map(|last| cursor(CURSOR, last.entry));
+    let link = next.as_deref().map(|next| link_next(&query.target(next)));
+    let vary = [(header::VARY, "Accept")];
+    let body = match offer {
+        Offer::Json => json(StatusCode::OK, page(items.into_iter().map(|item| item.record), next.as_deref())),
+        Offer::Csv => {
+            let table = table(&items).map_err(|error| Problem::internal(error.as_ref()))?;
+            (StatusCode::OK, [(header::CONTENT_TYPE, "text/csv; charset=utf-8; header=present")], table).into_response()
+        }
+    };
+    Ok((link, vary, body).into_response())
+}
+
+const COLUMNS: [&str; 14] = [
+    "id",
+    "rig",
+    "profile_version",
+    "recorded_at",
+    "started_at",
+    "ended_at",
+    "verdict",
+    "reason",
+    "total_rounds",
+    "certified_bits",
+    "bits_per_round",
+    "failure",
+    "counts_digest",
+    "version",
+];
+
+/// Heads of records as CSV, numbers as they stand in the records.
+fn table(items: &[Recorded]) -> Result<Vec<u8>, Box<dyn std::error::Error>> {
+    let mut writer = csv::WriterBuilder::new().terminator(csv::Terminator::CRLF).from_writer(Vec::new());
+    writer.write_record(COLUMNS)?;
+    for item in items {
+        let row: Summary = serde_json::from_str(&item.record)?;
+        let failure = row.failure.map(|failure| failure.total);
+        writer.serialize((
+            row.id,
+            row.rig,
+            row.profile_version,
+            row.recorded_at,
+            row.started_at,
+            row.ended_at,
+            row.verdict,
+            row.reason,
+            row.total_rounds,
+            row.certified_bits,
+            row.bits_per_round,
+            failure,
+            row.counts_digest,
+            row.version,
+        ))?;
+    }
+    Ok(writer.into_inner()?)
+}

@@ -1,0 +1,14 @@
+//! The service over HTTP: extract, one call to the service, respond. Knows no SQL.
+
+mod batches;
+mod certifications;
+mod condition;
+mod health;
+mod negotiation;
+pub mod openapi;
+pub mod problem;
+mod rigs;
+mod router;
+pub mod server;
+mod wire;
+mod yields;

@@ -1,0 +1,64 @@
+//! The interface described to machines: OpenAPI 3.1, generated from the handlers.
+
+use axum::{
+    body::Body,
+    http::{Response, StatusCode},
+};
+use utoipa::{
+    OpenApi, PartialSchema, ToSchema,
+    openapi::{ArrayBuilder, ObjectBuilder, OneOfBuilder, RefOr, Schema, schema::Type},
+};
+
+use super::{negotiation::TakesJson, problem::Problem, router, wire::json};
+use crate::scenario::LeakageDocument;
+
+/// What the handlers do not say themselves.
+#[derive(OpenApi)]
+#[openapi(
+    info(
+        title = "bitassay",
+        description = "Certifies randomness from an untrusted prepare-and-measure rig whose carrier is almost d-dimensional. \
+                       Every error is a problem document (RFC 9457).",
+    ),
+    tags(
+        (name = "rigs", description = "What operators declare about their rigs, and what the rigs yield."),
+        (name = "batches", description = "What rigs post."),
+        (name = "certifications", description = "What was certified, and what was refused."),
+        (name = "health", description = "For whoever watches over the process."),
+    ),
+)]
+pub(super) struct Frame;
+
+/// The document as text, indented, as it is kept in `api/openapi.json`.
+///
+/// # Errors
+/// The serialiser's.
+pub fn document() -> Result<String, serde_json::Error> {
+    let (_, document) = router::routes().split_for_parts();
+    serde_json::to_string_pretty(&document).map(|text| text + "\n")
+}
+
+/// This document.
+#[utoipa::path(get, path = "/v1/openapi.json", tag = "health", operation_id = "get_openapi", responses((status = 200, description = "OpenAPI 3.1.")))]
+pub async fn get(TakesJson: TakesJson) -> Result<Response<Body>, Problem> {
+    let text = document().map_err(|error| Problem::internal(&error))?;
+    Ok(json(StatusCode::OK, text))
+}
+
+/// By hand: a number or an array, which the derivation has no words for.
+impl PartialSchema for LeakageDocument {
+    fn schema() -> RefOr<Schema> {
+        let number = || ObjectBuilder::new().schema_type(Type::Number).minimum(Some(0)).maximum(Some(1));
+        OneOfBuilder::new()
+            .description(Some("Leakage tolerance: one number for all preparations, or one per preparation."))
+            .item(number())
+            .item(ArrayBuilder::new().items(number()))
+            .into()
+    }
+}
+
+impl ToSchema for LeakageDocument {
+    fn name() -> std::borrow::Cow<'static, str> {
+        "Leakage".into()
+    }
+}

@@ -1,0 +1,242 @@
+//! Everything that goes wrong, as a problem document (RFC 9457).
+
+use axum::{
+    body::Body,
+    http::{HeaderName, HeaderValue, Response, StatusCode, header},
+    response::IntoResponse,
+};
+use serde::Serialize;
+use uuid::Uuid;
+
+use crate::{
+    batch::BatchFault,
+    fault::Fault,
+    ledger::{LedgerError, writer::WriteError},
+    service::{Check, SolveError, SubmitError},
+};
+
+/// Media type of every error.
+pub const PROBLEM_JSON: &str = "application/problem+json";
+
+/// What in the request is to blame.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub enum Culprit {
+    /// A JSON pointer (RFC 6901) into the body; `/lines/7/count` is a field of the seventh line of a CSV body.
+    Pointer(String),
+    /// A query or path parameter.
+    Parameter(String),
+    /// A header.
+    Header(&'static str),
+}
+
+/// One thing that is wrong with a request.
+#[derive(Debug, Clone, Serialize, utoipa::ToSchema)]
+pub struct ProblemError {
+    pub detail: String,
+    /// JSON pointer (RFC 6901) into the body.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    pub pointer: Option<String>,
+    /// Name of a query or path parameter.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    pub parameter: Option<String>,
+    /// Name of a header.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    pub header: Option<&'static str>,
+}
+
+/// One readiness check that failed.
+#[derive(Debug, Clone, Serialize, utoipa::ToSchema)]
+pub struct FailedCheck {
+    pub name: &'static str,
+    pub detail: String,
+}
+
+/// A problem document (RFC 9457).
+#[derive(Debug, Clone, Serialize, utoipa::ToSchema)]
+#[schema(as = Problem)]
+pub struct ProblemDocument {
+    /// What kind of problem; `about:blank` where the status says it all.
+    #[serde(rename = "type")]
+    pub kind: &'static str,
+    pub title: &'static str,
+    pub status: u16,
+    /// What happened, in plain words.
+    pub detail: String,
+    /// This one occurrence, by the name that the service's log has for it.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    pub instance: Option<String>,
+    /// What in the body is to blame: a JSON pointer (RFC 6901).
+    #[serde(skip_serializing_if = "Option::is_none")]
+    pub pointer: Option<String>,
+    #[serde(skip_serializing_if = "Vec::is_empty")]
+    pub errors: Vec<ProblemError>,
+    /// Readiness checks that failed.
+    #[serde(skip_serializing_if = "Vec::is_empty")]
+    pub checks: Vec<FailedCheck>,
+}
+
+/// A problem on its way to the client.
+#[derive(Debug, Clone)]
+pub struct Problem {
+    document: Box<ProblemDocument>,
+    headers: Vec<(HeaderName, HeaderValue)>,
+}
+
+impl Problem {
+    pub fn new(status: StatusCode, detail: impl Into<String>) -> Self {
+        let document = ProblemDocument {
+            kind: "about:blank",
+            title: status.canonical_reason().unwrap_or("Error"),
+            status: status.as_u16(),
+            detail: detail.into(),
+            instance: None,
+            pointer: None,
+            errors: vec![],
+            checks: vec![],
+        };
+        Self { document: Box::new(document), headers: vec![] }
+    }
+
+    /// The request does not have the shape that was expected.
+    pub fn malformed(detail: impl Into<String>) -> Self {
+        Self::new(StatusCode::BAD_REQUEST, detail)
+    }
+
+    pub fn not_found(detail: impl Into<String>) -> Self {
+        Self::new(StatusCode::NOT_FOUND, detail)
+    }
+
+    /// A problem that has a name of its own besides its status.
+    pub fn named(mut self, kind: &'static str, title: &'static str) -> Self {
+        self.document.kind = kind;
+        self.document.title = title;
+        self
+    }
+
+    /// Names what in the request is to blame.
+    pub fn blaming(mut self, culprit: Culprit) -> Self {
+        let detail = self.document.detail.clone();
+        let mut error = ProblemError { detail, pointer: None, parameter: None, header: None };
+        match culprit {
+            Culprit::Pointer(pointer) => {
+                self.document.pointer = Some(pointer.clone());
+                error.pointer = Some(pointer);
+            }
+            Culprit::Parameter(name) => error.parameter = Some(name),
+            Culprit::Header(name) => error.header = Some(name),
+        }
+        self.document.errors.push(error);
+        self
+    }
+
+    pub fn parameter(name: &str, detail: impl Into<String>) -> Self {
+        Self::malformed(detail).blaming(Culprit::Parameter(name.to_owned()))
+    }
+
+    pub fn header(name: &'static str, detail: impl Into<String>) -> Self {
+        Self::malformed(detail).blaming(Culprit::Header(name))
+    }
+
+    /// A fault of a body.
+    pub fn body(status: StatusCode, fault: Fault) -> Self {
+        Self::new(status, fault.detail).blaming(Culprit::Pointer(fault.pointer))
+    }
+
+    pub fn with_header(mut self, name: HeaderName, value: HeaderValue) -> Self {
+        self.headers.push((name, value));
+        self
+    }
+
+    fn retry_after(self, seconds: u64) -> Self {
+        self.with_header(header::RETRY_AFTER, HeaderValue::from(seconds))
+    }
+
+    /// Not ready, and why.
+    pub fn not_ready(failed: Vec<Check>) -> Self {
+        let mut problem = Self::new(StatusCode::SERVICE_UNAVAILABLE, "The service takes no batches at present.").retry_after(5);
+        let checks = failed.into_iter().filter_map(|check| check.fault.map(|detail| FailedCheck { name: check.name, detail }));
+        problem.document.checks = checks.collect();
+        problem
+    }
+
+    /// Something failed that the client can do nothing about. The log has the causes under the name that the client is given.
+    pub fn internal(error: &(dyn std::error::Error + 'static)) -> Self {
+        let instance = format!("urn:uuid:{}", Uuid::now_v7());
+        tracing::error!(%instance, error, "a request failed");
+        let mut problem =
+            Self::new(StatusCode::INTERNAL_SERVER_ERROR, "The service failed. Its log says more under the name in `instance`.");
+        problem.document.instance = Some(instance);
+        problem
+    }
+}
+
+impl IntoResponse for Problem {
+    fn into_response(self) -> Response<Body> {
+        let status = StatusCode::from_u16(self.document.status).unwrap_or(StatusCode::INTERNAL_SERVER_ERROR);
+        // Plain data: serialisation cannot fail.
+        let text = serde_json::to_string(&self.document).unwrap_or_default();
+        let mut response = (status, [(header::CONTENT_TYPE, PROBLEM_JSON)], text).into_response();
+        response.headers_mut().extend(self.headers);
+        response
+    }
+}
+
+impl From<LedgerError> for Problem {
+    fn from(error: LedgerError) -> Self {
+        match error {
+            LedgerError::Closed => Self::new(StatusCode::SERVICE_UNAVAILABLE, "The service is shutting down.").retry_after(5),
+            error => Self::internal(&error),
+        }
+    }
+}
+
+impl From<WriteError> for Problem {
+    fn from(error: WriteError) -> Self {
+        match error {
+            WriteError::ExpectationMissing { current } => {
+                let detail = format!(
+                    "The profile exists, at version {current}. To change it, send `If-Match: \"{current}\"`: that says which version \
+                     the change was made from."
+                );
+                Self::new(StatusCode::PRECONDITION_REQUIRED, detail).blaming(Culprit::Header("If-Match"))
+            }
+            WriteError::ExpectationFailed { current } => {
+                let detail = current.map_or_else(
+                    || "The rig has no profile yet.".to_owned(),
+                    |current| format!("The profile is at version {current}: it was changed since, or exists already."),
+                );
+                Self::new(StatusCode::PRECONDITION_FAILED, detail)
+            }
+            WriteError::KeyReused => SubmitError::KeyReused.into(),
+            WriteError::Ledger(error) => error.into(),
+        }
+    }
+}
+
+impl From<SubmitError> for Problem {
+    fn from(error: SubmitError) -> Self {
+        match error {
+            SubmitError::UnknownRig => Self::not_found("There is no rig of this name; an operator has to put its profile first."),
+            SubmitError::Batch(BatchFault::Malformed(fault)) => Self::body(StatusCode::BAD_REQUEST, fault),
+            SubmitError::Batch(BatchFault::Impossible(fault)) => Self::body(StatusCode::UNPROCESSABLE_ENTITY, fault),
+            SubmitError::KeyReused => {
+                let detail = "This idempotency key already stands for another batch. A new batch needs a key of its own.";
+                Self::new(StatusCode::UNPROCESSABLE_ENTITY, detail)
+                    .named("urn:bitassay:problem:key-reused", "The idempotency key is taken")
+                    .blaming(Culprit::Header("Idempotency-Key"))
+            }
+            SubmitError::Solve(SolveError::QueueFull { waiting, retry_after }) => {
+                let detail =
+                    format!("{waiting} batches are waiting already. Nothing was recorded; send the batch again, under the same key.");
+                Self::new(StatusCode::SERVICE_UNAVAILABLE, detail)
+                    .named("urn:bitassay:problem:queue-full", "The queue is full")
+                    .retry_after(retry_after.as_secs().max(1))
+            }
+            SubmitError::Solve(SolveError::Stopped) => LedgerError::Closed.into(),
+            SubmitError::Ledger(error) => error.into(),
+            error @ (SubmitError::Solve(SolveError::Panicked) | SubmitError::Unwritable(_) | SubmitError::Abandoned(_)) => {
+                Self::internal(&error)
+            }
+        }
+    }
+}

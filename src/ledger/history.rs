@@ -1,0 +1,195 @@
+//! Reading the ledger, through connections that cannot write.
+
+use sqlx::{QueryBuilder, Sqlite, SqliteConnection, SqlitePool};
+use uuid::Uuid;
+
+use super::{
+    LedgerError,
+    rows::{Answered, ProfileVersion, Read, Recorded, Tally, word},
+};
+use crate::{certificate::Verdict, clock::Stamp, profile::RigName, submission::IdempotencyKey};
+
+/// Which records a page of the history is taken from.
+#[derive(Debug, Clone, Default, PartialEq)]
+pub struct Filter {
+    pub rig: Option<RigName>,
+    pub verdict: Option<Verdict>,
+    /// Recorded at this time or later.
+    pub since: Option<Stamp>,
+    /// Recorded before this time.
+    pub until: Option<Stamp>,
+    /// Entries before this one: where the page before ended.
+    pub before: Option<u64>,
+}
+
+/// Which of a rig's certifications a yield adds up.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub enum Window {
+    /// The newest so many.
+    Batches(u32),
+    /// Those recorded at this time or later.
+    Since(Stamp),
+}
+
+/// One page, and whether there is another.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Page<T> {
+    pub items: Vec<T>,
+    pub more: bool,
+}
+
+impl<T> Page<T> {
+    /// A page from one item more than it holds.
+    fn of(mut items: Vec<T>, limit: u32) -> Self {
+        let limit = limit as usize;
+        let more = items.len() > limit;
+        items.truncate(limit);
+        Self { items, more }
+    }
+}
+
+/// The readers' end of the ledger.
+#[derive(Debug, Clone)]
+pub struct History {
+    pool: SqlitePool,
+}
+
+const ANSWERED: &str = "SELECT c.id, s.body_digest, c.record, s.refusal FROM submissions s JOIN certifications c USING (entry) \
+                        WHERE s.rig = ? AND s.idempotency_key = ?";
+
+impl History {
+    pub(super) fn new(pool: SqlitePool) -> Self {
+        Self { pool }
+    }
+
+    pub(super) async fn close(&self) {
+        self.pool.close().await;
+    }
+
+    /// Whether the database answers.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn check(&self) -> Result<(), LedgerError> {
+        sqlx::query("SELECT 1 FROM certifications LIMIT 1").fetch_optional(&self.pool).await?;
+        Ok(())
+    }
+
+    /// A rig's profile, the newest or a given version.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn profile(&self, rig: &RigName, version: Option<u64>) -> Result<Option<ProfileVersion>, LedgerError> {
+        let mut query = QueryBuilder::new("SELECT rig, version, recorded_at, profile FROM rig_profiles WHERE rig = ");
+        query.push_bind(rig.as_str());
+        if let Some(version) = version {
+            query.push(" AND version = ").push_bind(clamped(version));
+        }
+        query.push(" ORDER BY version DESC LIMIT 1");
+        query.build().fetch_optional(&self.pool).await?.map(|row| ProfileVersion::read(&row)).transpose()
+    }
+
+    /// Rigs in order of their names, each with its newest profile, beginning after `after`.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn rigs(&self, after: Option<&RigName>, limit: u32) -> Result<Page<ProfileVersion>, LedgerError> {
+        // MAX with bare columns: SQLite takes them from the row that holds the maximum.
+        let sql = "SELECT rig, MAX(version) AS version, recorded_at, profile FROM rig_profiles WHERE rig > ? GROUP BY rig \
+                   ORDER BY rig LIMIT ?";
+        let after = after.map_or("", RigName::as_str);
+        let rows = sqlx::query(sql).bind(after).bind(i64::from(limit) + 1).fetch_all(&self.pool).await?;
+        let items = rows.iter().map(ProfileVersion::read).collect::<Result<_, _>>()?;
+        Ok(Page::of(items, limit))
+    }
+
+    /// The text of a record.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn record(&self, id: Uuid) -> Result<Option<String>, LedgerError> {
+        let sql = "SELECT record FROM certifications WHERE id = ?";
+        Ok(sqlx::query_scalar(sql).bind(id.to_string()).fetch_optional(&self.pool).await?)
+    }
+
+    /// Digest and document of each witness of a certification; `None` if there is no such certification.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn witnesses(&self, id: Uuid) -> Result<Option<Vec<(String, String)>>, LedgerError> {
+        let sql = "SELECT w.digest, w.document FROM certifications c LEFT JOIN certification_witnesses USING (entry) \
+                   LEFT JOIN witnesses w USING (digest) WHERE c.id = ? ORDER BY w.digest";
+        let rows: Vec<(Option<String>, Option<String>)> = sqlx::query_as(sql).bind(id.to_string()).fetch_all(&self.pool).await?;
+        if rows.is_empty() {
+            return Ok(None);
+        }
+        Ok(Some(rows.into_iter().filter_map(|(digest, document)| digest.zip(document)).collect()))
+    }
+
+    /// The answer that a submission was given.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn answered(&self, rig: &RigName, key: &IdempotencyKey) -> Result<Option<Answered>, LedgerError> {
+        let row = sqlx::query(ANSWERED).bind(rig.as_str()).bind(key.as_str()).fetch_optional(&self.pool).await?;
+        row.map(|row| Answered::read(&row)).transpose()
+    }
+
+    /// One page of the history, newest first.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn page(&self, filter: &Filter, limit: u32) -> Result<Page<Recorded>, LedgerError> {
+        let mut query = QueryBuilder::<Sqlite>::new("SELECT entry, record FROM certifications WHERE TRUE");
+        if let Some(rig) = &filter.rig {
+            query.push(" AND rig = ").push_bind(rig.as_str());
+        }
+        if let Some(verdict) = filter.verdict {
+            query.push(" AND verdict = ").push_bind(word(verdict));
+        }
+        if let Some(since) = filter.since {
+            query.push(" AND recorded_at >= ").push_bind(since.microseconds());
+        }
+        if let Some(until) = filter.until {
+            query.push(" AND recorded_at < ").push_bind(until.microseconds());
+        }
+        if let Some(before) = filter.before {
+            query.push(" AND entry < ").push_bind(clamped(before));
+        }
+        query.push(" ORDER BY entry DESC LIMIT ").push_bind(i64::from(limit) + 1);
+        let rows = query.build().fetch_all(&self.pool).await?;
+        let items = rows.iter().map(Recorded::read).collect::<Result<_, _>>()?;
+        Ok(Page::of(items, limit))
+    }
+
+    /// What a rig's yield adds up, newest first.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn tallies(&self, rig: &RigName, window: Window) -> Result<Vec<Tally>, LedgerError> {
+        let mut query =
+            QueryBuilder::new("SELECT id, recorded_at, verdict, certified_bits, rounds, failure FROM certifications WHERE rig = ");
+        query.push_bind(rig.as_str());
+        match window {
+            Window::Batches(batches) => query.push(" ORDER BY entry DESC LIMIT ").push_bind(i64::from(batches)),
+            Window::Since(since) => query.push(" AND recorded_at >= ").push_bind(since.microseconds()).push(" ORDER BY entry DESC"),
+        };
+        let rows = query.build().fetch_all(&self.pool).await?;
+        rows.iter().map(Tally::read).collect()
+    }
+}
+
+/// As [`History::answered`], inside a transaction of the writer.
+pub(super) async fn answered_within(
+    connection: &mut SqliteConnection,
+    rig: &RigName,
+    key: &IdempotencyKey,
+) -> Result<Option<Answered>, LedgerError> {
+    let row = sqlx::query(ANSWERED).bind(rig.as_str()).bind(key.as_str()).fetch_optional(connection).await?;
+    row.map(|row| Answered::read(&row)).transpose()
+}
+
+/// SQLite's integers are signed; nothing in the ledger is numbered beyond them.
+fn clamped(number: u64) -> i64 {
+    i64::try_from(number).unwrap_or(i64::MAX)
+}

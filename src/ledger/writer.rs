@@ -1,0 +1,343 @@
+//! Writing the ledger: one task, one transaction for everything that is waiting, one answer each after the commit.
+
+use std::sync::Mutex;
+
+use sqlx::{Connection, SqliteConnection};
+use tokio::{
+    sync::{mpsc, oneshot},
+    task::JoinHandle,
+};
+
+use super::{
+    LedgerError,
+    history::answered_within,
+    rows::{Answered, Entry, word},
+};
+use crate::{
+    clock::Stamp,
+    profile::{Profile, RigName},
+};
+
+/// Most items in one transaction, and most that wait for the next.
+const GROUP: usize = 64;
+
+/// What must hold for a profile to be written.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub enum Expectation {
+    /// Nothing was stated. Enough to create a profile, not to change one.
+    Unstated,
+    /// The rig has no profile yet.
+    Absent,
+    /// The rig has a profile, whatever its version.
+    Present,
+    /// The newest version is one of these.
+    Versions(Vec<u64>),
+}
+
+/// What became of a profile.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Kept {
+    Created,
+    Updated,
+    /// The newest version says the same already.
+    Unchanged,
+}
+
+/// Why nothing was written.
+#[derive(Debug, Clone, thiserror::Error)]
+pub enum WriteError {
+    #[error("the profile is at version {current}; a change must say which version it starts from")]
+    ExpectationMissing { current: u64 },
+    #[error("{}", current.map_or_else(|| "the rig has no profile yet".into(), |version| format!("the profile is at version {version}")))]
+    ExpectationFailed { current: Option<u64> },
+    #[error("this idempotency key already stands for another batch")]
+    KeyReused,
+    #[error(transparent)]
+    Ledger(#[from] LedgerError),
+}
+
+impl From<sqlx::Error> for WriteError {
+    fn from(source: sqlx::Error) -> Self {
+        Self::Ledger(source.into())
+    }
+}
+
+/// A submission that is in the ledger.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Settled {
+    pub answered: Answered,
+    /// Whether another post of the same batch was written first.
+    pub replayed: bool,
+}
+
+type ProfileAnswer = Result<(Kept, u64), WriteError>;
+type EntryAnswer = Result<Settled, WriteError>;
+
+enum Item {
+    Profile { rig: RigName, profile: Box<Profile>, expectation: Expectation, recorded_at: Stamp, answer: oneshot::Sender<ProfileAnswer> },
+    Entry { entry: Box<Entry>, answer: oneshot::Sender<EntryAnswer> },
+}
+
+/// An item's outcome, kept back until the transaction is committed.
+enum Outcome {
+    Profile(oneshot::Sender<ProfileAnswer>, ProfileAnswer),
+    Entry(oneshot::Sender<EntryAnswer>, EntryAnswer),
+}
+
+impl Outcome {
+    /// Tells the caller, unless it has gone.
+    fn tell(self) {
+        match self {
+            Self::Profile(answer, outcome) => drop(answer.send(outcome)),
+            Self::Entry(answer, outcome) => drop(answer.send(outcome)),
+        }
+    }
+
+    /// Whether the database, and not the item, is to blame.
+    fn broken(&self) -> Option<&LedgerError> {
+        match self {
+            Self::Profile(_, Err(WriteError::Ledger(error))) | Self::Entry(_, Err(WriteError::Ledger(error))) => Some(error),
+            _ => None,
+        }
+    }
+
+    fn failed(self, error: &LedgerError) -> Self {
+        let error = WriteError::Ledger(error.clone());
+        match self {
+            Self::Profile(answer, _) => Self::Profile(answer, Err(error)),
+            Self::Entry(answer, _) => Self::Entry(answer, Err(error)),
+        }
+    }
+}
+
+impl Item {
+    fn failed(self, error: &LedgerError) -> Outcome {
+        let error = WriteError::Ledger(error.clone());
+        match self {
+            Self::Profile { answer, .. } => Outcome::Profile(answer, Err(error)),
+            Self::Entry { answer, .. } => Outcome::Entry(answer, Err(error)),
+        }
+    }
+
+    async fn write(self, connection: &mut SqliteConnection) -> Outcome {
+        match self {
+            Self::Profile { rig, profile, expectation, recorded_at, answer } => {
+                let outcome = write_profile(connection, &rig, &profile, &expectation, recorded_at).await;
+                Outcome::Profile(answer, outcome)
+            }
+            Self::Entry { entry, answer } => Outcome::Entry(answer, write_entry(connection, *entry).await),
+        }
+    }
+}
+
+/// The callers' end of the writer.
+#[derive(Debug)]
+pub struct Writer {
+    /// `None` once closed.
+    inbox: Mutex<Option<mpsc::Sender<Item>>>,
+    task: Mutex<Option<JoinHandle<()>>>,
+}
+
+impl Writer {
+    pub(super) fn start(connection: SqliteConnection) -> Self {
+        let (inbox, items) = mpsc::channel(GROUP);
+        Self { inbox: Mutex::new(Some(inbox)), task: Mutex::new(Some(tokio::spawn(run(connection, items)))) }
+    }
+
+    /// Whether the writer takes items.
+    pub fn is_open(&self) -> bool {
+        self.sender().is_ok_and(|inbox| !inbox.is_closed())
+    }
+
+    fn sender(&self) -> Result<mpsc::Sender<Item>, LedgerError> {
+        // A poisoned lock only means that a caller panicked; the sender within is whole.
+        self.inbox.lock().unwrap_or_else(|poisoned| poisoned.into_inner()).clone().ok_or(LedgerError::Closed)
+    }
+
+    /// Keeps a profile as the rig's next version, if the expectation holds; answers with the version that now stands.
+    ///
+    /// # Errors
+    /// An expectation that does not hold, or the database's. A profile that is there already is no error, whatever was
+    /// expected: whoever sends a change twice gets the same answer twice.
+    pub async fn keep_profile(&self, rig: RigName, profile: Profile, expectation: Expectation, recorded_at: Stamp) -> ProfileAnswer {
+        let (answer, outcome) = oneshot::channel();
+        let item = Item::Profile { rig, profile: Box::new(profile), expectation, recorded_at, answer };
+        self.sender()?.send(item).await.map_err(|_| LedgerError::Closed)?;
+        outcome.await.map_err(|_| LedgerError::Closed)?
+    }
+
+    /// Keeps a certification with its witnesses and its submission; durable when answered. If the key already stands for the
+    /// same batch, nothing is written and the earlier answer is given.
+    ///
+    /// # Errors
+    /// A key that stands for another batch, or the database's.
+    pub async fn keep_entry(&self, entry: Entry) -> EntryAnswer {
+        let (answer, outcome) = oneshot::channel();
+        self.sender()?.send(Item::Entry { entry: Box::new(entry), answer }).await.map_err(|_| LedgerError::Closed)?;
+        outcome.await.map_err(|_| LedgerError::Closed)?
+    }
+
+    /// Takes no more items, writes those that were taken, and closes the connection.
+    pub(super) async fn close(&self) {
+        drop(self.inbox.lock().unwrap_or_else(|poisoned| poisoned.into_inner()).take());
+        let task = self.task.lock().unwrap_or_else(|poisoned| poisoned.into_inner()).take();
+        if let Some(task) = task
+            && let Err(error) = task.await
+        {
+            tracing::error!(%error, "the writer did not end well");
+        }
+    }
+}
+
+async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>) {
+    let mut group = Vec::with_capacity(GROUP);
+    while items.recv_many(&mut group, GROUP).await > 0 {
+        for outcome in commit(&mut connection, group.drain(..)).await {
+            outcome.tell();
+        }
+    }
+    if let Err(error) = connection.close().await {
+        tracing::error!(%error, "the database did not close well");
+    }
+}
+
+/// Writes a group of items in one transaction. An item that fails is undone alone; if the transaction fails, all of them have.
+async fn commit(connection: &mut SqliteConnection, items: impl Iterator<Item = Item>) -> Vec<Outcome> {
+    let mut outcomes = Vec::new();
+    let mut broken = execute(connection, "BEGIN IMMEDIATE").await.err();
+    for item in items {
+        let outcome = match &broken {
+            Some(error) => item.failed(error),
+            None => write_undoable(connection, item, &mut broken).await,
+        };
+        outcomes.push(outcome);
+    }
+    if broken.is_none() {
+        broken = execute(connection, "COMMIT").await.err();
+    }
+    let Some(error) = broken else { return outcomes };
+    // The transaction may be gone already, as it is when the disk is full; then this fails and nothing is lost.
+    let _ = execute(connection, "ROLLBACK").await;
+    tracing::error!(error = &error as &dyn std::error::Error, "a group of writes failed");
+    outcomes.into_iter().map(|outcome| outcome.failed(&error)).collect()
+}
+
+/// Writes one item inside a savepoint. `broken` is set if the transaction itself can no longer be trusted.
+async fn write_undoable(connection: &mut SqliteConnection, item: Item, broken: &mut Option<LedgerError>) -> Outcome {
+    if let Err(error) = execute(connection, "SAVEPOINT item").await {
+        let outcome = item.failed(&error);
+        *broken = Some(error);
+        return outcome;
+    }
+    let outcome = item.write(connection).await;
+    if outcome.broken().is_some()
+        && let Err(error) = execute(connection, "ROLLBACK TO item").await
+    {
+        *broken = Some(error);
+        return outcome;
+    }
+    if let Err(error) = execute(connection, "RELEASE item").await {
+        *broken = Some(error);
+    }
+    outcome
+}
+
+async fn execute(connection: &mut SqliteConnection, sql: &'static str) -> Result<(), LedgerError> {
+    sqlx::query(sql).execute(connection).await?;
+    Ok(())
+}
+
+async fn write_profile(
+    connection: &mut SqliteConnection,
+    rig: &RigName,
+    profile: &Profile,
+    expectation: &Expectation,
+    recorded_at: Stamp,
+) -> ProfileAnswer {
+    let text = serde_json::to_string(profile)
+        .map_err(|source| LedgerError::Unreadable { what: "profile", source: std::sync::Arc::new(source) })?;
+    let sql = "SELECT version, profile FROM rig_profiles WHERE rig = ? ORDER BY version DESC LIMIT 1";
+    let newest: Option<(i64, String)> = sqlx::query_as(sql).bind(rig.as_str()).fetch_optional(&mut *connection).await?;
+    let (current, same) = match &newest {
+        Some((version, stored)) => (u64::try_from(*version).ok(), *stored == text),
+        None => (None, false),
+    };
+    if let (Some(current), true, true) = (current, same, *expectation != Expectation::Absent) {
+        return Ok((Kept::Unchanged, current));
+    }
+    let holds = match (expectation, current) {
+        (Expectation::Unstated, Some(current)) => return Err(WriteError::ExpectationMissing { current }),
+        (Expectation::Unstated | Expectation::Absent, None) => true,
+        (Expectation::Present, current) => current.is_some(),
+        (Expectation::Versions(versions), Some(current)) => versions.contains(&current),
+        (Expectation::Absent, Some(_)) | (Expectation::Versions(_), None) => false,
+    };
+    if !holds {
+        return Err(WriteError::ExpectationFailed { current });
+    }
+    let version = newest.map_or(1, |(version, _)| version + 1);
+    sqlx::query("INSERT INTO rig_profiles (rig, version, recorded_at, profile) VALUES (?, ?, ?, ?)")
+        .bind(rig.as_str())
+        .bind(version)
+        .bind(recorded_at.microseconds())
+        .bind(text)
+        .execute(connection)
+        .await?;
+    let kept = if version == 1 { Kept::Created } else { Kept::Updated };
+    Ok((kept, u64::try_from(version).map_err(|_| LedgerError::OutOfRange { what: "version" })?))
+}
+
+async fn write_entry(connection: &mut SqliteConnection, entry: Entry) -> EntryAnswer {
+    let Entry { submission, rig, .. } = &entry;
+    if let Some(answered) = answered_within(connection, rig, &submission.key).await? {
+        let same = answered.body_digest == submission.body_digest;
+        return if same { Ok(Settled { answered, replayed: true }) } else { Err(WriteError::KeyReused) };
+    }
+    let number = insert_certification(connection, &entry).await?;
+    for (digest, document) in &entry.witnesses {
+        insert_witness(connection, number, digest, document).await?;
+    }
+    sqlx::query("INSERT INTO submissions (rig, idempotency_key, body_digest, entry, refusal) VALUES (?, ?, ?, ?, ?)")
+        .bind(rig.as_str())
+        .bind(submission.key.as_str())
+        .bind(&submission.body_digest)
+        .bind(number)
+        .bind(&entry.refusal)
+        .execute(connection)
+        .await?;
+    let Entry { id, record, refusal, submission, .. } = entry;
+    Ok(Settled { answered: Answered { id, body_digest: submission.body_digest, record, refusal }, replayed: false })
+}
+
+/// Adds the certification as the next entry; answers with its number.
+async fn insert_certification(connection: &mut SqliteConnection, entry: &Entry) -> Result<i64, WriteError> {
+    let signed = |number: u64, what| i64::try_from(number).map_err(|_| LedgerError::OutOfRange { what });
+    let sql = "INSERT INTO certifications (entry, id, rig, profile_version, verdict, reason, recorded_at, certified_bits, rounds, \
+               failure, record) VALUES ((SELECT COALESCE(MAX(entry), -1) + 1 FROM certifications), ?, ?, ?, ?, ?, ?, ?, ?, ?, ?) \
+               RETURNING entry";
+    let number = sqlx::query_scalar(sql)
+        .bind(entry.id.to_string())
+        .bind(entry.rig.as_str())
+        .bind(signed(entry.profile_version, "version")?)
+        .bind(word(entry.verdict))
+        .bind(entry.reason.map(word))
+        .bind(entry.recorded_at.microseconds())
+        .bind(signed(entry.certified_bits, "number of bits")?)
+        .bind(signed(entry.rounds, "number of rounds")?)
+        .bind(entry.failure)
+        .bind(&entry.record)
+        .fetch_one(connection)
+        .await?;
+    Ok(number)
+}
+
+/// Keeps the witness, unless it is known, and ties it to the entry.
+async fn insert_witness(connection: &mut SqliteConnection, number: i64, digest: &str, document: &str) -> Result<(), WriteError> {
+    sqlx::query("INSERT INTO witnesses (digest, document) SELECT ?1, ?2 WHERE NOT EXISTS (SELECT 1 FROM witnesses WHERE digest = ?1)")
+        .bind(digest)
+        .bind(document)
+        .execute(&mut *connection)
+        .await?;
+    sqlx::query("INSERT INTO certification_witnesses (entry, digest) VALUES (?, ?)").bind(number).bind(digest).execute(connection).await?;
+    Ok(())
+}

@@ -1,0 +1,212 @@
+//! What an operator declares about a rig.
+
+use std::fmt;
+
+use serde::{Deserialize, Serialize};
+
+use crate::{
+    counts::NORMALISATION_SLACK,
+    fault::Fault,
+    relaxation::level::LevelChoice,
+    request::{Failure, RoundModel},
+    scenario::{Geometry, Scenario, ScenarioDocument},
+};
+
+/// The name of a rig: `[a-z0-9][a-z0-9-]{0,62}`, so that it fits into paths, file names and host names as it is.
+#[derive(Debug, Clone, PartialEq, Eq, PartialOrd, Ord, Hash, Serialize, Deserialize)]
+#[serde(try_from = "String", into = "String")]
+pub struct RigName(String);
+
+/// The text cannot name a rig.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, thiserror::Error)]
+#[error("a rig's name has 1 to 63 lower-case letters, digits and hyphens, and does not start with a hyphen")]
+pub struct NoRigName;
+
+impl TryFrom<String> for RigName {
+    type Error = NoRigName;
+
+    fn try_from(text: String) -> Result<Self, NoRigName> {
+        let letter = |byte: u8| byte.is_ascii_lowercase() || byte.is_ascii_digit();
+        let fits = text.len() <= 63 && text.bytes().next().is_some_and(letter) && text.bytes().all(|byte| letter(byte) || byte == b'-');
+        if fits { Ok(Self(text)) } else { Err(NoRigName) }
+    }
+}
+
+impl From<RigName> for String {
+    fn from(name: RigName) -> Self {
+        name.0
+    }
+}
+
+impl fmt::Display for RigName {
+    fn fmt(&self, formatter: &mut fmt::Formatter) -> fmt::Result {
+        formatter.write_str(&self.0)
+    }
+}
+
+impl RigName {
+    pub fn as_str(&self) -> &str {
+        &self.0
+    }
+}
+
+/// Longest outcome label and longest notes, in bytes.
+const MAX_LABEL: usize = 64;
+const MAX_NOTES: usize = 4096;
+
+/// A rig's profile as it is written in a document; [`Profile`] is the validated form.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, utoipa::ToSchema)]
+#[serde(deny_unknown_fields)]
+#[schema(as = Profile)]
+pub struct ProfileDocument {
+    pub scenario: ScenarioDocument,
+    pub rounds: RoundModel,
+    #[serde(default)]
+    pub failure: Failure,
+    #[serde(default)]
+    pub level: LevelChoice,
+    /// Probability `π(x,y)` with which the rig chooses each setting, `[x][y]`; adds up to 1.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub setting_distribution: Option<Vec<Vec<f64>>>,
+    /// What the outcomes are called at the rig, one label each, all different.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub outcome_labels: Option<Vec<String>>,
+    /// Anything the operator wants to keep with the profile.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub notes: Option<String>,
+}
+
+/// A valid profile.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[serde(into = "ProfileDocument", try_from = "ProfileDocument")]
+pub struct Profile {
+    scenario: Scenario,
+    rounds: RoundModel,
+    failure: Failure,
+    level: LevelChoice,
+    setting_distribution: Option<Vec<Vec<f64>>>,
+    outcome_labels: Option<Vec<String>>,
+    notes: Option<String>,
+}
+
+impl TryFrom<ProfileDocument> for Profile {
+    type Error = Fault;
+
+    fn try_from(document: ProfileDocument) -> Result<Self, Fault> {
+        let ProfileDocument { scenario, rounds, failure, level, setting_distribution, outcome_labels, notes } = document;
+        let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
+        if rounds == RoundModel::Memory {
+            return Err(Fault::new("/rounds", "rounds with memory need a commitment made before the data; this version has none"));
+        }
+        failure.check().map_err(|fault| fault.under("/failure"))?;
+        if let Some(distribution) = &setting_distribution {
+            check_distribution(distribution, scenario.geometry()).map_err(|fault| fault.under("/setting_distribution"))?;
+        }
+        if let Some(labels) = &outcome_labels {
+            check_labels(labels, scenario.geometry().outcomes).map_err(|fault| fault.under("/outcome_labels"))?;
+        }
+        if notes.as_ref().is_some_and(|notes| notes.len() > MAX_NOTES) {
+            return Err(Fault::new("/notes", format!("notes have at most {MAX_NOTES} bytes")));
+        }
+        Ok(Self { scenario, rounds, failure, level, setting_distribution, outcome_labels, notes })
+    }
+}
+
+/// Positive everywhere, since every setting must be used, and one in all.
+fn check_distribution(distribution: &[Vec<f64>], geometry: Geometry) -> Result<(), Fault> {
+    let Geometry { preparations, measurements, .. } = geometry;
+    if distribution.len() != preparations {
+        let detail = format!("needs one row per preparation: {preparations}, has {}", distribution.len());
+        return Err(Fault::new("", detail));
+    }
+    for (x, row) in distribution.iter().enumerate() {
+        if row.len() != measurements {
+            let detail = format!("needs one probability per measurement: {measurements}, has {}", row.len());
+            return Err(Fault::new(format!("/{x}"), detail));
+        }
+        if let Some(y) = row.iter().position(|p| !(*p > 0.0 && *p <= 1.0)) {
+            return Err(Fault::new(format!("/{x}/{y}"), format!("a setting's probability is above 0 and at most 1, is {}", row[y])));
+        }
+    }
+    let sum: f64 = distribution.iter().flatten().sum();
+    if (sum - 1.0).abs() > NORMALISATION_SLACK {
+        return Err(Fault::new("", format!("the probabilities of all settings add up to 1, not to {sum}")));
+    }
+    Ok(())
+}
+
+fn check_labels(labels: &[String], outcomes: usize) -> Result<(), Fault> {
+    if labels.len() != outcomes {
+        return Err(Fault::new("", format!("needs one label per outcome: {outcomes}, has {}", labels.len())));
+    }
+    for (b, label) in labels.iter().enumerate() {
+        if label.is_empty() || label.len() > MAX_LABEL {
+            return Err(Fault::new(format!("/{b}"), format!("a label has 1 to {MAX_LABEL} bytes")));
+        }
+        if labels[..b].contains(label) {
+            return Err(Fault::new(format!("/{b}"), "this label is given twice"));
+        }
+    }
+    Ok(())
+}
+
+impl From<Profile> for ProfileDocument {
+    fn from(profile: Profile) -> Self {
+        let Profile { scenario, rounds, failure, level, setting_distribution, outcome_labels, notes } = profile;
+        Self { scenario: scenario.into(), rounds, failure, level, setting_distribution, outcome_labels, notes }
+    }
+}
+
+impl Profile {
+    pub fn scenario(&self) -> &Scenario {
+        &self.scenario
+    }
+
+    pub fn rounds(&self) -> RoundModel {
+        self.rounds
+    }
+
+    pub fn failure(&self) -> Failure {
+        self.failure
+    }
+
+    pub fn level(&self) -> LevelChoice {
+        self.level
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::fault::parse;
+
+    const PROFILE: &str = r#"{"scenario": {"preparations": 2, "measurements": 1, "outcomes": 2, "carrier_dimension": 2,
+        "leakage": [0.1, 0.2], "targets": [[0, 0]]}, "rounds": "independent", "setting_distribution": [[0.25], [0.75]]}"#;
+
+    #[test]
+    fn a_profile_is_read_back_with_its_defaults_filled_in() {
+        let document: ProfileDocument = parse(PROFILE.as_bytes()).unwrap();
+        let profile = Profile::try_from(document).unwrap();
+        let text = serde_json::to_string(&profile).unwrap();
+        assert!(text.contains(r#""failure":{"estimation":1e-10,"hashing":1e-10},"level":"auto""#), "{text}");
+        assert_eq!(serde_json::from_str::<Profile>(&text).unwrap(), profile);
+    }
+
+    #[test]
+    fn a_distribution_misses_one_or_a_row() {
+        for (rows, pointer) in [("[[0.5], [0.6]]", ""), ("[[1.0]]", ""), ("[[0.5, 0.5], [0.5]]", "/0"), ("[[0.0], [1.0]]", "/0/0")] {
+            let document: ProfileDocument = parse(PROFILE.replace("[[0.25], [0.75]]", rows).as_bytes()).unwrap();
+            assert_eq!(Profile::try_from(document).unwrap_err().pointer, format!("/setting_distribution{pointer}"), "{rows}");
+        }
+    }
+
+    #[test]
+    fn names_fit_into_paths() {
+        for good in ["a", "0", "rig-7", &"z".repeat(63)] {
+            assert!(RigName::try_from(good.to_owned()).is_ok(), "{good}");
+        }
+        for bad in ["", "-a", "Rig", "a_b", "a.b", "é", &"z".repeat(64)] {
+            assert!(RigName::try_from(bad.to_owned()).is_err(), "{bad}");
+        }
+    }
+}

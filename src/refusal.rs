@@ -1,0 +1,75 @@
+//! What a poster is told when a batch is refused.
+
+use serde::Serialize;
+
+use crate::{
+    certificate::{Certificate, Reason, Verdict},
+    record::Record,
+};
+
+/// Type of the problem document of a refused batch.
+pub const REFUSED: &str = "urn:bitassay:problem:refused";
+
+/// The problem document (RFC 9457) of a refused batch. It is kept with the submission, so that a repeated post is answered
+/// with the same bytes even after the words below have changed.
+#[derive(Debug, Clone, PartialEq, Serialize, utoipa::ToSchema)]
+pub struct Refusal {
+    #[serde(rename = "type")]
+    pub kind: &'static str,
+    pub title: &'static str,
+    /// Always 422.
+    pub status: u16,
+    /// The reason in plain words.
+    pub detail: String,
+    pub reason: Option<Reason>,
+    /// Path of the record; refused batches are recorded too.
+    pub certification: String,
+    /// For `outside-model`: no smaller uniform leakage, read on average, explains the counts.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    pub smallest_uniform_leakage: Option<f64>,
+}
+
+impl Refusal {
+    /// The refusal of a record; `None` if the record does not refuse.
+    pub fn of(record: &Record) -> Option<Self> {
+        if record.certificate.verdict != Verdict::Refused {
+            return None;
+        }
+        Some(Self {
+            kind: REFUSED,
+            title: "The batch is refused: no bits may be extracted from it",
+            status: 422,
+            detail: explanation(&record.certificate),
+            reason: record.certificate.reason,
+            certification: record.path(),
+            smallest_uniform_leakage: record.certificate.outside_model.as_ref().and_then(|outside| outside.smallest_uniform_leakage),
+        })
+    }
+}
+
+fn explanation(certificate: &Certificate) -> String {
+    match certificate.reason {
+        Some(Reason::ZeroBound) => {
+            let min_entropy: f64 = certificate.targets.iter().map(|target| target.min_entropy).sum();
+            if min_entropy > 0.0 {
+                format!(
+                    "The bound proves {min_entropy:.1} bits of min-entropy, but what is subtracted for the published counts and the \
+                     hash uses up all of it. More rounds, or a smaller leakage, may help."
+                )
+            } else {
+                "Whoever made the devices may know every outcome: the bound on the guessing probability reaches 1. The counts, at \
+                 the declared dimension and leakage, show no randomness."
+                    .into()
+            }
+        }
+        Some(Reason::OutsideModel) => {
+            let dimension = certificate.scenario.geometry().carrier_dimension;
+            let explains = certificate.outside_model.as_ref().and_then(|outside| outside.smallest_uniform_leakage);
+            let explains = explains.map_or_else(String::new, |leakage| format!(" It would take a uniform leakage of at least {leakage}."));
+            format!("The counts cannot come from a carrier of dimension {dimension} with the declared leakage.{explains}")
+        }
+        Some(Reason::Unverified) | None => {
+            "No bound passed the exact check, so nothing is known about the batch. This says nothing against the rig.".into()
+        }
+    }
+}

@@ -1,0 +1,233 @@
+//! The service: takes batches in, has them solved, keeps what came out. Knows no HTTP.
+
+mod solvers;
+mod turns;
+
+use std::sync::{
+    Arc,
+    atomic::{AtomicBool, Ordering},
+};
+
+use tokio::sync::watch;
+use uuid::{NoContext, Uuid};
+
+pub use self::solvers::{Certifier, SolveError, Solvers};
+use self::{solvers::Solved, turns::Turns};
+use crate::{
+    batch::{Batch, BatchFault, Posted},
+    clock::{Clock, Stamp},
+    ledger::{
+        Ledger, LedgerError,
+        history::{Filter, Page, Window},
+        rows::{Entry, ProfileVersion, Recorded},
+        writer::{Expectation, Kept, Settled, WriteError},
+    },
+    profile::{Profile, RigName},
+    record::{Record, Timings},
+    rig_yield::RigYield,
+    submission::{IdempotencyKey, Submission},
+};
+
+/// Why a batch was not certified. Nothing was recorded.
+#[derive(Debug, thiserror::Error)]
+pub enum SubmitError {
+    #[error("there is no rig of this name")]
+    UnknownRig,
+    #[error(transparent)]
+    Batch(#[from] BatchFault),
+    #[error("this idempotency key already stands for another batch")]
+    KeyReused,
+    #[error("no solver took the batch")]
+    Solve(#[from] SolveError),
+    #[error("the record cannot be written out")]
+    Unwritable(#[from] serde_json::Error),
+    #[error(transparent)]
+    Ledger(#[from] LedgerError),
+    #[error("the task that worked on the batch ended early")]
+    Abandoned(#[source] tokio::task::JoinError),
+}
+
+/// One readiness check.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Check {
+    pub name: &'static str,
+    /// What is wrong, if anything is.
+    pub fault: Option<String>,
+}
+
+/// A running service.
+pub struct Service {
+    ledger: Ledger,
+    solvers: Solvers,
+    clock: Arc<dyn Clock>,
+    turns: Arc<Turns>,
+    accepting: AtomicBool,
+    /// Batches that are being worked on, whether or not their posters still wait.
+    active: watch::Sender<usize>,
+}
+
+impl Service {
+    pub fn new(ledger: Ledger, solvers: Solvers, clock: Arc<dyn Clock>) -> Arc<Self> {
+        let turns = Arc::new(Turns::default());
+        Arc::new(Self { ledger, solvers, clock, turns, accepting: AtomicBool::new(true), active: watch::Sender::new(0) })
+    }
+
+    /// Keeps a profile; see [`crate::ledger::writer::Writer::keep_profile`].
+    ///
+    /// # Errors
+    /// An expectation that does not hold, or the ledger's.
+    pub async fn keep_profile(&self, rig: RigName, profile: Profile, expectation: Expectation) -> Result<(Kept, u64), WriteError> {
+        self.ledger.writer.keep_profile(rig, profile, expectation, self.clock.now()).await
+    }
+
+    /// A rig's profile, the newest or a given version.
+    ///
+    /// # Errors
+    /// The ledger's.
+    pub async fn profile(&self, rig: &RigName, version: Option<u64>) -> Result<Option<ProfileVersion>, LedgerError> {
+        self.ledger.history.profile(rig, version).await
+    }
+
+    /// Rigs in order of their names, each with its newest profile.
+    ///
+    /// # Errors
+    /// The ledger's.
+    pub async fn rigs(&self, after: Option<&RigName>, limit: u32) -> Result<Page<ProfileVersion>, LedgerError> {
+        self.ledger.history.rigs(after, limit).await
+    }
+
+    /// Certifies a batch and records what came out, or gives the answer that the same batch was given before.
+    ///
+    /// Once begun, the work goes on even if the poster hangs up: a poster that loses patience finds the answer when it sends the
+    /// batch again.
+    ///
+    /// # Errors
+    /// See [`SubmitError`].
+    pub async fn submit(self: &Arc<Self>, rig: RigName, key: IdempotencyKey, posted: Posted) -> Result<Settled, SubmitError> {
+        let service = Arc::clone(self);
+        let working = Working::begin(service);
+        tokio::spawn(async move { working.service.settle(rig, key, posted).await }).await.map_err(SubmitError::Abandoned)?
+    }
+
+    async fn settle(&self, rig: RigName, key: IdempotencyKey, posted: Posted) -> Result<Settled, SubmitError> {
+        let profile = self.profile(&rig, None).await?.ok_or(SubmitError::UnknownRig)?;
+        let submission = Submission { key, body_digest: posted.digest() };
+        // Posts under one key go one after the other, so that a batch sent twice is solved once.
+        let _turn = self.turns.take(&rig, &submission.key).await;
+        if let Some(answered) = self.ledger.history.answered(&rig, &submission.key).await? {
+            let same = answered.body_digest == submission.body_digest;
+            return if same { Ok(Settled { answered, replayed: true }) } else { Err(SubmitError::KeyReused) };
+        }
+        let batch = posted.read(&profile.profile)?;
+        let solved = self.solvers.solve(batch.request.clone()).await?;
+        self.keep(profile, batch, solved, submission).await
+    }
+
+    async fn keep(&self, profile: ProfileVersion, batch: Batch, solved: Solved, submission: Submission) -> Result<Settled, SubmitError> {
+        let Solved { certification, queued, solved } = solved;
+        let recorded_at = self.clock.now();
+        let record = Record {
+            id: new_id(recorded_at),
+            rig: profile.rig,
+            profile_version: profile.version,
+            recorded_at,
+            started_at: batch.started_at,
+            ended_at: batch.ended_at,
+            leakage_source: batch.leakage_source,
+            certificate: certification.certificate,
+            timings: Timings { queued_seconds: queued.as_secs_f64(), solved_seconds: solved.as_secs_f64() },
+        };
+        let entry = Entry::new(&record, &certification.witnesses, submission)?;
+        self.ledger.writer.keep_entry(entry).await.map_err(|error| match error {
+            WriteError::KeyReused => SubmitError::KeyReused,
+            WriteError::Ledger(error) => SubmitError::Ledger(error),
+            // An entry states no expectation.
+            WriteError::ExpectationMissing { .. } | WriteError::ExpectationFailed { .. } => SubmitError::Ledger(LedgerError::Closed),
+        })
+    }
+
+    /// The text of a record.
+    ///
+    /// # Errors
+    /// The ledger's.
+    pub async fn record(&self, id: Uuid) -> Result<Option<String>, LedgerError> {
+        self.ledger.history.record(id).await
+    }
+
+    /// Digest and document of each witness of a certification; `None` if there is no such certification.
+    ///
+    /// # Errors
+    /// The ledger's.
+    pub async fn witnesses(&self, id: Uuid) -> Result<Option<Vec<(String, String)>>, LedgerError> {
+        self.ledger.history.witnesses(id).await
+    }
+
+    /// One page of the history, newest first.
+    ///
+    /// # Errors
+    /// The ledger's.
+    pub async fn history(&self, filter: &Filter, limit: u32) -> Result<Page<Recorded>, LedgerError> {
+        self.ledger.history.page(filter, limit).await
+    }
+
+    /// What a rig's certifications add up to; `None` if there is no such rig.
+    ///
+    /// # Errors
+    /// The ledger's.
+    pub async fn rig_yield(&self, rig: &RigName, window: Window) -> Result<Option<RigYield>, LedgerError> {
+        if self.profile(rig, None).await?.is_none() {
+            return Ok(None);
+        }
+        let tallies = self.ledger.history.tallies(rig, window).await?;
+        Ok(Some(RigYield::of(rig.clone(), window, &tallies)))
+    }
+
+    /// Everything that must be well for batches to be taken, each under its name.
+    pub async fn readiness(&self) -> Vec<Check> {
+        let unless = |well: bool, fault: &str| (!well).then(|| fault.to_owned());
+        vec![
+            Check { name: "accepting", fault: unless(self.accepting.load(Ordering::Relaxed), "the service is shutting down") },
+            Check { name: "database", fault: self.ledger.history.check().await.err().map(|error| error.to_string()) },
+            Check { name: "writer", fault: unless(self.ledger.writer.is_open(), "the ledger is closed") },
+            Check { name: "solvers", fault: self.solvers.fault() },
+        ]
+    }
+
+    /// Says from now on that the service is not ready. What is under way goes on, and so does what still comes in.
+    pub fn announce_shutdown(&self) {
+        self.accepting.store(false, Ordering::Relaxed);
+    }
+
+    /// Finishes all batches that are being worked on, writes them, and closes the ledger.
+    pub async fn close(&self) {
+        self.announce_shutdown();
+        // The sender lives in `self`: waiting cannot fail.
+        let _ = self.active.subscribe().wait_for(|active| *active == 0).await;
+        self.solvers.close().await;
+        self.ledger.close().await;
+    }
+}
+
+/// Counts as one active batch for as long as it lives.
+struct Working {
+    service: Arc<Service>,
+}
+
+impl Working {
+    fn begin(service: Arc<Service>) -> Self {
+        service.active.send_modify(|active| *active += 1);
+        Self { service }
+    }
+}
+
+impl Drop for Working {
+    fn drop(&mut self) {
+        self.service.active.send_modify(|active| *active -= 1);
+    }
+}
+
+/// A name that sorts by time and that nobody can guess.
+fn new_id(now: Stamp) -> Uuid {
+    let (seconds, nanoseconds) = now.unix();
+    Uuid::new_v7(uuid::Timestamp::from_unix(NoContext, seconds, nanoseconds))
+}

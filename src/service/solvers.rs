@@ -1,0 +1,161 @@
+//! A fixed number of threads that solve, behind a queue of fixed length.
+
+use std::{
+    panic::{AssertUnwindSafe, catch_unwind},
+    sync::{
+        Arc, Mutex, MutexGuard,
+        atomic::{AtomicU64, AtomicUsize, Ordering},
+        mpsc::{Receiver, SyncSender, TrySendError, sync_channel},
+    },
+    thread::JoinHandle,
+    time::{Duration, Instant},
+};
+
+use tokio::sync::oneshot;
+
+use crate::{certify::Certification, request::Request};
+
+/// What certifies: the core's [`crate::certify::certify`], or a stand-in for it in tests.
+pub type Certifier = Arc<dyn Fn(&Request) -> Certification + Send + Sync>;
+
+/// Why a request was not solved.
+#[derive(Debug, Clone, PartialEq, Eq, thiserror::Error)]
+pub enum SolveError {
+    #[error("{waiting} batches are waiting already, and no more may")]
+    QueueFull {
+        waiting: usize,
+        /// When there may be room, going by how long recent batches took.
+        retry_after: Duration,
+    },
+    #[error("the solver failed on this batch")]
+    Panicked,
+    #[error("the solvers have stopped")]
+    Stopped,
+}
+
+/// A solved request, and how long it took.
+#[derive(Debug)]
+pub(super) struct Solved {
+    pub certification: Certification,
+    pub queued: Duration,
+    pub solved: Duration,
+}
+
+struct Job {
+    request: Request,
+    accepted: Instant,
+    answer: oneshot::Sender<Result<Solved, SolveError>>,
+}
+
+/// What callers and threads share.
+#[derive(Debug, Default)]
+struct Load {
+    waiting: AtomicUsize,
+    /// Moving average of how long a solve takes, in milliseconds.
+    recent: AtomicU64,
+}
+
+/// The threads and their queue.
+#[derive(Debug)]
+pub struct Solvers {
+    /// `None` once closed.
+    queue: Mutex<Option<SyncSender<Job>>>,
+    threads: Mutex<Vec<JoinHandle<()>>>,
+    number: usize,
+    load: Arc<Load>,
+}
+
+impl Solvers {
+    /// Starts `number` threads, at least one, behind a queue of `length` requests.
+    ///
+    /// # Errors
+    /// The operating system's, if it refuses a thread.
+    pub fn start(number: usize, length: usize, certifier: Certifier) -> std::io::Result<Self> {
+        let number = number.max(1);
+        let (queue, jobs) = sync_channel(length.max(1));
+        let jobs = Arc::new(Mutex::new(jobs));
+        let load = Arc::new(Load::default());
+        let threads = (0..number)
+            .map(|i| {
+                let (jobs, load, certifier) = (Arc::clone(&jobs), Arc::clone(&load), Arc::clone(&certifier));
+                std::thread::Builder::new().name(format!("solver-{i}")).spawn(move || work(&jobs, &load, &certifier))
+            })
+            .collect::<Result<Vec<_>, _>>()?;
+        Ok(Self { queue: Mutex::new(Some(queue)), threads: Mutex::new(threads), number, load })
+    }
+
+    /// Has a request solved, once a thread is free.
+    ///
+    /// # Errors
+    /// A full queue, a panic inside the solve, or closed solvers.
+    pub(super) async fn solve(&self, request: Request) -> Result<Solved, SolveError> {
+        let (answer, outcome) = oneshot::channel();
+        self.enqueue(Job { request, accepted: Instant::now(), answer })?;
+        // A sender that is dropped unused means that its thread is gone.
+        outcome.await.unwrap_or(Err(SolveError::Stopped))
+    }
+
+    fn enqueue(&self, job: Job) -> Result<(), SolveError> {
+        let queue = own(&self.queue);
+        let queue = queue.as_ref().ok_or(SolveError::Stopped)?;
+        // Counted before the job can be taken off, so that the count never falls below zero.
+        let waiting = self.load.waiting.fetch_add(1, Ordering::Relaxed);
+        queue.try_send(job).map_err(|error| {
+            self.load.waiting.fetch_sub(1, Ordering::Relaxed);
+            match error {
+                TrySendError::Full(_) => SolveError::QueueFull { waiting, retry_after: self.retry_after(waiting) },
+                TrySendError::Disconnected(_) => SolveError::Stopped,
+            }
+        })
+    }
+
+    /// How long until half of those waiting are through, from a second to two minutes.
+    fn retry_after(&self, waiting: usize) -> Duration {
+        let recent = self.load.recent.load(Ordering::Relaxed);
+        let milliseconds = recent.saturating_mul(waiting as u64) / (2 * self.number as u64);
+        Duration::from_millis(milliseconds).clamp(Duration::from_secs(1), Duration::from_secs(120))
+    }
+
+    /// What is wrong with the solvers, if anything is.
+    pub(super) fn fault(&self) -> Option<String> {
+        if own(&self.queue).is_none() {
+            return Some("the solvers have stopped".into());
+        }
+        let gone = own(&self.threads).iter().filter(|thread| thread.is_finished()).count();
+        (gone > 0).then(|| format!("{gone} of {} solver threads are gone", self.number))
+    }
+
+    /// Takes no more requests, solves those that were taken, and ends the threads.
+    pub(super) async fn close(&self) {
+        drop(own(&self.queue).take());
+        let threads = std::mem::take(&mut *own(&self.threads));
+        let joined = tokio::task::spawn_blocking(move || threads.into_iter().filter_map(|thread| thread.join().err()).count()).await;
+        if !matches!(joined, Ok(0)) {
+            tracing::error!("a solver thread did not end well");
+        }
+    }
+}
+
+/// Locks, whether or not another holder panicked: what is locked here is replaced as a whole or not at all.
+fn own<T>(mutex: &Mutex<T>) -> MutexGuard<'_, T> {
+    mutex.lock().unwrap_or_else(|poisoned| poisoned.into_inner())
+}
+
+fn work(jobs: &Mutex<Receiver<Job>>, load: &Load, certifier: &Certifier) {
+    loop {
+        // The lock is held while waiting: idle threads queue for the lock in place of the channel.
+        let Ok(Job { request, accepted, answer }) = own(jobs).recv() else { return };
+        load.waiting.fetch_sub(1, Ordering::Relaxed);
+        let started = Instant::now();
+        // The request is dropped afterwards and the core has no state: nothing half-changed can be seen.
+        let outcome = catch_unwind(AssertUnwindSafe(|| certifier(&request)));
+        let solved = started.elapsed();
+        let milliseconds = u64::try_from(solved.as_millis()).unwrap_or(u64::MAX);
+        let _ = load.recent.fetch_update(Ordering::Relaxed, Ordering::Relaxed, |recent| Some(recent - recent / 4 + milliseconds / 4));
+        let outcome = outcome
+            .map(|certification| Solved { certification, queued: started.duration_since(accepted), solved })
+            .map_err(|_| SolveError::Panicked);
+        // Whoever asked may have gone.
+        drop(answer.send(outcome));
+    }
+}
