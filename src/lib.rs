@@ -2,9 +2,10 @@
 
 #![deny(unsafe_code)]
 
-pub mod bound;
 #[cfg(feature = "service")]
 pub mod batch;
+pub mod bound;
+pub mod bundle;
 pub mod certificate;
 pub mod certify;
 #[cfg(feature = "service")]
@@ -32,7 +33,7 @@ pub mod scenario;
 pub mod service;
 pub mod solver;
 pub mod statistics;
-pub mod verify;
 #[cfg(feature = "service")]
 pub mod submission;
+pub mod verify;
 pub mod witness;

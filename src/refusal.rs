@@ -50,7 +50,7 @@ impl Refusal {
 fn explanation(certificate: &Certificate) -> String {
     match certificate.reason {
         Some(Reason::ZeroBound) => {
-            let min_entropy: f64 = certificate.targets.iter().map(|target| target.min_entropy).sum();
+            let min_entropy: f64 = certificate.targets.iter().filter_map(|target| target.min_entropy).sum();
             if min_entropy > 0.0 {
                 format!(
                     "The bound proves {min_entropy:.1} bits of min-entropy, but what is subtracted for the published counts and the \

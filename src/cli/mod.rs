@@ -1,7 +1,11 @@
 //! The command line: one file a command.
 
+mod certify;
+mod demo;
+mod document;
 mod openapi;
 mod serve;
+mod verify;
 
 use std::process::ExitCode;
 
@@ -20,6 +24,9 @@ pub struct CommandLine {
 #[derive(Subcommand)]
 enum Command {
     Serve(serve::Serve),
+    Certify(certify::Certify),
+    Verify(verify::Verify),
+    Demo(demo::Demo),
     Openapi(openapi::Openapi),
 }
 
@@ -27,6 +34,9 @@ enum Command {
 pub fn run() -> ExitCode {
     let outcome = match CommandLine::parse().command {
         Command::Serve(command) => command.run(),
+        Command::Certify(command) => command.run(),
+        Command::Verify(command) => command.run(),
+        Command::Demo(command) => command.run(),
         Command::Openapi(command) => command.run(),
     };
     outcome.unwrap_or_else(|error| {

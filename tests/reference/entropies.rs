@@ -12,7 +12,8 @@ fn mean_shannon_entropy_of_the_two_to_one_code() {
     for (visibility, leakage, low, high) in [(1.0, 0.0, 0.5865, 0.600876), (0.99, 0.0, 0.5067, 0.518205), (0.99, 1e-3, 0.4803, 0.490386)] {
         let scenario = scenario(4, 2, 2, 2, leakage);
         let place = code(2, visibility);
-        let found = power_entropy(&scenario, Setting { x: 0, y: 0 }, Place::Behaviour(&place), 1 << 10, Level::Standard, Limits::default()).unwrap();
+        let found = power_entropy(&scenario, Setting { x: 0, y: 0 }, Place::Behaviour(&place), 1 << 10, Level::Standard, Limits::default())
+            .unwrap();
         let bits = -found.bound.rounded_up() / 2f64.ln();
         println!("visibility {visibility}, leakage {leakage}: {bits} bit, rounding cost {:.1e}", found.witness.rounding_cost());
         assert!(bits >= low && bits <= high, "{bits}");

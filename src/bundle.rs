@@ -1,0 +1,82 @@
+//! A record together with the witnesses it names: all that is needed to check it elsewhere.
+
+use std::collections::BTreeMap;
+
+use serde::{Deserialize, Serialize};
+use serde_json::{Map, Value};
+
+use crate::{
+    certificate::Certificate,
+    fault::{Fault, parse},
+    verify::{Discrepancy, verify},
+    witness::witness::Witness,
+};
+
+/// What a service adds to a certificate when it records it. Nothing of this can be recomputed.
+const ENVELOPE: [&str; 8] = ["id", "rig", "profile_version", "recorded_at", "started_at", "ended_at", "leakage_source", "timings"];
+
+/// Witness documents by the digests of their canonical bytes.
+pub type Witnesses = BTreeMap<String, Witness>;
+
+/// The document that `certify --bundle` prints and `verify` reads.
+#[derive(Debug, Clone, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct Bundle {
+    pub record: Map<String, Value>,
+    pub witnesses: Witnesses,
+}
+
+/// The witnesses of a certification as the service hands them out.
+#[derive(Debug, Clone, Deserialize)]
+#[serde(deny_unknown_fields)]
+struct HandedOut {
+    #[serde(rename = "certification")]
+    _certification: String,
+    witnesses: Witnesses,
+}
+
+impl Bundle {
+    /// Reads a bundle.
+    ///
+    /// # Errors
+    /// The first deviation from the shape.
+    pub fn read(text: &[u8]) -> Result<Self, Fault> {
+        parse(text)
+    }
+
+    /// Puts a bundle together from a record and the witnesses that the service hands out for it.
+    ///
+    /// # Errors
+    /// The first deviation from the shape of either.
+    pub fn join(record: &[u8], witnesses: &[u8]) -> Result<Self, Fault> {
+        let handed_out: HandedOut = parse(witnesses)?;
+        Ok(Self { record: parse(record)?, witnesses: handed_out.witnesses })
+    }
+
+    /// The certificate within the record.
+    ///
+    /// # Errors
+    /// The first deviation from the shape, with a pointer into the record.
+    pub fn certificate(&self) -> Result<Certificate, Fault> {
+        let body: Map<String, Value> =
+            self.record.iter().filter(|(key, _)| !ENVELOPE.contains(&key.as_str())).map(|(k, v)| (k.clone(), v.clone())).collect();
+        parse(Value::Object(body).to_string().as_bytes())
+    }
+
+    /// Re-checks the record against the witnesses, without a solver.
+    ///
+    /// # Errors
+    /// Every discrepancy; see [`verify`]. A witness that is filed under a digest not its own is one as well.
+    pub fn verify(&self) -> Result<(), Vec<Discrepancy>> {
+        let certificate = self.certificate().map_err(|fault| vec![Discrepancy::Request(fault)])?;
+        for (digest, witness) in &self.witnesses {
+            let actual = witness.digest();
+            if actual != *digest {
+                let pointer = format!("/witnesses/{digest}");
+                return Err(vec![Discrepancy::Value { pointer, recorded: digest.clone().into(), recomputed: actual.into() }]);
+            }
+        }
+        let witnesses: Vec<Witness> = self.witnesses.values().cloned().collect();
+        verify(&certificate, &witnesses)
+    }
+}
