@@ -148,7 +148,8 @@ impl Visit {
             201 => (body, String::new()),
             422 if body["certification"].is_string() => {
                 let path = body["certification"].as_str().unwrap_or_default().to_owned();
-                let why = format!("; {}: {}", body["reason"].as_str().unwrap_or("refused"), body["detail"].as_str().unwrap_or_default());
+                let why =
+                    format!("\n{:15}{}: {}", "", body["reason"].as_str().unwrap_or("refused"), body["detail"].as_str().unwrap_or_default());
                 (self.get(&path)?, why)
             }
             _ => bail!("the batch was answered with {status}: {body}"),
