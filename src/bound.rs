@@ -6,7 +6,7 @@ use num_traits::{One, Signed};
 
 use crate::{
     relaxation::{
-        cells::cover,
+        cells::{Cut, cover},
         level::Level,
         moments::Moments,
         program::Row,
@@ -196,15 +196,9 @@ pub fn power_entropy(scenario: &Scenario, target: Setting, place: Place, power: 
     let mut cuts = cover(outcomes, &wanted);
     let mut best: Option<Found> = None;
     for _ in 0..COVERS {
-        let question = Question {
-            claim: Claim::Power { target, power, cuts },
-            knowledge: knowledge(place),
-            leakage: scenario.leakage(),
-            leakage_holds: scenario.leakage_holds(),
-            slack: Slack::None,
-        };
-        let Attempt { found, facets, .. } = attempt(scenario.geometry(), &question, place, level, limits);
-        let (gap, vertices) = spread(&question.claim, outcomes, &facets);
+        let claim = Claim::Power { target, power, cuts };
+        let Attempt { found, facets, .. } = power_attempt(scenario, claim.clone(), place, level, limits);
+        let (gap, vertices) = spread(&claim, outcomes, &facets);
         let improves = |found: &Found| best.as_ref().is_none_or(|best| found.bound.exact() < best.bound.exact());
         best = found.filter(improves).or(best);
         if gap <= CHORD_GAP {
@@ -214,6 +208,30 @@ pub fn power_entropy(scenario: &Scenario, target: Setting, place: Place, power: 
         cuts = cover(outcomes, &wanted);
     }
     best
+}
+
+/// The same with a given cover of the distributions of the target's outcome, in one solve.
+pub fn power_entropy_in(
+    scenario: &Scenario,
+    target: Setting,
+    place: Place,
+    power: u32,
+    cuts: Vec<Option<Cut>>,
+    level: Level,
+    limits: Limits,
+) -> Option<Found> {
+    power_attempt(scenario, Claim::Power { target, power, cuts }, place, level, limits).found
+}
+
+fn power_attempt(scenario: &Scenario, claim: Claim, place: Place, level: Level, limits: Limits) -> Attempt {
+    let question = Question {
+        claim,
+        knowledge: knowledge(place),
+        leakage: scenario.leakage(),
+        leakage_holds: scenario.leakage_holds(),
+        slack: Slack::None,
+    };
+    attempt(scenario.geometry(), &question, place, level, limits)
 }
 
 /// The distribution of a target's outcome that a place suggests.

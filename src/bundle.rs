@@ -73,7 +73,11 @@ impl Bundle {
             let actual = witness.digest();
             if actual != *digest {
                 let pointer = format!("/witnesses/{digest}");
-                return Err(vec![Discrepancy::Value { pointer, recorded: digest.clone().into(), recomputed: actual.into() }]);
+                return Err(vec![Discrepancy::Value {
+                    pointer,
+                    recorded: Value::from(digest.clone()).into(),
+                    recomputed: Value::from(actual).into(),
+                }]);
             }
         }
         let witnesses: Vec<Witness> = self.witnesses.values().cloned().collect();

@@ -32,6 +32,8 @@ pub enum Reason {
     OutsideModel,
     /// No witness passed the exact check.
     Unverified,
+    /// The batch began before its commitment was recorded.
+    Uncommitted,
 }
 
 /// Failure probabilities as recorded.
@@ -80,6 +82,31 @@ impl TargetCertificate {
     }
 }
 
+/// The account of a block of rounds with memory, all targets together. Every number follows from the counts and the commitment.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[serde(deny_unknown_fields)]
+pub struct BlockCertificate {
+    /// `sha256:` digest of the commitment.
+    pub commitment: String,
+    /// Rounds at target settings.
+    pub target_rounds: u64,
+    /// `Σ n log2 F` over all settings and outcomes, rounded down.
+    pub log2_product: f64,
+    /// `(Σ n log2 F − log2(1/δ)) / β`, in bits, rounded down, before anything is subtracted.
+    pub min_entropy: f64,
+    /// Bits subtracted because the counts of all settings are public, rounded up.
+    pub publication_cost: f64,
+    /// Bits subtracted for the hash, rounded up.
+    pub hashing_cost: f64,
+    /// Whole bits that may be extracted from the outcomes of the target settings together.
+    pub certified_bits: u64,
+    /// Random bits that choosing the settings takes, per round, rounded up.
+    pub setting_cost_per_round: f64,
+    /// Certified bits per round of the block minus what choosing the settings takes; negative where more goes in than comes out.
+    pub net_bits_per_round: f64,
+}
+
 /// Proof that the numbers contradict the declaration, and what would explain them.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 #[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
@@ -121,6 +148,9 @@ pub struct Certificate {
     #[cfg_attr(feature = "service", schema(value_type = Option<Vec<Vec<Vec<Vec<f64>>>>>))]
     pub region: Option<Table<[f64; 2]>>,
     pub targets: Vec<TargetCertificate>,
+    /// Rounds with memory only.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub block: Option<BlockCertificate>,
     pub certified_bits: u64,
     /// Certified bits over all rounds of the batch, rounded down.
     pub bits_per_round: f64,

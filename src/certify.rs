@@ -100,6 +100,7 @@ impl Draft {
             level: request.level,
             region,
             targets: Vec::new(),
+            block: None,
             certified_bits: 0,
             bits_per_round: 0.0,
             outside_model: None,
@@ -214,7 +215,7 @@ impl TargetCertificate {
 }
 
 impl FailureTotal {
-    fn new(failure: crate::request::Failure) -> Self {
+    pub(crate) fn new(failure: crate::request::Failure) -> Self {
         let crate::request::Failure { estimation, hashing } = failure;
         Self { estimation, hashing, total: (estimation + hashing).next_up() }
     }

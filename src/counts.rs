@@ -138,3 +138,29 @@ impl Behaviour {
         &self.table[setting.x][setting.y]
     }
 }
+
+/// Checks that a setting distribution `[x][y]` has one positive probability per setting, and that they add up to 1 up to `slack`.
+///
+/// # Errors
+/// The first entry or row that is wrong; pointers are relative to the table.
+pub fn check_distribution(distribution: &[Vec<f64>], geometry: Geometry, slack: f64) -> Result<(), Fault> {
+    let Geometry { preparations, measurements, .. } = geometry;
+    if distribution.len() != preparations {
+        let detail = format!("needs one row per preparation: {preparations}, has {}", distribution.len());
+        return Err(Fault::new("", detail));
+    }
+    for (x, row) in distribution.iter().enumerate() {
+        if row.len() != measurements {
+            let detail = format!("needs one probability per measurement: {measurements}, has {}", row.len());
+            return Err(Fault::new(format!("/{x}"), detail));
+        }
+        if let Some(y) = row.iter().position(|p| !(*p > 0.0 && *p <= 1.0)) {
+            return Err(Fault::new(format!("/{x}/{y}"), format!("a setting's probability is above 0 and at most 1, is {}", row[y])));
+        }
+    }
+    let sum: f64 = distribution.iter().flatten().sum();
+    if (sum - 1.0).abs() > slack {
+        return Err(Fault::new("", format!("the probabilities of all settings add up to 1, not to {sum}")));
+    }
+    Ok(())
+}

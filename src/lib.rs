@@ -54,6 +54,7 @@ pub mod certificate;
 pub mod certify;
 #[cfg(feature = "service")]
 pub mod clock;
+pub mod commitment;
 pub mod counts;
 pub mod entropy;
 pub mod exact;

@@ -31,7 +31,7 @@ pub enum Discrepancy {
     #[error("{pointer}: the witness {digest} does not prove what is claimed: {detail}")]
     Claim { pointer: String, digest: String, detail: &'static str },
     #[error("{pointer}: recorded {recorded}, recomputed {recomputed}")]
-    Value { pointer: String, recorded: Value, recomputed: Value },
+    Value { pointer: String, recorded: Box<Value>, recomputed: Box<Value> },
 }
 
 /// Re-checks a certificate. Witnesses are found by the digests of their canonical bytes; those that are not named are ignored.
@@ -161,6 +161,6 @@ fn compare(recorded: &Value, recomputed: &Value, pointer: String, differences: &
             }
         }
         _ if recorded == recomputed => {}
-        _ => differences.push(Discrepancy::Value { pointer, recorded: recorded.clone(), recomputed: recomputed.clone() }),
+        _ => differences.push(Discrepancy::Value { pointer, recorded: recorded.clone().into(), recomputed: recomputed.clone().into() }),
     }
 }

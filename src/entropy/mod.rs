@@ -2,4 +2,5 @@
 
 pub mod extraction;
 pub mod logarithm;
+pub mod memory;
 pub mod power;

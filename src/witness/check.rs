@@ -370,13 +370,7 @@ impl CheckedWitness {
     /// leakage where it is not, or if the intervals hold no behaviour.
     pub fn bound(&self, place: Place, leakage: &[f64], leakage_holds: LeakageReading) -> Result<CheckedBound, CheckError> {
         self.applies(leakage, leakage_holds)?;
-        let constants = self.witness.constants.iter().enumerate().map(|(group, constant)| {
-            let multipliers = self.witness.leakage.get(group).or(self.witness.leakage.first());
-            let products =
-                multipliers.into_iter().flatten().zip(leakage).map(|(multiplier, epsilon)| self.unit(*multiplier) * decimal(*epsilon));
-            self.constant(*constant) + products.sum::<BigRational>()
-        });
-        let constant = constants.max().ok_or(CheckError::Range)?;
+        let constant = self.largest_constant(leakage)?;
         Ok(CheckedBound { value: constant + self.worst_behaviour(place)? })
     }
 
@@ -394,6 +388,28 @@ impl CheckedWitness {
         let value = constants.max().ok_or(CheckError::Range)? + self.worst_behaviour(place)?;
         let slope: BigRational = self.witness.leakage.iter().flatten().map(|multiplier| self.unit(*multiplier)).sum();
         Ok(slope.is_positive().then(|| -value / slope))
+    }
+
+    /// `κ`, with the declared leakage in it, and `ν` of the affine bound `Σ_e c_e ≤ κ + ν·p`, for use round by round.
+    ///
+    /// # Errors
+    /// [`CheckError::Inapplicable`] as for [`Self::bound`].
+    pub fn affine(&self, leakage: &[f64], leakage_holds: LeakageReading) -> Result<(BigRational, Table<BigRational>), CheckError> {
+        self.applies(leakage, leakage_holds)?;
+        let constant = self.largest_constant(leakage)?;
+        let rational = |values: &Vec<i64>| values.iter().map(|value| self.unit(*value)).collect();
+        Ok((constant, self.witness.behaviour.iter().map(|table| table.iter().map(rational).collect()).collect()))
+    }
+
+    /// `max_e (κ_e + μ^e·ε)`.
+    fn largest_constant(&self, leakage: &[f64]) -> Result<BigRational, CheckError> {
+        let constants = self.witness.constants.iter().enumerate().map(|(group, constant)| {
+            let multipliers = self.witness.leakage.get(group).or(self.witness.leakage.first());
+            let products =
+                multipliers.into_iter().flatten().zip(leakage).map(|(multiplier, epsilon)| self.unit(*multiplier) * decimal(*epsilon));
+            self.constant(*constant) + products.sum::<BigRational>()
+        });
+        constants.max().ok_or(CheckError::Range)
     }
 
     fn unit(&self, integer: i64) -> BigRational {

@@ -5,5 +5,6 @@ mod entropies;
 mod extraction;
 mod guessing;
 mod intervals;
+mod memory;
 
 mod scores;
