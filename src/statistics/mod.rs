@@ -1,4 +1,5 @@
-//! From counts to frequencies and confidence regions.
+//! From counts to frequencies, confidence regions and limits.
 
 pub mod interval;
+pub mod poisson;
 pub mod region;
