@@ -1,5 +1,7 @@
-//! From counts to frequencies, confidence regions and limits.
+//! From counts to frequencies, confidence regions and limits, and tests of the data's quality.
 
+pub mod chi_squared;
 pub mod interval;
 pub mod poisson;
+pub mod quality;
 pub mod region;
