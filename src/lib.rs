@@ -9,6 +9,7 @@ pub mod counts;
 pub mod entropy;
 pub mod exact;
 pub mod fault;
+pub mod leakage;
 pub mod relaxation;
 pub mod request;
 pub mod scenario;
