@@ -4,5 +4,6 @@ mod codes;
 mod extraction;
 mod guessing;
 mod intervals;
+mod leakage;
 
 mod scores;
