@@ -61,6 +61,7 @@ pub mod exact;
 pub mod fault;
 #[cfg(feature = "service")]
 pub mod http;
+pub mod leakage;
 #[cfg(feature = "service")]
 pub mod ledger;
 #[cfg(feature = "service")]

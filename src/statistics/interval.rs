@@ -29,15 +29,10 @@ pub fn ln_lower_tail_bound(k: u64, n: u64, p: f64) -> f64 {
     if k >= n || ratio(0.0) >= 1.0 {
         return 0.0;
     }
-    let pieces = [
-        libm::lgamma(trials + 1.0),
-        -libm::lgamma(successes + 1.0),
-        -libm::lgamma(failures + 1.0),
-        successes * libm::log(p),
-        failures * libm::log1p(-p),
-    ];
-    let size: f64 = pieces.iter().map(|piece| piece.abs()).sum();
-    let ln_pmf = pieces.iter().sum::<f64>() + ALLOWANCE * (1.0 + size);
+    let (ln_choices, choices_size) = ln_choices(k, n);
+    let (hits, misses) = (successes * libm::log(p), failures * libm::log1p(-p));
+    let size = choices_size + hits.abs() + misses.abs();
+    let ln_pmf = ln_choices + hits + misses + ALLOWANCE * (1.0 + size);
     let (mut term, mut sum) = (1.0, 1.0);
     let mut i = 0u64;
     while i < k.min(TERMS) && term > f64::EPSILON * sum {
@@ -50,6 +45,21 @@ pub fn ln_lower_tail_bound(k: u64, n: u64, p: f64) -> f64 {
         sum += term * next / (1.0 - next);
     }
     ln_pmf + libm::log(sum * (1.0 + ALLOWANCE))
+}
+
+/// `ln C(n, k)` and the size of the summands it was made of, to which its rounding errors are proportional.
+///
+/// Near the ends the factors are taken one by one: the logarithms of the factorials would be of size `n ln n`, and their allowance would
+/// widen the interval of rare events in very many trials.
+fn ln_choices(k: u64, n: u64) -> (f64, f64) {
+    let few = k.min(n - k);
+    if few <= TERMS {
+        let sum: f64 = (0..few).map(|j| libm::log((n - j) as f64 / (j + 1) as f64)).sum();
+        // Every logarithm is at least 0 and every partial sum is rounded once.
+        return (sum, few as f64 * (1.0 + sum));
+    }
+    let [all, hits, misses] = [n, k, n - k].map(|count| libm::lgamma(count as f64 + 1.0));
+    (all - hits - misses, all + hits + misses)
 }
 
 /// Upper endpoint `u(k)`: a p, as small as bisection finds, with `P(Bin(n, p) ≤ k) ≤ α/2` confirmed. Exactly 1 for `k = n`.
@@ -78,6 +88,18 @@ fn upper(k: u64, n: u64, alpha: f64) -> f64 {
 pub fn clopper_pearson(k: u64, n: u64, alpha: f64) -> [f64; 2] {
     let low = (1.0 - upper(n - k, n, alpha)).next_down().next_down();
     [low.max(0.0), upper(k, n, alpha)]
+}
+
+/// One-sided upper limit: the true probability of k successes in n trials, `n > 0`, exceeds it with probability at most `failure`, in
+/// `(0, 0.5]`. Rounded up.
+pub fn upper_limit(k: u64, n: u64, failure: f64) -> f64 {
+    upper(k, n, 2.0 * failure)
+}
+
+/// One-sided lower limit: the true probability of k successes in n trials, `n > 0`, is below it with probability at most `failure`, in
+/// `(0, 0.5]`. Rounded down, never negative.
+pub fn lower_limit(k: u64, n: u64, failure: f64) -> f64 {
+    (1.0 - upper(n - k, n, 2.0 * failure)).next_down().next_down().max(0.0)
 }
 
 #[cfg(test)]
@@ -127,6 +149,28 @@ mod tests {
             let exact = crate::exact::round_up(&exact_tail(k, n, p)).ln();
             assert!(bound >= exact && bound <= exact + 0.05, "{bound} {exact}");
         }
+    }
+
+    #[test]
+    fn one_sided_limits_spend_the_whole_failure_on_one_side() {
+        for (k, n, failure) in [(0u64, 10u64, 0.5), (4, 20, 0.05), (9, 14, 1e-9)] {
+            let tail = decimal(failure);
+            let high = upper_limit(k, n, failure);
+            assert!(exact_tail(k, n, high) <= tail && exact_tail(k, n, high - 1e-9) > tail, "{k} of {n} at {failure}");
+            let low = lower_limit(n - k, n, failure);
+            assert!(exact_tail(k, n, 1.0 - low) <= tail && exact_tail(k, n, 1.0 - low - 1e-9) > tail, "{k} of {n} at {failure}");
+        }
+        assert_eq!(lower_limit(0, 10, 0.1), 0.0);
+        assert_eq!(upper_limit(10, 10, 0.1), 1.0);
+    }
+
+    #[test]
+    fn rare_events_in_very_many_trials_have_narrow_intervals() {
+        // (1 − p)^n = α/2, and for one event np close to the solution of (1 + λ) e^{−λ} = 5e-13.
+        let n = 1u64 << 52;
+        assert!((clopper_pearson(0, n, 1e-12)[1] * n as f64 / -(5e-13f64.ln()) - 1.0).abs() < 1e-10);
+        let one = clopper_pearson(1, n, 1e-12)[1] * n as f64;
+        assert!(((1.0 + one) * (-one).exp() / 5e-13 - 1.0).abs() < 1e-6, "{one}");
     }
 
     #[test]

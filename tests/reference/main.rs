@@ -5,6 +5,6 @@ mod entropies;
 mod extraction;
 mod guessing;
 mod intervals;
+mod leakage;
 mod memory;
-
 mod scores;
