@@ -46,6 +46,10 @@ impl Client {
     }
 
     pub fn call(&self, method: &str, path: &str, headers: &[(&str, &str)], body: Option<&[u8]>) -> Reply {
+        self.try_call(method, path, headers, body).expect("an answer")
+    }
+
+    fn try_call(&self, method: &str, path: &str, headers: &[(&str, &str)], body: Option<&[u8]>) -> Option<Reply> {
         let mut request = Request::builder().method(method).uri(format!("{}{path}", self.base));
         for (name, value) in headers {
             request = request.header(*name, *value);
@@ -54,9 +58,9 @@ impl Client {
             Some(body) => self.agent.run(request.body(body.to_vec()).expect("a request")),
             None => self.agent.run(request.body(()).expect("a request")),
         };
-        let mut answer = answer.expect("an answer");
+        let mut answer = answer.ok()?;
         let headers = answer.headers().iter().map(|(name, value)| (name.to_string(), value.to_str().unwrap_or("").to_owned())).collect();
-        Reply { status: answer.status().as_u16(), headers, body: answer.body_mut().read_to_vec().expect("a body") }
+        Some(Reply { status: answer.status().as_u16(), headers, body: answer.body_mut().read_to_vec().ok()? })
     }
 
     pub fn get(&self, path: &str) -> Reply {
@@ -71,6 +75,12 @@ impl Client {
     pub fn post_batch(&self, rig: &str, key: &str, batch: &Value) -> Reply {
         let headers = [("content-type", "application/json"), ("idempotency-key", key)];
         self.call("POST", &format!("/v1/rigs/{rig}/batches"), &headers, Some(batch.to_string().as_bytes()))
+    }
+
+    /// As [`Self::post_batch`]; `None` if the server has gone.
+    pub fn try_post_batch(&self, rig: &str, key: &str, batch: &Value) -> Option<Reply> {
+        let headers = [("content-type", "application/json"), ("idempotency-key", key)];
+        self.try_call("POST", &format!("/v1/rigs/{rig}/batches"), &headers, Some(batch.to_string().as_bytes()))
     }
 
     pub fn post_csv(&self, rig: &str, key: &str, query: &str, rows: &str) -> Reply {

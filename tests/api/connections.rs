@@ -67,3 +67,21 @@ fn an_idle_connection_does_not_keep_the_server_from_stopping() {
     drop(idle);
     drop(client);
 }
+
+#[test]
+fn who_says_nothing_is_not_waited_for() {
+    let running = Running::new();
+    let begun = std::time::Instant::now();
+    // One says nothing, the other stops in the middle.
+    let streams = ["", "GET /livez HTTP/1.1\r\nHost: x\r\n"].map(|head| {
+        let mut stream = TcpStream::connect(running.address).unwrap();
+        stream.set_read_timeout(Some(Duration::from_secs(30))).unwrap();
+        stream.write_all(head.as_bytes()).unwrap();
+        stream
+    });
+    for mut stream in streams {
+        // The server closes, with or without a word.
+        stream.read_to_end(&mut vec![]).unwrap();
+        assert!(begun.elapsed() < Duration::from_secs(15));
+    }
+}

@@ -1,8 +1,21 @@
 //! The database itself: what was written stays as it was written.
 
+use bitassay::{
+    certificate::{Reason, Verdict},
+    clock::Stamp,
+    ledger::{
+        Ledger,
+        history::Filter,
+        rows::Entry,
+        writer::{Expectation, WriteError},
+    },
+    profile::{Profile, RigName},
+    submission::{IdempotencyKey, Submission},
+};
 use sqlx::{AssertSqlSafe, Connection, SqliteConnection};
+use uuid::Uuid;
 
-use crate::server::{Running, batch, query, with_rig};
+use crate::server::{Running, batch, profile, query, with_rig};
 
 /// Runs a statement on the database; answers with what went wrong.
 fn refusal(running: &Running, sql: &str) -> Option<String> {
@@ -94,4 +107,61 @@ fn tables_hold_what_their_types_say() {
     }
     let right = "rig, profile_version, verdict, reason, recorded_at, certified_bits, rounds, failure, record";
     assert_eq!(refusal(&running, &format!("{columns}, {right} FROM certifications")), None);
+}
+
+fn entry(key: &str, witness: &str) -> Entry {
+    Entry {
+        id: Uuid::now_v7(),
+        rig: RigName::try_from("bench".to_owned()).unwrap(),
+        profile_version: 1,
+        verdict: Verdict::Refused,
+        reason: Some(Reason::ZeroBound),
+        recorded_at: Stamp::from_microseconds(0).unwrap(),
+        certified_bits: 0,
+        rounds: 10,
+        failure: None,
+        record: format!("{{\"key\":\"{key}\"}}"),
+        witnesses: vec![(witness.to_owned(), "{}".to_owned())],
+        submission: Submission { key: IdempotencyKey::try_from(key).unwrap(), body_digest: "sha256:0".into() },
+        refusal: None,
+    }
+}
+
+#[tokio::test]
+async fn an_item_that_fails_takes_no_other_with_it() {
+    let folder = tempfile::tempdir().unwrap();
+    let ledger = Ledger::open(&folder.path().join("ledger.sqlite")).await.unwrap();
+    let rig = RigName::try_from("bench".to_owned()).unwrap();
+    let profile: Profile = serde_json::from_value(profile()).unwrap();
+    let now = Stamp::from_microseconds(0).unwrap();
+    ledger.writer.keep_profile(rig.clone(), profile, Expectation::Unstated, now).await.unwrap();
+
+    let witness = format!("sha256:{}", "0".repeat(64));
+    // All of these wait before the writer has its turn: they share a transaction. The second fails at its witness, after its
+    // certification was inserted.
+    let (first, second, third, again, reused) = tokio::join!(
+        ledger.writer.keep_entry(entry("a", &witness)),
+        ledger.writer.keep_entry(entry("b", "no digest")),
+        ledger.writer.keep_entry(entry("c", &witness)),
+        ledger.writer.keep_entry(entry("a", &witness)),
+        async {
+            let mut reused = entry("a", &witness);
+            reused.submission.body_digest = "sha256:1".into();
+            ledger.writer.keep_entry(reused).await
+        },
+    );
+    let first = first.unwrap();
+    assert!(!first.replayed && !third.unwrap().replayed);
+    assert!(matches!(second, Err(WriteError::Ledger(_))), "{second:?}");
+    let again = again.unwrap();
+    assert!(again.replayed && again.answered == first.answered);
+    assert!(matches!(reused, Err(WriteError::KeyReused)), "{reused:?}");
+
+    let page = ledger.history.page(&Filter::default(), 10).await.unwrap();
+    let kept: Vec<(u64, &str)> = page.items.iter().map(|item| (item.entry, item.record.as_str())).collect();
+    assert_eq!(kept, [(1, r#"{"key":"c"}"#), (0, r#"{"key":"a"}"#)]);
+    assert!(ledger.history.answered(&rig, &IdempotencyKey::try_from("b").unwrap()).await.unwrap().is_none());
+
+    ledger.close().await;
+    assert!(matches!(ledger.writer.keep_entry(entry("d", &witness)).await, Err(WriteError::Ledger(_))));
 }

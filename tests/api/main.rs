@@ -4,6 +4,7 @@ mod bad_requests;
 mod batches;
 mod certifications;
 mod client;
+mod command_line;
 mod connections;
 mod examples;
 mod health;
