@@ -283,10 +283,9 @@ fn a_stopping_server_finishes_what_it_accepted() {
     drop(folder);
 }
 
-#[test]
-fn who_hangs_up_finds_the_answer_later() {
+/// Posts a batch under the key `k` and hangs up as soon as a solve has begun.
+fn post_and_hang_up(running: &Running, gate: &Gate) {
     use std::io::Write;
-    let (running, gate) = gated(1, 8);
     let body = batch(1000).to_string();
     let mut stream = std::net::TcpStream::connect(running.address).unwrap();
     write!(
@@ -298,9 +297,31 @@ fn who_hangs_up_finds_the_answer_later() {
     gate.wait_for(1);
     drop(stream);
     std::thread::sleep(Duration::from_millis(100));
+}
+
+#[test]
+fn who_hangs_up_finds_the_answer_later() {
+    let (running, gate) = gated(1, 8);
+    post_and_hang_up(&running, &gate);
     gate.open();
     let reply = running.client().post_batch("bench", "k", &batch(1000)).expect(201);
     assert_eq!(reply.header("idempotency-replayed"), Some("true"));
+}
+
+#[test]
+fn a_stopping_server_finishes_what_nobody_waits_for_too() {
+    let (mut running, gate) = gated(1, 8);
+    post_and_hang_up(&running, &gate);
+    running.signal();
+    std::thread::sleep(Duration::from_millis(200));
+    gate.open();
+    let (database, folder) = (running.database.clone(), running.folder.take());
+    running.stop();
+    let again = Running::on(&database, Solving::default());
+    let reply = again.client().post_batch("bench", "k", &batch(1000)).expect(201);
+    assert_eq!(reply.header("idempotency-replayed"), Some("true"));
+    again.stop();
+    drop(folder);
 }
 
 #[test]

@@ -69,6 +69,26 @@ fn an_idle_connection_does_not_keep_the_server_from_stopping() {
 }
 
 #[test]
+fn a_stopping_server_hears_out_who_has_begun() {
+    let mut running = Running::new();
+    let body = crate::server::profile().to_string();
+    let mut stream = TcpStream::connect(running.address).unwrap();
+    let head =
+        format!("PUT /v1/rigs/bench HTTP/1.1\r\nHost: x\r\nContent-Type: application/json\r\nContent-Length: {}\r\n\r\n", body.len());
+    stream.write_all(head.as_bytes()).unwrap();
+    stream.write_all(&body.as_bytes()[..10]).unwrap();
+    std::thread::sleep(Duration::from_millis(200));
+    running.signal();
+    std::thread::sleep(Duration::from_millis(200));
+    assert!(TcpStream::connect(running.address).is_err(), "a new connection was taken");
+    stream.write_all(&body.as_bytes()[10..]).unwrap();
+    let mut answer = String::new();
+    stream.read_to_string(&mut answer).unwrap();
+    assert!(answer.starts_with("HTTP/1.1 201 ") && answer.contains("connection: close"), "{answer}");
+    running.stop();
+}
+
+#[test]
 fn who_says_nothing_is_not_waited_for() {
     let running = Running::new();
     let begun = std::time::Instant::now();
