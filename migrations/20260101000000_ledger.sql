@@ -51,6 +51,6 @@ CREATE TABLE submissions (
     idempotency_key TEXT    NOT NULL,
     body_digest     TEXT    NOT NULL,
     entry           INTEGER NOT NULL UNIQUE REFERENCES certifications (entry),
-    refusal         TEXT    CHECK (json_valid(refusal)),
+    refusal         TEXT    CHECK (refusal IS NULL OR json_valid(refusal)),
     PRIMARY KEY (rig, idempotency_key)
 ) STRICT;

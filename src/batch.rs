@@ -8,8 +8,9 @@ use sha2::{Digest, Sha256};
 use crate::{
     clock::Stamp,
     counts::Table,
-    fault::{Fault, parse},
+    fault::{Fault, parse_object},
     profile::Profile,
+    relaxation::cost::choose,
     request::{LostRounds, Request, RequestDocument},
     scenario::{LeakageDocument, ScenarioDocument},
 };
@@ -28,7 +29,7 @@ pub enum BatchFault {
 /// A batch as it is posted in JSON.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize, utoipa::ToSchema)]
 #[serde(deny_unknown_fields)]
-#[schema(as = Batch)]
+#[schema(as = Batch, description = "What a rig counted.")]
 pub struct BatchDocument {
     /// How often each outcome was seen, `[x][y][b]`.
     #[schema(value_type = Vec<Vec<Vec<u64>>>)]
@@ -107,7 +108,7 @@ impl Posted {
     pub fn read(self, profile: &Profile) -> Result<Batch, BatchFault> {
         match self {
             Self::Json(text) => {
-                parse::<BatchDocument>(&text).map_err(BatchFault::Malformed)?.under(profile).map_err(BatchFault::Impossible)
+                parse_object::<BatchDocument>(&text).map_err(BatchFault::Malformed)?.under(profile).map_err(BatchFault::Impossible)
             }
             Self::Csv { text, options } => {
                 let rows = rows::Rows::read(&text).map_err(BatchFault::Malformed)?;
@@ -131,6 +132,8 @@ impl BatchDocument {
         let mut scenario = profile.scenario().clone();
         if let Some(leakage) = leakage {
             scenario = scenario.with_leakage(leakage)?;
+            // A leakage that is not exactly zero makes a solve larger, possibly too large.
+            choose(profile.level(), &scenario).map_err(|fault| fault.under("/leakage"))?;
         }
         // Scenario, rounds and failure come from a valid profile: what can still be wrong is in the batch, under its own name.
         let request = Request::try_from(RequestDocument {

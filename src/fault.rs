@@ -37,6 +37,18 @@ pub fn parse<T: DeserializeOwned>(text: &[u8]) -> Result<T, Fault> {
     Ok(value)
 }
 
+/// Reads a JSON object into its plain type. An array of the members' values in order, which the derived readers also take, is
+/// turned away: nobody means it.
+///
+/// # Errors
+/// As [`parse`], and for whatever is no object.
+pub fn parse_object<T: DeserializeOwned>(text: &[u8]) -> Result<T, Fault> {
+    if text.trim_ascii_start().first() == Some(&b'[') {
+        return Err(Fault::new("", "expected an object, not an array"));
+    }
+    parse(text)
+}
+
 fn pointer_of(path: &serde_path_to_error::Path) -> String {
     use serde_path_to_error::Segment;
     path.iter()

@@ -7,7 +7,7 @@ use serde::{Deserialize, Serialize};
 use crate::{
     counts::NORMALISATION_SLACK,
     fault::Fault,
-    relaxation::level::LevelChoice,
+    relaxation::{cost::choose, level::LevelChoice},
     request::{Failure, RoundModel},
     scenario::{Geometry, Scenario, ScenarioDocument},
 };
@@ -54,10 +54,10 @@ impl RigName {
 const MAX_LABEL: usize = 64;
 const MAX_NOTES: usize = 4096;
 
-/// A rig's profile as it is written in a document; [`Profile`] is the validated form.
+/// A rig's profile: what its operator declares. In words that a document may hold; [`Profile`] is the validated form.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize, utoipa::ToSchema)]
 #[serde(deny_unknown_fields)]
-#[schema(as = Profile)]
+#[schema(as = Profile, description = "A rig's profile: what its operator declares.")]
 pub struct ProfileDocument {
     pub scenario: ScenarioDocument,
     pub rounds: RoundModel,
@@ -99,6 +99,9 @@ impl TryFrom<ProfileDocument> for Profile {
             return Err(Fault::new("/rounds", "rounds with memory need a commitment made before the data; this version has none"));
         }
         failure.check().map_err(|fault| fault.under("/failure"))?;
+        // Too large for every level is said now, and not when a batch comes in.
+        let culprit = if level == LevelChoice::Auto { "/scenario" } else { "/level" };
+        choose(level, &scenario).map_err(|fault| fault.under(culprit))?;
         if let Some(distribution) = &setting_distribution {
             check_distribution(distribution, scenario.geometry()).map_err(|fault| fault.under("/setting_distribution"))?;
         }

@@ -1,12 +1,18 @@
 //! What a rig really yields.
 
+use std::collections::BTreeMap;
+
+use num_rational::BigRational;
+use num_traits::Zero;
 use serde::Serialize;
 
 use crate::{
     certificate::Verdict,
     clock::Stamp,
+    exact::{decimal, round_down, round_up},
     ledger::{history::Window, rows::Tally},
     profile::RigName,
+    record::Summary,
 };
 
 /// The newest certification of a window.
@@ -49,8 +55,8 @@ pub struct RigYield {
 }
 
 impl RigYield {
-    /// Adds up tallies, newest first.
-    pub fn of(rig: RigName, window: Window, tallies: &[Tally]) -> Self {
+    /// Adds up tallies; `latest` is the head of the newest one's record.
+    pub fn of(rig: RigName, window: Window, tallies: &[Tally], latest: Option<Summary>) -> Self {
         let count = |verdict| tallies.iter().filter(|tally| tally.verdict == verdict).count() as u64;
         let sum = |part: fn(&Tally) -> u64| tallies.iter().fold(0u64, |sum, tally| sum.saturating_add(part(tally)));
         let (total_bits, total_rounds) = (sum(|tally| tally.certified_bits), sum(|tally| tally.rounds));
@@ -66,44 +72,33 @@ impl RigYield {
             certified: count(Verdict::Certified),
             estimates: count(Verdict::Estimate),
             refusals: count(Verdict::Refused),
-            latest: tallies.first().map(|tally| Latest {
-                certification: format!("/v1/certifications/{}", tally.id),
-                recorded_at: tally.recorded_at,
-                verdict: tally.verdict,
-                certified_bits: tally.certified_bits,
-                bits_per_round: quotient_below(tally.certified_bits, tally.rounds).unwrap_or(0.0),
+            latest: latest.map(|newest| Latest {
+                certification: format!("/v1/certifications/{}", newest.id),
+                recorded_at: newest.recorded_at,
+                verdict: newest.verdict,
+                certified_bits: newest.certified_bits,
+                bits_per_round: newest.bits_per_round,
             }),
             mean_bits_per_round: quotient_below(total_bits, total_rounds),
             total_bits,
             total_rounds,
-            total_failure: tallies.iter().filter_map(|tally| tally.failure).fold(0.0, sum_above),
+            total_failure: sum_above(tallies.iter().filter_map(|tally| tally.failure)),
         }
     }
 }
 
 /// `a / b`, rounded down; `None` if `b` is zero.
 fn quotient_below(a: u64, b: u64) -> Option<f64> {
-    if b == 0 {
-        return None;
-    }
-    let exact = |n: u64| n as f64 as u128 == u128::from(n);
-    let quotient = a as f64 / b as f64;
-    if exact(a) && exact(b) {
-        // One rounding: the remainder, which a fused multiply-add gives with its sign, tells its direction.
-        let above = libm::fma(quotient, b as f64, -(a as f64)) > 0.0;
-        return Some(if above { quotient.next_down() } else { quotient });
-    }
-    // Three roundings, each off by a 2⁻⁵³th at most, which is one step at most: three steps down are below.
-    Some(quotient.next_down().next_down().next_down().max(0.0))
+    (b > 0).then(|| round_down(&BigRational::new(a.into(), b.into())))
 }
 
-/// `a + b`, rounded up.
-fn sum_above(a: f64, b: f64) -> f64 {
-    let sum = a + b;
-    // Exactly what the sum lost, by Knuth's two-sum.
-    let rest = sum - a;
-    let lost = (a - (sum - rest)) + (b - rest);
-    if lost > 0.0 { sum.next_up() } else { sum }
+/// The sum of the decimals that are on record, rounded up.
+fn sum_above(values: impl Iterator<Item = f64>) -> f64 {
+    // Most batches of a rig have the same figure: added up by figure, a long window costs no more than a short one.
+    let mut times: BTreeMap<u64, u64> = BTreeMap::new();
+    values.for_each(|value| *times.entry(value.to_bits()).or_default() += 1);
+    let sum = times.into_iter().map(|(bits, times)| decimal(f64::from_bits(bits)) * BigRational::from_integer(times.into()));
+    round_up(&sum.fold(BigRational::zero(), |sum, part| sum + part))
 }
 
 #[cfg(test)]
@@ -125,26 +120,22 @@ mod tests {
             tally(Verdict::Estimate, 0, 0, None),
         ];
         let rig = RigName::try_from("r".to_owned()).unwrap();
-        let sum = RigYield::of(rig, Window::Batches(10), &tallies);
+        let sum = RigYield::of(rig, Window::Batches(10), &tallies, None);
         assert_eq!((sum.batches, sum.certified, sum.estimates, sum.refusals), (3, 1, 1, 1));
         assert_eq!((sum.total_bits, sum.total_rounds), (300, 2000));
-        let mean = sum.mean_bits_per_round.unwrap();
-        assert!(mean > 0.1499999 && libm::fma(mean, 2000.0, -300.0) <= 0.0);
-        assert!(sum.total_failure >= 4e-10 && sum.total_failure < 4.000001e-10);
-        assert_eq!(sum.latest.unwrap().verdict, Verdict::Refused);
+        assert_eq!(sum.mean_bits_per_round, Some(0.15));
+        assert_eq!(sum.total_failure, 4e-10);
     }
 
     #[test]
     fn quotients_and_sums_bound_what_they_stand_for() {
-        // 1/3 is not a double; 0.333…33 below it is.
-        let third = quotient_below(1, 3).unwrap();
-        assert!(libm::fma(third, 3.0, -1.0) <= 0.0 && third > 0.333333333333333);
+        assert_eq!(quotient_below(1, 3), Some(0.3333333333333333));
+        assert_eq!(quotient_below(2, 3), Some(0.6666666666666666));
         assert_eq!(quotient_below(1, 2), Some(0.5));
         assert_eq!(quotient_below(0, 5), Some(0.0));
         assert_eq!(quotient_below(5, 0), None);
-        let huge = quotient_below(u64::MAX, u64::MAX - 1).unwrap();
-        assert!(huge <= 1.0);
-        assert_eq!(sum_above(1.0, 1e-30), 1.0f64.next_up());
-        assert_eq!(sum_above(0.5, 0.25), 0.75);
+        assert_eq!(sum_above([1e-10, 1e-10, 1e-10].into_iter()), 3e-10);
+        assert_eq!(sum_above([1.0, 1e-30].into_iter()), 1.0f64.next_up());
+        assert_eq!(sum_above(std::iter::empty()), 0.0);
     }
 }

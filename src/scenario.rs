@@ -90,7 +90,7 @@ impl<'de> Deserialize<'de> for LeakageDocument {
 
 /// A scenario as it is written in a document; [`Scenario`] is the validated form.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
-#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema), schema(as = Scenario, description = "Sizes, leakage and target settings."))]
 #[serde(deny_unknown_fields)]
 pub struct ScenarioDocument {
     pub preparations: usize,

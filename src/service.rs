@@ -179,7 +179,11 @@ impl Service {
             return Ok(None);
         }
         let tallies = self.ledger.history.tallies(rig, window).await?;
-        Ok(Some(RigYield::of(rig.clone(), window, &tallies)))
+        let latest = match tallies.first() {
+            Some(newest) => self.ledger.history.summary(newest.id).await?,
+            None => None,
+        };
+        Ok(Some(RigYield::of(rig.clone(), window, &tallies, latest)))
     }
 
     /// Everything that must be well for batches to be taken, each under its name.

@@ -8,9 +8,11 @@ use axum::{
     http::{HeaderName, Response, StatusCode, header},
     response::IntoResponse,
 };
-use utoipa::IntoParams;
+use serde::Serialize;
+use utoipa::{IntoParams, ToSchema};
 
 use super::{
+    intake::LONGEST,
     negotiation::TakesJson,
     problem::{Culprit, PROBLEM_JSON, Problem, ProblemDocument},
     wire::{FromParameters, Key, Media, Parameters, Payload, Query, RigPath, json},
@@ -26,7 +28,7 @@ use crate::{
     service::{Service, SubmitError},
 };
 
-const BATCH_LIMIT: usize = 1024 * 1024;
+const BATCH_LIMIT: usize = LONGEST;
 
 /// What a batch in CSV form says in the query. A batch in JSON form says it in the body, and takes no parameters.
 #[derive(IntoParams)]
@@ -80,6 +82,17 @@ impl BatchQuery {
     }
 }
 
+/// What a 422 says; the `type` tells which.
+#[derive(Serialize, ToSchema)]
+#[serde(untagged)]
+#[expect(dead_code, reason = "describes answers that are written elsewhere")]
+enum NotCertified {
+    /// Recorded, but no bits may be extracted.
+    Refusal(Refusal),
+    /// Nothing was recorded.
+    Problem(ProblemDocument),
+}
+
 /// Certifies one batch, and records what came out before it answers.
 ///
 /// A batch that is sent again under its key is answered with the same bytes as before.
@@ -100,7 +113,7 @@ impl BatchQuery {
         (status = 404, description = "No such rig.", body = ProblemDocument, content_type = "application/problem+json"),
         (status = 413, description = "The body is too large.", body = ProblemDocument, content_type = "application/problem+json"),
         (status = 415, description = "The body is neither JSON nor CSV.", body = ProblemDocument, content_type = "application/problem+json"),
-        (status = 422, description = "Refused: recorded, but no bits may be extracted. Or, with another `type`, a batch that this rig cannot have produced, or a key that stands for another batch: then nothing was recorded.", content((Refusal = "application/problem+json"), (ProblemDocument = "application/problem+json"))),
+        (status = 422, description = "Refused: recorded, but no bits may be extracted. Or, with another `type`, a batch that this rig cannot have produced, or a key that stands for another batch: then nothing was recorded.", body = NotCertified, content_type = "application/problem+json"),
         (status = 503, description = "The queue is full; `Retry-After` says when to send the batch again.", body = ProblemDocument, content_type = "application/problem+json", headers(("Retry-After" = u64))),
     )
 )]

@@ -4,6 +4,7 @@ mod batches;
 mod certifications;
 mod condition;
 mod health;
+mod intake;
 mod negotiation;
 pub mod openapi;
 pub mod problem;

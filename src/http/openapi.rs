@@ -34,8 +34,17 @@ pub(super) struct Frame;
 /// # Errors
 /// The serialiser's.
 pub fn document() -> Result<String, serde_json::Error> {
-    let (_, document) = router::routes().split_for_parts();
+    let (_, mut document) = router::routes().split_for_parts();
+    open_certificate(&mut document);
     serde_json::to_string_pretty(&document).map(|text| text + "\n")
+}
+
+/// A record is a certificate with more members, so the certificate's schema must not forbid them, as reading one alone does.
+fn open_certificate(document: &mut utoipa::openapi::OpenApi) {
+    let schemas = document.components.as_mut().map(|components| &mut components.schemas);
+    if let Some(RefOr::T(Schema::Object(certificate))) = schemas.and_then(|schemas| schemas.get_mut("Certificate")) {
+        certificate.additional_properties = None;
+    }
 }
 
 /// This document.

@@ -19,7 +19,7 @@ use super::{
 };
 use crate::{
     clock::Stamp,
-    fault::parse,
+    fault::parse_object,
     ledger::{rows::ProfileVersion, writer::Kept},
     profile::{Profile, ProfileDocument, RigName},
     service::Service,
@@ -70,7 +70,7 @@ fn read_profile<const LIMIT: usize>(payload: &Payload<LIMIT>) -> Result<Profile,
         let detail = "A profile is application/json.";
         return Err(Problem::new(StatusCode::UNSUPPORTED_MEDIA_TYPE, detail).blaming(Culprit::Header("Content-Type")));
     }
-    let document: ProfileDocument = parse(&payload.bytes).map_err(|fault| Problem::body(StatusCode::BAD_REQUEST, fault))?;
+    let document: ProfileDocument = parse_object(&payload.bytes).map_err(|fault| Problem::body(StatusCode::BAD_REQUEST, fault))?;
     Profile::try_from(document).map_err(|fault| Problem::body(StatusCode::UNPROCESSABLE_ENTITY, fault))
 }
 

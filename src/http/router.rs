@@ -5,13 +5,14 @@ use std::{any::Any, sync::Arc};
 use axum::{
     Router,
     http::{Request, StatusCode, Uri},
+    middleware,
     response::IntoResponse,
 };
 use tower_http::{catch_panic::CatchPanicLayer, trace::TraceLayer};
 use utoipa::OpenApi;
 use utoipa_axum::{router::OpenApiRouter, routes};
 
-use super::{batches, certifications, health, openapi, problem::Problem, rigs, yields};
+use super::{batches, certifications, health, intake, openapi, problem::Problem, rigs, yields};
 use crate::service::Service;
 
 pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
@@ -35,6 +36,7 @@ pub(super) fn router(service: Arc<Service>) -> Router {
         .fallback(async |uri: Uri| Problem::not_found(format!("There is nothing at {}.", uri.path())))
         .method_not_allowed_fallback(async || Problem::new(StatusCode::METHOD_NOT_ALLOWED, "`Allow` lists the methods there are here."))
         .with_state(service)
+        .layer(middleware::from_fn(intake::take_in))
         .layer(CatchPanicLayer::custom(panicked))
         .layer(
             TraceLayer::new_for_http().make_span_with(

@@ -19,7 +19,7 @@ use crate::service::Service;
 /// Connections at a time; more wait unaccepted.
 const MAX_CONNECTIONS: usize = 256;
 /// How long a client may take over the head of a request, and how long a kept connection may lie idle.
-const HEAD_TIMEOUT: Duration = Duration::from_secs(15);
+const HEAD_TIMEOUT: Duration = Duration::from_secs(10);
 const MAX_HEADERS: usize = 64;
 /// How long to wait after the operating system refused a connection, for want of file descriptors perhaps.
 const ACCEPT_PAUSE: Duration = Duration::from_millis(100);

@@ -1,6 +1,6 @@
 //! What is taken from requests, and the shapes of answers that several resources share.
 
-use std::{str::FromStr, time::Duration};
+use std::str::FromStr;
 
 use axum::{
     body::{Body, Bytes, to_bytes},
@@ -12,15 +12,16 @@ use base64::{Engine, engine::general_purpose::URL_SAFE_NO_PAD};
 use serde::de::DeserializeOwned;
 use uuid::Uuid;
 
-use super::problem::{Culprit, Problem};
+use super::{
+    intake::too_large,
+    problem::{Culprit, Problem},
+};
 use crate::{
     fault,
     profile::RigName,
     submission::{IdempotencyKey, NoKey},
 };
 
-/// How long a client may take to send a body.
-const BODY_TIMEOUT: Duration = Duration::from_secs(30);
 /// How many items a page has unless asked for otherwise, and at most.
 const PAGE: u32 = 50;
 pub const LONGEST_PAGE: u32 = 200;
@@ -193,7 +194,7 @@ impl Media {
     }
 }
 
-/// A body of at most `LIMIT` bytes.
+/// A body of at most `LIMIT` bytes, which [`super::intake`] has let in.
 pub struct Payload<const LIMIT: usize> {
     pub media: Media,
     pub bytes: Bytes,
@@ -214,29 +215,13 @@ impl<const LIMIT: usize, S: Send + Sync> FromRequest<S> for Payload<LIMIT> {
             let detail = "The body is application/json, in UTF-8; a batch may also be text/csv.";
             return Err(unsupported(detail).blaming(Culprit::Header("Content-Type")));
         };
-        let too_large = || Problem::new(StatusCode::PAYLOAD_TOO_LARGE, format!("The body has at most {LIMIT} bytes here."));
-        let stated = headers.get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse::<u64>().ok());
-        if stated.is_some_and(|length| length > LIMIT as u64) {
-            return Err(too_large());
+        // The body has arrived already, and is not much longer than the longest that is taken.
+        let bytes = to_bytes(request.into_body(), usize::MAX).await.map_err(|_| Problem::malformed("The body did not arrive whole."))?;
+        if bytes.len() > LIMIT {
+            return Err(too_large(LIMIT));
         }
-        let read = tokio::time::timeout(BODY_TIMEOUT, to_bytes(request.into_body(), LIMIT)).await;
-        let read = read.map_err(|_| Problem::new(StatusCode::REQUEST_TIMEOUT, "The body took too long to arrive."))?;
-        let bytes =
-            read.map_err(|error| if is_limit(&error) { too_large() } else { Problem::malformed("The body did not arrive whole.") })?;
         Ok(Self { media, bytes })
     }
-}
-
-/// Whether reading stopped at the limit, and not because the connection failed.
-fn is_limit(error: &axum::Error) -> bool {
-    let mut cause: Option<&(dyn std::error::Error + 'static)> = Some(error);
-    while let Some(error) = cause {
-        if error.is::<http_body_util::LengthLimitError>() {
-            return true;
-        }
-        cause = error.source();
-    }
-    false
 }
 
 /// A JSON answer from a text that is JSON already.

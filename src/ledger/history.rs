@@ -1,5 +1,7 @@
 //! Reading the ledger, through connections that cannot write.
 
+use std::sync::Arc;
+
 use sqlx::{QueryBuilder, Sqlite, SqliteConnection, SqlitePool};
 use uuid::Uuid;
 
@@ -7,7 +9,7 @@ use super::{
     LedgerError,
     rows::{Answered, ProfileVersion, Read, Recorded, Tally, word},
 };
-use crate::{certificate::Verdict, clock::Stamp, profile::RigName, submission::IdempotencyKey};
+use crate::{certificate::Verdict, clock::Stamp, profile::RigName, record::Summary, submission::IdempotencyKey};
 
 /// Which records a page of the history is taken from.
 #[derive(Debug, Clone, Default, PartialEq)]
@@ -110,6 +112,15 @@ impl History {
     pub async fn record(&self, id: Uuid) -> Result<Option<String>, LedgerError> {
         let sql = "SELECT record FROM certifications WHERE id = ?";
         Ok(sqlx::query_scalar(sql).bind(id.to_string()).fetch_optional(&self.pool).await?)
+    }
+
+    /// The head of a record.
+    ///
+    /// # Errors
+    /// The database's, or a record that cannot be read.
+    pub async fn summary(&self, id: Uuid) -> Result<Option<Summary>, LedgerError> {
+        let unreadable = |source| LedgerError::Unreadable { what: "record", source: Arc::new(source) };
+        self.record(id).await?.map(|text| serde_json::from_str(&text).map_err(unreadable)).transpose()
     }
 
     /// Digest and document of each witness of a certification; `None` if there is no such certification.

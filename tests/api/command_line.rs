@@ -1,0 +1,129 @@
+//! The `bitassay` command as a whole process.
+
+use std::{
+    io::{BufRead, BufReader},
+    path::Path,
+    process::{Child, Command, Stdio},
+};
+
+use bitassay::http::openapi::document;
+
+use crate::{
+    client::{Client, Reply},
+    server::{batch, profile, query},
+};
+
+fn bitassay() -> Command {
+    let mut command = Command::new(env!("CARGO_BIN_EXE_bitassay"));
+    command.env_remove("RUST_LOG");
+    command
+}
+
+/// A server as a process of its own.
+struct Process {
+    child: Child,
+    client: Client,
+}
+
+impl Process {
+    fn start(database: &Path) -> Self {
+        let mut command = bitassay();
+        command.args(["serve", "--listen", "127.0.0.1:0", "--database"]).arg(database).stderr(Stdio::piped());
+        let mut child = command.spawn().unwrap();
+        let mut lines = BufReader::new(child.stderr.take().unwrap()).lines();
+        let first = lines.next().unwrap().unwrap();
+        let address = first.strip_prefix("listening on ").unwrap_or_else(|| panic!("{first}"));
+        let client = Client::new(address.to_owned());
+        // The rest is read as well, so that the process never waits for room to write.
+        std::thread::spawn(move || lines.for_each(drop));
+        Self { child, client }
+    }
+}
+
+impl Drop for Process {
+    fn drop(&mut self) {
+        drop(self.child.kill());
+        drop(self.child.wait());
+    }
+}
+
+#[test]
+fn a_killed_server_has_lost_nothing_and_invented_nothing() {
+    let folder = tempfile::tempdir().unwrap();
+    let database = folder.path().join("ledger.sqlite");
+    let mut process = Process::start(&database);
+    process.client.put_rig("bench", &profile(), &[]).expect(201);
+    let (answered, answers) = std::sync::mpsc::channel::<(String, Reply)>();
+    let posters: Vec<_> = (0..4)
+        .map(|poster| {
+            let (client, answered) = (process.client.clone(), answered.clone());
+            std::thread::spawn(move || {
+                for i in 0.. {
+                    let key = format!("{poster}-{i}");
+                    let Some(reply) = client.try_post_batch("bench", &key, &batch(i)) else { return };
+                    answered.send((key, reply)).unwrap();
+                }
+            })
+        })
+        .collect();
+    drop(answered);
+    let mut acknowledged: Vec<_> = answers.iter().take(25).collect();
+    process.child.kill().unwrap();
+    posters.into_iter().for_each(|poster| poster.join().unwrap());
+    acknowledged.extend(answers.iter());
+
+    let process = Process::start(&database);
+    for (key, reply) in &acknowledged {
+        let first: u64 = key.rsplit('-').next().unwrap().parse().unwrap();
+        let again = process.client.post_batch("bench", key, &batch(first)).expect(reply.status);
+        assert_eq!((again.header("idempotency-replayed"), &again.body), (Some("true"), &reply.body));
+    }
+    // At most one batch of each poster was kept without its poster hearing of it; entries have no gap.
+    let (entries, last): (i64, i64) = query(&database, async |mut connection| {
+        let counted = sqlx::query_as("SELECT COUNT(*), MAX(entry) FROM certifications").fetch_one(&mut connection).await;
+        counted.unwrap()
+    });
+    assert!((acknowledged.len() as i64..=acknowledged.len() as i64 + 4).contains(&entries), "{entries}");
+    assert_eq!(last, entries - 1);
+}
+
+#[cfg(unix)]
+#[test]
+fn a_termination_signal_ends_the_server_well() {
+    let folder = tempfile::tempdir().unwrap();
+    let mut process = Process::start(&folder.path().join("ledger.sqlite"));
+    process.client.get("/readyz").expect(200);
+    let sent = Command::new("kill").args(["-TERM", &process.child.id().to_string()]).status().unwrap();
+    assert!(sent.success());
+    assert!(process.child.wait().unwrap().success());
+}
+
+#[test]
+fn the_world_is_not_listened_to() {
+    let folder = tempfile::tempdir().unwrap();
+    let database = folder.path().join("ledger.sqlite");
+    for address in ["0.0.0.0:0", "[::]:0", "192.0.2.1:80"] {
+        let output = bitassay().args(["serve", "--listen", address, "--database"]).arg(&database).output().unwrap();
+        assert_eq!(output.status.code(), Some(2), "{address}");
+        let words = String::from_utf8(output.stderr).unwrap();
+        assert!(words.contains("needs tokens, which this version does not have") && words.lines().count() == 1, "{words}");
+    }
+    assert!(!database.exists());
+}
+
+#[test]
+fn bad_usage_is_told_in_words() {
+    let folder = tempfile::tempdir().unwrap();
+    let nowhere = folder.path().join("missing").join("ledger.sqlite");
+    let output = bitassay().args(["serve", "--listen", "127.0.0.1:0", "--database"]).arg(nowhere).output().unwrap();
+    assert_eq!(output.status.code(), Some(2));
+    assert_eq!(String::from_utf8(output.stderr).unwrap().lines().count(), 1);
+    assert_eq!(bitassay().arg("certainly").output().unwrap().status.code(), Some(2));
+}
+
+#[test]
+fn the_interface_can_be_printed() {
+    let output = bitassay().arg("openapi").output().unwrap();
+    assert!(output.status.success());
+    assert_eq!(String::from_utf8(output.stdout).unwrap(), document().unwrap());
+}

@@ -1,0 +1,15 @@
+//! The real server on a free port, with a database file of its own. Modules follow the paths.
+
+mod bad_requests;
+mod batches;
+mod certifications;
+mod client;
+mod command_line;
+mod connections;
+mod examples;
+mod health;
+mod ledger;
+mod openapi;
+mod rigs;
+mod server;
+mod yields;
