@@ -5,11 +5,11 @@ use std::fmt;
 use serde::{Deserialize, Serialize};
 
 use crate::{
-    counts::NORMALISATION_SLACK,
+    counts::{NORMALISATION_SLACK, check_distribution},
     fault::Fault,
     relaxation::{cost::choose, level::LevelChoice},
     request::{Failure, RoundModel},
-    scenario::{Geometry, Scenario, ScenarioDocument},
+    scenario::{Scenario, ScenarioDocument},
 };
 
 /// The name of a rig: `[a-z0-9][a-z0-9-]{0,62}`, so that it fits into paths, file names and host names as it is.
@@ -103,7 +103,8 @@ impl TryFrom<ProfileDocument> for Profile {
         let culprit = if level == LevelChoice::Auto { "/scenario" } else { "/level" };
         choose(level, &scenario).map_err(|fault| fault.under(culprit))?;
         if let Some(distribution) = &setting_distribution {
-            check_distribution(distribution, scenario.geometry()).map_err(|fault| fault.under("/setting_distribution"))?;
+            check_distribution(distribution, scenario.geometry(), NORMALISATION_SLACK)
+                .map_err(|fault| fault.under("/setting_distribution"))?;
         }
         if let Some(labels) = &outcome_labels {
             check_labels(labels, scenario.geometry().outcomes).map_err(|fault| fault.under("/outcome_labels"))?;
@@ -113,29 +114,6 @@ impl TryFrom<ProfileDocument> for Profile {
         }
         Ok(Self { scenario, rounds, failure, level, setting_distribution, outcome_labels, notes })
     }
-}
-
-/// Positive everywhere, since every setting must be used, and one in all.
-fn check_distribution(distribution: &[Vec<f64>], geometry: Geometry) -> Result<(), Fault> {
-    let Geometry { preparations, measurements, .. } = geometry;
-    if distribution.len() != preparations {
-        let detail = format!("needs one row per preparation: {preparations}, has {}", distribution.len());
-        return Err(Fault::new("", detail));
-    }
-    for (x, row) in distribution.iter().enumerate() {
-        if row.len() != measurements {
-            let detail = format!("needs one probability per measurement: {measurements}, has {}", row.len());
-            return Err(Fault::new(format!("/{x}"), detail));
-        }
-        if let Some(y) = row.iter().position(|p| !(*p > 0.0 && *p <= 1.0)) {
-            return Err(Fault::new(format!("/{x}/{y}"), format!("a setting's probability is above 0 and at most 1, is {}", row[y])));
-        }
-    }
-    let sum: f64 = distribution.iter().flatten().sum();
-    if (sum - 1.0).abs() > NORMALISATION_SLACK {
-        return Err(Fault::new("", format!("the probabilities of all settings add up to 1, not to {sum}")));
-    }
-    Ok(())
 }
 
 fn check_labels(labels: &[String], outcomes: usize) -> Result<(), Fault> {

@@ -68,6 +68,9 @@ fn explanation(certificate: &Certificate) -> String {
             let explains = explains.map_or_else(String::new, |leakage| format!(" It would take a uniform leakage of at least {leakage}."));
             format!("The counts cannot come from a carrier of dimension {dimension} with the declared leakage.{explains}")
         }
+        Some(Reason::Uncommitted) => {
+            "The batch began before its commitment was recorded: what is fixed after the fact proves nothing.".into()
+        }
         Some(Reason::Unverified) | None => {
             "No bound passed the exact check, so nothing is known about the batch. This says nothing against the rig.".into()
         }

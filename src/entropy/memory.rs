@@ -210,7 +210,8 @@ mod tests {
         let linear = vec![vec![vec![BigRational::zero(); 2]; 2]; 2];
         let trivial = RoundBound { target: Setting { x: 0, y: 0 }, constant: BigRational::one(), linear };
         let factors = factors(&[trivial], &[vec![0.25; 2], vec![0.25; 2]], 1 << 20).unwrap();
-        assert!(factors.iter().flatten().flatten().all(|factor| (factor - 1.0).abs() < 1e-15));
+        // Up to what is given away because settings may be drawn a little off.
+        assert!(factors.iter().flatten().flatten().all(|factor| *factor < 1.0 && *factor > 1.0 - 1e-11));
         let counts = vec![vec![vec![1000, 2000]; 2]; 2];
         assert_eq!(block_min_entropy(log2_product(&counts, &factors), 1 << 20, 1e-10), 0.0);
     }
