@@ -65,7 +65,10 @@ fn explanation(certificate: &Certificate) -> String {
         Some(Reason::OutsideModel) => {
             let dimension = certificate.scenario.geometry().carrier_dimension;
             let explains = certificate.outside_model.as_ref().and_then(|outside| outside.smallest_uniform_leakage);
-            let explains = explains.map_or_else(String::new, |leakage| format!(" It would take a uniform leakage of at least {leakage}."));
+            // Rounded down: still at least that much. The document has the figure with all its digits.
+            let digits = |leakage: f64| (leakage * 1e4).floor() / 1e4;
+            let explains =
+                explains.map_or_else(String::new, |leakage| format!(" It would take a uniform leakage of at least {}.", digits(leakage)));
             format!("The counts cannot come from a carrier of dimension {dimension} with the declared leakage.{explains}")
         }
         Some(Reason::Uncommitted) => {
