@@ -4,6 +4,7 @@ use std::{any::Any, sync::Arc};
 
 use axum::{
     Router,
+    body::Body,
     http::{Request, StatusCode, Uri},
     middleware,
     response::IntoResponse,
@@ -38,11 +39,12 @@ pub(super) fn router(service: Arc<Service>) -> Router {
         .with_state(service)
         .layer(middleware::from_fn(intake::take_in))
         .layer(CatchPanicLayer::custom(panicked))
-        .layer(
-            TraceLayer::new_for_http().make_span_with(
-                |request: &Request<_>| tracing::info_span!("request", method = %request.method(), path = request.uri().path()),
-            ),
-        )
+        .layer(TraceLayer::new_for_http().make_span_with(span).on_failure(()))
+}
+
+/// What the log says a request was about. What fails is logged where it is known why, not a second time by the layer.
+fn span(request: &Request<Body>) -> tracing::Span {
+    tracing::info_span!("request", method = %request.method(), path = request.uri().path())
 }
 
 /// A bug must not leave a client without an answer. The panic itself has been logged by then.
