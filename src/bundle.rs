@@ -7,6 +7,7 @@ use serde_json::{Map, Value};
 
 use crate::{
     certificate::Certificate,
+    commitment::Commitment,
     fault::{Fault, parse},
     verify::{Discrepancy, verify},
     witness::witness::Witness,
@@ -23,6 +24,9 @@ pub type Witnesses = BTreeMap<String, Witness>;
 #[serde(deny_unknown_fields)]
 pub struct Bundle {
     pub record: Map<String, Value>,
+    /// The commitment of a block of rounds with memory.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub commitment: Option<Commitment>,
     pub witnesses: Witnesses,
 }
 
@@ -32,6 +36,8 @@ pub struct Bundle {
 struct HandedOut {
     #[serde(rename = "certification")]
     _certification: String,
+    #[serde(default)]
+    commitment: Option<Commitment>,
     witnesses: Witnesses,
 }
 
@@ -50,7 +56,7 @@ impl Bundle {
     /// The first deviation from the shape of either.
     pub fn join(record: &[u8], witnesses: &[u8]) -> Result<Self, Fault> {
         let handed_out: HandedOut = parse(witnesses)?;
-        Ok(Self { record: parse(record)?, witnesses: handed_out.witnesses })
+        Ok(Self { record: parse(record)?, commitment: handed_out.commitment, witnesses: handed_out.witnesses })
     }
 
     /// The certificate within the record.
@@ -81,6 +87,6 @@ impl Bundle {
             }
         }
         let witnesses: Vec<Witness> = self.witnesses.values().cloned().collect();
-        verify(&certificate, &witnesses)
+        verify(&certificate, self.commitment.as_ref(), &witnesses)
     }
 }

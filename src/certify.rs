@@ -5,11 +5,13 @@ use num_rational::BigRational;
 use crate::{
     bound::{Answer, guessing_probability},
     certificate::{Certificate, FailureTotal, OutsideModel, Reason, TargetCertificate, Verdict},
-    counts::Table,
+    commitment::Commitment,
+    counts::{Counts, Table},
     entropy::extraction::{extractable, hashing_cost, min_entropy, min_entropy_per_round, publication_cost},
     exact::round_down,
-    relaxation::level::Level,
-    request::{Data, LostTreatment, Request, RoundModel},
+    fault::Fault,
+    relaxation::level::{Level, LevelChoice},
+    request::{Data, Failure, LostRounds, LostTreatment, Request, RoundModel},
     scenario::{LeakageReading, Setting},
     solver::Limits,
     statistics::region::{frequencies, region},
@@ -29,7 +31,7 @@ pub struct Certification {
 /// Certifies one request. Never fails: what cannot be certified is refused, with the reason in the certificate.
 pub fn certify(request: &Request) -> Certification {
     let evidence = evidence(request);
-    let mut draft = Draft::new(request, &evidence);
+    let mut draft = Draft::new(request, Some(&evidence));
     for target in request.scenario().targets() {
         match guessing_probability(request.scenario(), *target, evidence.place(), request.start, Limits::default()) {
             Answer::Outside(contradiction) => {
@@ -41,6 +43,53 @@ pub fn certify(request: &Request) -> Certification {
         }
     }
     draft.conclude()
+}
+
+/// Certifies a block of rounds with memory under a commitment. No solve is involved: bits follow from counts and factors.
+///
+/// `in_time` says whether the batch began after its commitment was recorded. A batch that did not is refused.
+///
+/// # Errors
+/// Counts that do not fit the commitment's geometry or number of rounds, or a treatment of lost rounds that does not exist; pointers are
+/// into a document with the members `counts` and `lost_rounds`.
+pub fn certify_block(
+    commitment: &Commitment,
+    level: LevelChoice,
+    mut counts: Table<u64>,
+    lost_rounds: Option<LostRounds>,
+    in_time: bool,
+) -> Result<Certificate, Fault> {
+    let geometry = commitment.scenario.geometry();
+    if let Some(lost) = &lost_rounds {
+        lost.fold_into(&mut counts, geometry.outcomes)?;
+    }
+    let counts = Counts::try_new(counts, geometry).map_err(|fault| fault.under("/counts"))?;
+    commitment.accepts(&counts).map_err(|fault| fault.under("/counts"))?;
+    let FailureTotal { estimation, hashing, .. } = commitment.failure;
+    let request = Request {
+        scenario: commitment.scenario.clone(),
+        data: Data::Counts(counts.clone()),
+        rounds: RoundModel::Memory,
+        failure: Failure { estimation, hashing },
+        level,
+        start: Level::Lean,
+        lost_rounds,
+    };
+    let mut certificate = Draft::new(&request, None).certificate;
+    if !in_time {
+        certificate.reason = Some(Reason::Uncommitted);
+        return Ok(certificate);
+    }
+    let account = commitment.account(&counts);
+    certificate.certified_bits = account.certified_bits;
+    if account.certified_bits > 0 {
+        certificate.verdict = Verdict::Certified;
+        certificate.bits_per_round = (account.certified_bits as f64 / counts.total() as f64).next_down();
+    } else {
+        certificate.reason = Some(Reason::ZeroBound);
+    }
+    certificate.block = Some(account);
+    Ok(certificate)
 }
 
 /// What is known of the behaviour.
@@ -76,16 +125,16 @@ pub(crate) struct Draft {
 
 impl Draft {
     /// Everything that is known before the first bound.
-    pub(crate) fn new(request: &Request, evidence: &Evidence) -> Self {
+    pub(crate) fn new(request: &Request, evidence: Option<&Evidence>) -> Self {
         let (counts, behaviour) = match &request.data {
             Data::Counts(counts) => (Some(counts), None),
             Data::Behaviour(behaviour) => (None, Some(behaviour.table().clone())),
         };
         let region = match evidence {
-            Evidence::Point(_) => None,
-            Evidence::Region(table) => Some(table.clone()),
+            None | Some(Evidence::Point(_)) => None,
+            Some(Evidence::Region(table)) => Some(table.clone()),
         };
-        let failure = region.is_some().then(|| FailureTotal::new(request.failure));
+        let failure = (request.rounds != RoundModel::PlugIn).then(|| FailureTotal::new(request.failure));
         let certificate = Certificate {
             verdict: Verdict::Refused,
             reason: None,
@@ -215,8 +264,8 @@ impl TargetCertificate {
 }
 
 impl FailureTotal {
-    pub(crate) fn new(failure: crate::request::Failure) -> Self {
-        let crate::request::Failure { estimation, hashing } = failure;
+    pub(crate) fn new(failure: Failure) -> Self {
+        let Failure { estimation, hashing } = failure;
         Self { estimation, hashing, total: (estimation + hashing).next_up() }
     }
 }
@@ -249,7 +298,12 @@ fn assumptions(request: &Request) -> Vec<String> {
             assumptions
                 .push("Rounds are independent and identically distributed, given the distribution of the hidden variable.".to_owned());
         }
-        RoundModel::Memory => {}
+        RoundModel::Memory => assumptions.extend([
+            "No independence of rounds is assumed. Settings were drawn from the committed distribution, independently of the devices, of everything \
+             classical and of the past; if the leakage is read on average, its mean over the rounds of the block is within the declared one."
+                .to_owned(),
+            "Outcomes at settings other than the targets are not published one by one.".to_owned(),
+        ]),
     }
     if request.lost_rounds.as_ref().is_some_and(|lost| lost.treatment == LostTreatment::FairSampling) {
         assumptions.push(

@@ -40,7 +40,7 @@
 //! let request = Request::try_from(fault::parse::<RequestDocument>(document.as_bytes())?)?;
 //! let certification = certify(&request);
 //! assert!(certification.certificate.certified_bits > 100_000);
-//! assert_eq!(verify(&certification.certificate, &certification.witnesses), Ok(()));
+//! assert_eq!(verify(&certification.certificate, None, &certification.witnesses), Ok(()));
 //! # Ok::<(), fault::Fault>(())
 //! ```
 

@@ -150,7 +150,7 @@ impl TryFrom<RequestDocument> for Request {
 
 impl LostRounds {
     /// Adds the lost rounds to the counts if they are to be counted as an outcome.
-    fn fold_into(&self, table: &mut Table<u64>, outcomes: usize) -> Result<(), Fault> {
+    pub(crate) fn fold_into(&self, table: &mut Table<u64>, outcomes: usize) -> Result<(), Fault> {
         let shape = |pointer: String| Fault::new(pointer, "needs one number per preparation and measurement, as the counts have");
         if self.counts.len() != table.len() {
             return Err(shape("/lost_rounds/counts".into()));

@@ -8,11 +8,12 @@ use std::collections::BTreeMap;
 use serde_json::Value;
 
 use crate::{
-    certificate::{Certificate, OutsideModel},
-    certify::{Draft, Evidence, evidence},
+    certificate::{Certificate, OutsideModel, Reason},
+    certify::{Draft, Evidence, certify_block, evidence},
+    commitment::{Commitment, CommitmentFault},
     fault::Fault,
     relaxation::{level::Level, parity::split, word::Algebra},
-    request::{Failure, Request, RequestDocument},
+    request::{Failure, Request, RequestDocument, RoundModel},
     witness::{
         check::{CheckError, CheckedWitness, check, proves_contradiction},
         witness::{Claim, Witness},
@@ -24,6 +25,10 @@ use crate::{
 pub enum Discrepancy {
     #[error("{0}")]
     Request(#[from] Fault),
+    #[error("a record of rounds with memory is checked against its commitment, which is missing")]
+    MissingCommitment,
+    #[error("the commitment is not believed: {0}")]
+    Commitment(#[from] CommitmentFault),
     #[error("{pointer}: the witness {digest} is missing")]
     MissingWitness { pointer: String, digest: String },
     #[error("{pointer}: the witness {digest} is not accepted: {error}")]
@@ -34,13 +39,17 @@ pub enum Discrepancy {
     Value { pointer: String, recorded: Box<Value>, recomputed: Box<Value> },
 }
 
-/// Re-checks a certificate. Witnesses are found by the digests of their canonical bytes; those that are not named are ignored.
+/// Re-checks a certificate; one of rounds with memory needs its commitment. Witnesses are found by the digests of their canonical bytes; those that are not named are ignored.
 ///
 /// # Errors
 /// Every discrepancy that was found; those of the request and the witnesses first, which leave nothing to compare.
-pub fn verify(certificate: &Certificate, witnesses: &[Witness]) -> Result<(), Vec<Discrepancy>> {
+pub fn verify(certificate: &Certificate, commitment: Option<&Commitment>, witnesses: &[Witness]) -> Result<(), Vec<Discrepancy>> {
     let by_digest: BTreeMap<String, &Witness> = witnesses.iter().map(|witness| (witness.digest(), witness)).collect();
-    let recomputed = recompute(certificate, &by_digest).map_err(|discrepancy| vec![discrepancy])?;
+    let recomputed = match certificate.rounds {
+        RoundModel::Memory => recompute_block(certificate, commitment, witnesses),
+        RoundModel::PlugIn | RoundModel::Independent => recompute(certificate, &by_digest),
+    };
+    let recomputed = recomputed.map_err(|discrepancy| vec![discrepancy])?;
     let mut differences = Vec::new();
     let (recorded, recomputed) = (serde_json::to_value(certificate), serde_json::to_value(&recomputed));
     compare(&recorded.unwrap_or_default(), &recomputed.unwrap_or_default(), String::new(), &mut differences);
@@ -66,7 +75,7 @@ fn request(certificate: &Certificate) -> Result<Request, Fault> {
 fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) -> Result<Certificate, Discrepancy> {
     let request = request(certificate)?;
     let evidence = evidence(&request);
-    let mut draft = Draft::new(&request, &evidence);
+    let mut draft = Draft::new(&request, Some(&evidence));
     let mut recomputed = if let Some(outside) = &certificate.outside_model {
         recompute_outside(draft, &request, &evidence, outside, witnesses)?
     } else {
@@ -94,6 +103,20 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
         draft.conclude().certificate
     };
     // Which software made a record is not something that can be recomputed.
+    recomputed.version.clone_from(&certificate.version);
+    Ok(recomputed)
+}
+
+fn recompute_block(certificate: &Certificate, commitment: Option<&Commitment>, witnesses: &[Witness]) -> Result<Certificate, Discrepancy> {
+    let commitment = commitment.ok_or(Discrepancy::MissingCommitment)?;
+    commitment.confirm(&witnesses.iter().collect::<Vec<_>>())?;
+    let counts = certificate.counts.clone().unwrap_or_default();
+    // Lost rounds that were counted as an outcome are in the recorded counts already.
+    let in_time = certificate.reason != Some(Reason::Uncommitted);
+    let mut recomputed = certify_block(commitment, certificate.level, counts, None, in_time)?;
+    recomputed.assumptions.clone_from(&certificate.assumptions);
+    recomputed.warnings.clone_from(&certificate.warnings);
+    recomputed.lost_rounds.clone_from(&certificate.lost_rounds);
     recomputed.version.clone_from(&certificate.version);
     Ok(recomputed)
 }

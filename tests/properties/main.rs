@@ -3,4 +3,5 @@
 mod monotone;
 mod relabelling;
 mod rig;
+mod rounds;
 mod witnesses;

@@ -51,8 +51,8 @@ fn certified() -> (Certificate, Vec<Witness>) {
 #[test]
 fn a_certificate_is_confirmed_without_a_solver() {
     let (certificate, witnesses) = certified();
-    assert_eq!(verify(&certificate, &witnesses), Ok(()));
-    assert!(verify(&certificate, &[]).is_err(), "without the witness nothing is confirmed");
+    assert_eq!(verify(&certificate, None, &witnesses), Ok(()));
+    assert!(verify(&certificate, None, &[]).is_err(), "without the witness nothing is confirmed");
 }
 
 /// One integer changed: the record no longer names this document, and where the check still passes the bound is another theorem, which
@@ -66,7 +66,7 @@ fn a_witness_with_one_integer_changed_is_not_accepted() {
     for mutation in mutations(&original) {
         changed += 1;
         let Ok(witness) = serde_json::from_value::<Witness>(mutation) else { continue };
-        assert!(verify(&certificate, std::slice::from_ref(&witness)).is_err());
+        assert!(verify(&certificate, None, std::slice::from_ref(&witness)).is_err());
         let Ok(checked) = check(&witness) else { continue };
         passed += 1;
         let applies = checked.bound(Place::Behaviour(&behaviour), certificate.scenario.leakage(), certificate.scenario.leakage_holds());
@@ -104,7 +104,7 @@ fn a_certificate_with_a_changed_figure_is_not_confirmed() {
         let mut changed = original.clone();
         *changed.pointer_mut(pointer).unwrap() = value;
         let changed: Certificate = serde_json::from_value(changed).unwrap();
-        assert!(verify(&changed, &witnesses).is_err(), "{pointer}");
+        assert!(verify(&changed, None, &witnesses).is_err(), "{pointer}");
     }
 }
 
@@ -152,7 +152,7 @@ fn numbers_outside_the_model_are_refused_with_a_proof() {
     let certification = run(document(counts(&code(1.02), 10_000_000), 2, 1e-3));
     let certificate = &certification.certificate;
     assert_eq!((certificate.verdict, certificate.reason), (Verdict::Refused, Some(Reason::OutsideModel)));
-    assert_eq!(verify(certificate, &certification.witnesses), Ok(()));
+    assert_eq!(verify(certificate, None, &certification.witnesses), Ok(()));
     let least = certificate.outside_model.as_ref().unwrap().smallest_uniform_leakage.unwrap();
     // Success ½(1 + 1.02/√2) needs ½[1+√(½+2ε(1−ε))] of an explicit strategy, so at most about that much.
     assert!(least > 1e-3 && least < 0.0102, "{least}");
