@@ -248,6 +248,21 @@ mod tests {
         }
     }
 
+    /// Clicks miss further pairs of a pulse: the limit solves `P(herald) = p`, not `ημ = p`. Brighter pulses leak more.
+    #[test]
+    fn herald_clicks_are_those_of_a_threshold_detector() {
+        let counts = HeraldCounts { heralds: 300, pulses: 1000, failure: 1e-6 };
+        let p = crate::statistics::interval::upper_limit(300, 1000, 1e-6);
+        for (pairs, mean) in [(PairLaw::Thermal, p / (1.0 - p) / 0.4), (PairLaw::Poissonian, -(-p).ln_1p() / 0.4)] {
+            let document = Heralded { pairs, mean_pairs: Measured::Counted(counts), herald_efficiency: 0.4, intensity_spread: 0.0 };
+            let estimate = document.estimate(2).unwrap();
+            assert!((estimate.inputs[0].value / mean - 1.0).abs() < 1e-12);
+            assert_eq!(estimate.inputs[0].failure, Some(1e-6));
+            let unsteady = Heralded { intensity_spread: 0.1, ..document }.estimate(2).unwrap();
+            assert!(unsteady.leakage > 1.02 * estimate.leakage);
+        }
+    }
+
     #[test]
     fn wrong_documents_are_refused_with_their_place() {
         let good = Heralded { pairs: PairLaw::Thermal, mean_pairs: Measured::Stated(0.1), herald_efficiency: 0.3, intensity_spread: 0.0 };
