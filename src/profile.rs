@@ -151,6 +151,11 @@ impl Profile {
         self.failure
     }
 
+    /// Declared setting distribution `π(x,y)`, `[x][y]`.
+    pub fn setting_distribution(&self) -> Option<&[Vec<f64>]> {
+        self.setting_distribution.as_deref()
+    }
+
     pub fn level(&self) -> LevelChoice {
         self.level
     }

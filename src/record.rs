@@ -8,6 +8,7 @@ use crate::{
     certificate::{Certificate, FailureTotal, Reason, Verdict},
     clock::Stamp,
     profile::RigName,
+    statistics::quality::Finding,
 };
 
 /// How long a certification took, in seconds.
@@ -37,7 +38,19 @@ pub struct Record {
     pub leakage_source: LeakageSource,
     #[serde(flatten)]
     pub certificate: Certificate,
+    /// What the reader should know about the data: settings that are not drawn as declared, outcomes that drifted since the rig's newest
+    /// certified batch, settings with few rounds. No certified figure depends on it.
+    pub concerns: Vec<Concern>,
     pub timings: Timings,
+}
+
+/// One finding about a batch's data, with its sentence.
+#[derive(Debug, Clone, PartialEq, Serialize, utoipa::ToSchema)]
+pub struct Concern {
+    pub detail: String,
+    #[serde(flatten)]
+    #[schema(value_type = Object)]
+    pub finding: Finding,
 }
 
 impl Record {

@@ -1,5 +1,6 @@
 //! The service: takes batches in, has them solved, keeps what came out. Knows no HTTP.
 
+mod quality;
 mod solvers;
 mod turns;
 
@@ -24,6 +25,7 @@ use crate::{
     },
     profile::{Profile, RigName},
     record::{Record, Timings},
+    request::Data,
     rig_yield::RigYield,
     submission::{IdempotencyKey, Submission},
 };
@@ -125,6 +127,10 @@ impl Service {
 
     async fn keep(&self, profile: ProfileVersion, batch: Batch, solved: Solved, submission: Submission) -> Result<Settled, SubmitError> {
         let Solved { certification, queued, solved } = solved;
+        let concerns = match batch.request.data() {
+            Data::Counts(counts) => quality::concerns(&self.ledger, &profile.rig, &profile.profile, counts).await?,
+            Data::Behaviour(_) => Vec::new(),
+        };
         let recorded_at = self.clock.now();
         let record = Record {
             id: new_id(recorded_at),
@@ -135,6 +141,7 @@ impl Service {
             ended_at: batch.ended_at,
             leakage_source: batch.leakage_source,
             certificate: certification.certificate,
+            concerns,
             timings: Timings { queued_seconds: queued.as_secs_f64(), solved_seconds: solved.as_secs_f64() },
         };
         let entry = Entry::new(&record, &certification.witnesses, submission)?;

@@ -3,6 +3,7 @@
 mod certify;
 mod demo;
 mod document;
+mod leakage;
 mod openapi;
 mod serve;
 mod verify;
@@ -26,6 +27,7 @@ enum Command {
     Serve(serve::Serve),
     Certify(certify::Certify),
     Verify(verify::Verify),
+    Leakage(leakage::Leakage),
     Demo(demo::Demo),
     Openapi(openapi::Openapi),
 }
@@ -36,6 +38,7 @@ pub fn run() -> ExitCode {
         Command::Serve(command) => command.run(),
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
+        Command::Leakage(command) => command.run(),
         Command::Demo(command) => command.run(),
         Command::Openapi(command) => command.run(),
     };

@@ -5,6 +5,7 @@ mod certifications;
 mod condition;
 mod health;
 mod intake;
+mod leakage;
 mod negotiation;
 pub mod openapi;
 pub mod problem;

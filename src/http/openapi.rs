@@ -24,6 +24,7 @@ use crate::scenario::LeakageDocument;
         (name = "rigs", description = "What operators declare about their rigs, and what the rigs yield."),
         (name = "batches", description = "What rigs post."),
         (name = "certifications", description = "What was certified, and what was refused."),
+        (name = "leakage", description = "What leaves the carrier, from what was measured."),
         (name = "health", description = "For whoever watches over the process."),
     ),
 )]

@@ -141,3 +141,21 @@ fn heads_can_be_asked_for_alone() {
         assert!(head.body.is_empty());
     }
 }
+
+/// Findings about the data stand in the record beside the certificate, and change none of its figures.
+#[test]
+fn a_record_says_what_is_odd_about_its_data() {
+    let (_running, client) = with_rig();
+    let mut declared = profile();
+    declared["setting_distribution"] = serde_json::json!([[0.5], [0.5]]);
+    client.put_rig("odd", &declared, &[]).expect(201);
+    let plain = client.post_batch("odd", "plain", &batch(1000)).expect(201).json();
+    assert_eq!(plain["concerns"], serde_json::json!([]));
+    // Three times as many rounds of the second preparation, with other outcomes.
+    let mut odd = batch(1000);
+    odd["counts"] = serde_json::json!([[[1500, 500]], [[5000, 1000]]]);
+    let answer = client.post_batch("odd", "odd", &odd).expect(201).json();
+    let concerns: Vec<&str> = answer["concerns"].as_array().unwrap().iter().filter_map(|concern| concern["concern"].as_str()).collect();
+    assert!(concerns.contains(&"setting-imbalance") && concerns.contains(&"outcome-drift"), "{answer}");
+    assert!(answer["concerns"][0]["detail"].as_str().is_some_and(|detail| detail.contains("setting distribution")));
+}

@@ -8,6 +8,7 @@ mod command_line;
 mod connections;
 mod examples;
 mod health;
+mod leakage;
 mod ledger;
 mod openapi;
 mod rigs;

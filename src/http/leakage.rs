@@ -1,0 +1,44 @@
+//! `/v1/leakage`: what leaves the carrier, from what was measured.
+
+use axum::{
+    body::Body,
+    http::{Response, StatusCode},
+};
+
+use super::{
+    negotiation::TakesJson,
+    problem::{Culprit, Problem, ProblemDocument},
+    wire::{Media, Payload, Query, json},
+};
+use crate::{
+    fault::parse_object,
+    leakage::budget::{Budget, BudgetDocument},
+};
+
+const BUDGET_LIMIT: usize = 64 * 1024;
+
+/// Computes a leakage budget: contributions from stated values or counts, and their sum. Nothing is kept.
+#[utoipa::path(
+    post, path = "/v1/leakage", tag = "leakage", operation_id = "post_leakage",
+    request_body(
+        description = "`carrier_dimension` and `contributions`, each with a `source`: coherent, thermal, g2, coincidence, heralded, vacuum, overlap or \
+                       side-mode, and what was measured of it.",
+        content = Object, content_type = "application/json",
+        example = json!({"carrier_dimension": 2, "contributions": [{"source": "coherent", "mean_photon_number": 0.01}]})
+    ),
+    responses(
+        (status = 200, description = "The sum, rounded up, each contribution's share and what it rests on.", body = Object),
+        (status = 400, description = "The body does not have the shape of a budget.", body = ProblemDocument, content_type = "application/problem+json"),
+        (status = 422, description = "A value that cannot be, or carriers that do not multiply to the stated dimension.", body = ProblemDocument, content_type = "application/problem+json"),
+    )
+)]
+pub async fn post(Query(()): Query<()>, TakesJson: TakesJson, payload: Payload<BUDGET_LIMIT>) -> Result<Response<Body>, Problem> {
+    if payload.media != Media::Json {
+        let detail = "A budget is application/json.";
+        return Err(Problem::new(StatusCode::UNSUPPORTED_MEDIA_TYPE, detail).blaming(Culprit::Header("Content-Type")));
+    }
+    let document: BudgetDocument = parse_object(&payload.bytes).map_err(|fault| Problem::body(StatusCode::BAD_REQUEST, fault))?;
+    let budget = Budget::try_from(document).map_err(|fault| Problem::body(StatusCode::UNPROCESSABLE_ENTITY, fault))?;
+    let text = serde_json::to_string(&budget.report()).map_err(|error| Problem::internal(&error))?;
+    Ok(json(StatusCode::OK, text))
+}

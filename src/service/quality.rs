@@ -1,0 +1,44 @@
+//! What the reader of a record should know about the batch's data.
+
+use serde::Deserialize;
+
+use crate::{
+    certificate::Verdict,
+    counts::{Counts, Table},
+    ledger::{Ledger, LedgerError, history::Filter},
+    profile::{Profile, RigName},
+    record::Concern,
+    statistics::quality::{Expectations, examine},
+};
+
+/// Rounds that a setting should have at least; tests and intervals mean little below.
+const LEAST_ROUNDS: u64 = 100;
+/// Chance of any warning about a batch in which everything is as declared. Common practice.
+const SIGNIFICANCE: f64 = 1e-3;
+
+/// The part of an earlier record that a batch is compared with.
+#[derive(Deserialize)]
+struct Earlier {
+    counts: Option<Table<u64>>,
+}
+
+/// Settings against the declared distribution, outcomes against the rig's newest certified batch, and settings with few rounds.
+///
+/// # Errors
+/// The ledger's.
+pub async fn concerns(ledger: &Ledger, rig: &RigName, profile: &Profile, counts: &Counts) -> Result<Vec<Concern>, LedgerError> {
+    let filter = Filter { rig: Some(rig.clone()), verdict: Some(Verdict::Certified), ..Filter::default() };
+    let newest = ledger.history.page(&filter, 1).await?.items.into_iter().next();
+    let table = newest.and_then(|recorded| serde_json::from_str::<Earlier>(&recorded.record).ok()?.counts);
+    // A batch of another geometry is nothing to compare with.
+    let previous = table.and_then(|table| Counts::try_new(table, profile.scenario().geometry()).ok());
+    let expectations = Expectations {
+        distribution: profile.setting_distribution(),
+        previous: previous.as_ref(),
+        least_rounds: LEAST_ROUNDS,
+        significance: SIGNIFICANCE,
+    };
+    // Distribution and counts fit the geometry of a valid profile.
+    let findings = examine(counts, &expectations).unwrap_or_default();
+    Ok(findings.into_iter().map(|finding| Concern { detail: finding.to_string(), finding }).collect())
+}
