@@ -1,5 +1,6 @@
 //! What must hold whatever the numbers are.
 
+mod coverage;
 mod monotone;
 mod relabelling;
 mod rig;
