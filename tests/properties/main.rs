@@ -1,6 +1,8 @@
 //! What must hold whatever the numbers are.
 
+mod accounts;
 mod coverage;
+mod models;
 mod monotone;
 mod relabelling;
 mod rig;
