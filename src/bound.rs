@@ -5,6 +5,7 @@ use num_rational::BigRational;
 use num_traits::{One, Signed};
 
 use crate::{
+    counts::Table,
     relaxation::{
         cells::{Cut, cover},
         level::Level,
@@ -72,6 +73,10 @@ pub fn guessing_probability(scenario: &Scenario, target: Setting, place: Place, 
         {
             return Answer::Outside(Box::new(contradiction));
         }
+        if let Some(found) = found.as_ref().filter(|found| proves_contradiction(&found.witness, &found.bound, place)) {
+            let least_leakage = least_leakage(scenario.geometry(), place, level, limits);
+            return Answer::Outside(Box::new(Contradiction { found: found.clone(), least_leakage }));
+        }
         let improves = |found: &Found| best.as_ref().is_none_or(|best| found.bound.exact() < best.bound.exact());
         best = found.filter(improves).or(best);
         if best.as_ref().is_some_and(|best| status == Status::Solved || best.witness.rounding_cost() <= GOOD_ENOUGH) {
@@ -84,10 +89,10 @@ pub fn guessing_probability(scenario: &Scenario, target: Setting, place: Place, 
 /// Upper bound on a linear score `Σ s p` with integer coefficients `[x][y][b]`, over all models of a geometry and leakage.
 ///
 /// `None` if no witness passed the exact check.
-pub fn score(scenario: &Scenario, coefficients: Vec<Vec<Vec<i64>>>, level: Level, limits: Limits) -> Option<Found> {
+pub fn score(scenario: &Scenario, coefficients: Table<i64>, level: Level, limits: Limits) -> Option<Found> {
     let claim = Claim::Score { coefficients };
-    let uniform =
-        vec![vec![vec![[0.0, 1.0]; scenario.geometry().outcomes]; scenario.geometry().measurements]; scenario.geometry().preparations];
+    let Geometry { preparations, measurements, outcomes, .. } = scenario.geometry();
+    let anywhere = vec![vec![vec![[0.0, 1.0]; outcomes]; measurements]; preparations];
     let question = Question {
         claim,
         knowledge: Knowledge::Nothing,
@@ -95,43 +100,31 @@ pub fn score(scenario: &Scenario, coefficients: Vec<Vec<Vec<i64>>>, level: Level
         leakage_holds: scenario.leakage_holds(),
         slack: Slack::None,
     };
-    descent(level).find_map(|level| attempt(scenario.geometry(), &question, Place::Region(&uniform), level, limits).found)
+    descent(level).find_map(|level| attempt(scenario.geometry(), &question, Place::Region(&anywhere), level, limits).found)
 }
 
 /// Proof that no model of the scenario has a behaviour in the place, if there is one at this level.
 pub fn contradiction(scenario: &Scenario, place: Place, level: Level, limits: Limits) -> Option<Contradiction> {
-    let point;
-    let knowledge = match place {
-        Place::Behaviour(table) => {
-            point = as_intervals(table);
-            Knowledge::Within(&point)
-        }
-        Place::Region(table) => Knowledge::Within(table),
-    };
+    let intervals = intervals(place);
     let question = Question {
         claim: Claim::Contradiction,
-        knowledge,
+        knowledge: Knowledge::Within(&intervals),
         leakage: scenario.leakage(),
         leakage_holds: scenario.leakage_holds(),
         slack: Slack::Behaviour,
     };
     let found = attempt(scenario.geometry(), &question, place, level, limits).found;
-    let found = found.filter(|found| proves_contradiction(&found.witness, &found.bound))?;
-    Some(Contradiction { found, least_leakage: least_leakage(scenario.geometry(), knowledge, place, level, limits) })
+    let found = found.filter(|found| proves_contradiction(&found.witness, &found.bound, place))?;
+    Some(Contradiction { found, least_leakage: least_leakage(scenario.geometry(), place, level, limits) })
 }
 
-fn least_leakage(
-    geometry: Geometry,
-    knowledge: Knowledge,
-    place: Place,
-    level: Level,
-    limits: Limits,
-) -> Option<(BigRational, CheckedWitness)> {
+fn least_leakage(geometry: Geometry, place: Place, level: Level, limits: Limits) -> Option<(BigRational, CheckedWitness)> {
     // Any leakage: no preparation may be taken as exactly leak-free.
     let anything = vec![1.0; geometry.preparations];
+    let intervals = intervals(place);
     let question = Question {
         claim: Claim::Contradiction,
-        knowledge,
+        knowledge: Knowledge::Within(&intervals),
         leakage: &anything,
         leakage_holds: LeakageReading::OnAverage,
         slack: Slack::Leakage,
@@ -171,8 +164,14 @@ fn knowledge(place: Place<'_>) -> Knowledge<'_> {
     }
 }
 
-fn as_intervals(table: &[Vec<Vec<f64>>]) -> Vec<Vec<Vec<[f64; 2]>>> {
-    table.iter().map(|t| t.iter().map(|values| values.iter().map(|p| [*p, *p]).collect()).collect()).collect()
+/// The place as intervals, of no width for a behaviour.
+fn intervals(place: Place) -> Table<[f64; 2]> {
+    match place {
+        Place::Behaviour(table) => {
+            table.iter().map(|t| t.iter().map(|values| values.iter().map(|p| [*p, *p]).collect()).collect()).collect()
+        }
+        Place::Region(table) => table.clone(),
+    }
 }
 
 fn descent(level: Level) -> impl Iterator<Item = Level> {

@@ -98,6 +98,9 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
             }
             let bound = witness.bound(evidence.place(), request.scenario().leakage(), request.scenario().leakage_holds());
             let bound = bound.map_err(|error| Discrepancy::Witness { pointer: pointer.clone(), digest: digest.clone(), error })?;
+            if proves_contradiction(&witness, &bound, evidence.place()) {
+                return Err(claim("the numbers contradict the declaration, so there is no entropy to speak of"));
+            }
             draft.add(&request, *target, level, &witness, &bound);
         }
         draft.conclude().certificate
@@ -139,7 +142,7 @@ fn recompute_outside(
     let bound = witness
         .bound(evidence.place(), scenario.leakage(), scenario.leakage_holds())
         .map_err(|error| not_accepted(&outside.witness, error))?;
-    if !proves_contradiction(&witness, &bound) {
+    if !proves_contradiction(&witness, &bound, evidence.place()) {
         return Err(claim("there is no contradiction"));
     }
     let Some(digest) = &outside.smallest_uniform_leakage_witness else {

@@ -17,7 +17,6 @@
 //! `q` (`d q`). Summing over the groups, with `Σ q_e = 1` and the leakage either limited in the sum or in each group, gives the bound
 //! that `witness.rs` states.
 
-use num_bigint::BigInt;
 use num_rational::BigRational;
 use num_traits::{One, Signed, ToPrimitive, Zero};
 use std::collections::BTreeMap;
@@ -491,7 +490,27 @@ impl CheckedWitness {
     }
 }
 
-/// Whether a bound of a contradiction proves that the numbers lie outside the model.
-pub fn proves_contradiction(witness: &CheckedWitness, bound: &CheckedBound) -> bool {
-    witness.witness.claim == Claim::Contradiction && bound.value < BigRational::from(BigInt::zero())
+/// Whether a bound proves that no model of the declaration has a behaviour in the place: a contradiction's if it is below zero, and
+/// a guessing probability's if it is below what guessing the likeliest outcome reaches anyway, `P_g(t) ≥ p(b|t)` for every b.
+///
+/// Such a bound on a guessing probability says nothing about an adversary; it must never be taken for entropy.
+pub fn proves_contradiction(witness: &CheckedWitness, bound: &CheckedBound, place: Place) -> bool {
+    match &witness.witness.claim {
+        Claim::Contradiction => bound.value.is_negative(),
+        Claim::Guess { target } => least_likeliest(place, *target).is_some_and(|least| bound.value < least),
+        Claim::Score { .. } | Claim::Power { .. } => false,
+    }
+}
+
+/// Lower bound on `max_b p(b|t)` over the place; `None` if the place has no such setting.
+fn least_likeliest(place: Place, target: Setting) -> Option<BigRational> {
+    match place {
+        Place::Behaviour(table) => {
+            let (_, first) = table.get(target.x)?.get(target.y)?.split_last()?;
+            let stated: Vec<BigRational> = first.iter().map(|p| decimal(*p)).collect();
+            let last = BigRational::one() - stated.iter().sum::<BigRational>();
+            stated.into_iter().chain([last]).max()
+        }
+        Place::Region(table) => table.get(target.x)?.get(target.y)?.iter().map(|[low, _]| decimal(*low)).max(),
+    }
 }

@@ -9,7 +9,7 @@ use bitassay::{
     solver::Limits,
     verify::verify,
     witness::{
-        check::{Place, check},
+        check::{Place, check, proves_contradiction},
         witness::Witness,
     },
 };
@@ -161,4 +161,51 @@ fn numbers_outside_the_model_are_refused_with_a_proof() {
     assert_ne!(declared.reason, Some(Reason::OutsideModel));
     let scenario: Scenario = certificate.scenario.clone();
     assert!(contradiction(&scenario, Place::Behaviour(&code(0.99)), Level::Lean, Limits::default()).is_none());
+}
+
+/// Where no model exists, affine bounds fall below any probability. That is a contradiction and not entropy, whatever a record says.
+#[test]
+fn a_bound_below_the_likeliest_outcome_is_no_entropy() {
+    let (certificate, witnesses) = certified();
+    let witness = check(&witnesses[0]).unwrap();
+    let impossible = code(1.1);
+    let place = Place::Behaviour(&impossible);
+    let bound = witness.bound(place, certificate.scenario.leakage(), certificate.scenario.leakage_holds()).unwrap();
+    assert!(bound.rounded_up() < impossible[0][0][0], "the test needs a bound that contradicts");
+    assert!(proves_contradiction(&witness, &bound, place));
+    // A record that takes it for entropy, consistent in every figure but this.
+    let mut forged = run(document(counts(&impossible, 10_000_000), 2, 0.0)).certificate;
+    assert_eq!(forged.reason, Some(Reason::OutsideModel));
+    forged.outside_model = None;
+    forged.targets = certificate.targets.clone();
+    let discrepancies = verify(&forged, None, &witnesses).unwrap_err();
+    assert!(discrepancies[0].to_string().contains("contradict"), "{discrepancies:?}");
+}
+
+/// Probabilities rounded to seven decimals lie outside the model by 1e-8. Whatever is said of them, it is not more than the exact ones give.
+#[test]
+fn rounded_probabilities_at_the_border_certify_nothing_extra() {
+    for digits in [5, 6, 7, 8, 9, 10, 12] {
+        let scale = 10f64.powi(digits);
+        let rounded: Vec<Vec<Vec<f64>>> = code(1.0)
+            .iter()
+            .map(|t| t.iter().map(|p| vec![(p[0] * scale).round() / scale, 1.0 - (p[0] * scale).round() / scale]).collect())
+            .collect();
+        let mut request = document(counts(&code(1.0), 100), 2, 0.0);
+        request.counts = None;
+        request.rounds = RoundModel::PlugIn;
+        request.behaviour = Some(rounded.clone());
+        let certificate = run(request).certificate;
+        println!(
+            "{digits}: {:?} {:?} {:?}",
+            certificate.verdict,
+            certificate.reason,
+            certificate.targets.first().map(|t| t.guessing_probability_bound)
+        );
+        match certificate.verdict {
+            Verdict::Estimate => assert!(guess(&certificate) >= rounded[0][0][0]),
+            Verdict::Refused => assert_eq!(certificate.reason, Some(Reason::OutsideModel)),
+            Verdict::Certified => panic!("plug-in figures release no bits"),
+        }
+    }
 }
