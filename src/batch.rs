@@ -6,7 +6,10 @@ use serde::{Deserialize, Serialize};
 use sha2::{Digest, Sha256};
 
 use crate::{
+    certificate::Certificate,
+    certify::certify_block,
     clock::Stamp,
+    committed::Committed,
     counts::Table,
     fault::{Fault, parse_object},
     profile::Profile,
@@ -71,13 +74,22 @@ pub enum LeakageSource {
     Batch,
 }
 
+/// What is left to do for a batch that was read.
+#[derive(Debug, Clone, PartialEq)]
+pub enum Task {
+    /// To be solved.
+    Solve(Box<Request>),
+    /// Rounds with memory: bits follow from the counts and the committed factors, so there is nothing left to do.
+    Done(Box<Certificate>),
+}
+
 /// A batch that was read, under the profile that it was read with.
 #[derive(Debug, Clone, PartialEq)]
 pub struct Batch {
     pub started_at: Stamp,
     pub ended_at: Stamp,
     pub leakage_source: LeakageSource,
-    pub request: Request,
+    pub task: Task,
 }
 
 impl Posted {
@@ -100,22 +112,23 @@ impl Posted {
         format!("sha256:{}", hex::encode(hasher.finalize()))
     }
 
-    /// Reads the batch under a profile.
+    /// Reads the batch under a profile, and for rounds with memory under the commitment that stands.
     ///
     /// # Errors
     /// A body of the wrong shape, or one that contradicts the profile or itself. Pointers are into the posted document; in CSV
     /// form `/lines/7/count` is a field of the seventh line, and an option is a pointer of its name, such as `/leakage`.
-    pub fn read(self, profile: &Profile) -> Result<Batch, BatchFault> {
+    pub fn read(self, profile: &Profile, committed: Option<&Committed>) -> Result<Batch, BatchFault> {
         match self {
             Self::Json(text) => {
-                parse_object::<BatchDocument>(&text).map_err(BatchFault::Malformed)?.under(profile).map_err(BatchFault::Impossible)
+                let document: BatchDocument = parse_object(&text).map_err(BatchFault::Malformed)?;
+                document.under(profile, committed).map_err(BatchFault::Impossible)
             }
             Self::Csv { text, options } => {
                 let rows = rows::Rows::read(&text).map_err(BatchFault::Malformed)?;
                 let CsvOptions { started_at, ended_at, leakage, lost_rounds } = options;
                 let counts = rows.table(profile.scenario().geometry()).map_err(BatchFault::Impossible)?;
                 let document = BatchDocument { counts, started_at, ended_at, leakage, lost_rounds };
-                document.under(profile).map_err(|fault| BatchFault::Impossible(rows.blame(fault)))
+                document.under(profile, committed).map_err(|fault| BatchFault::Impossible(rows.blame(fault)))
             }
         }
     }
@@ -123,10 +136,18 @@ impl Posted {
 
 impl BatchDocument {
     /// The batch under a profile, which supplies what the batch leaves out.
-    fn under(self, profile: &Profile) -> Result<Batch, Fault> {
+    fn under(self, profile: &Profile, committed: Option<&Committed>) -> Result<Batch, Fault> {
         let Self { counts, started_at, ended_at, leakage, lost_rounds } = self;
         if ended_at < started_at {
             return Err(Fault::new("/ended_at", format!("a batch does not end ({ended_at}) before it starts ({started_at})")));
+        }
+        if let Some(committed) = committed {
+            if leakage.is_some() {
+                return Err(Fault::new("/leakage", "the commitment fixes the leakage: a batch of rounds with memory has none of its own"));
+            }
+            let in_time = started_at >= committed.recorded_at;
+            let certificate = certify_block(&committed.commitment, committed.level, counts, lost_rounds, in_time)?;
+            return Ok(Batch { started_at, ended_at, leakage_source: LeakageSource::Profile, task: Task::Done(Box::new(certificate)) });
         }
         let leakage_source = if leakage.is_some() { LeakageSource::Batch } else { LeakageSource::Profile };
         let mut scenario = profile.scenario().clone();
@@ -145,7 +166,7 @@ impl BatchDocument {
             level: profile.level(),
             lost_rounds,
         })?;
-        Ok(Batch { started_at, ended_at, leakage_source, request })
+        Ok(Batch { started_at, ended_at, leakage_source, task: Task::Solve(Box::new(request)) })
     }
 }
 
@@ -173,7 +194,7 @@ mod tests {
         let json = r#"{"counts": [[[7, 3]], [[0, 10]]], "started_at": "2026-03-01T12:00:00Z", "ended_at": "2026-03-01T12:05:00Z"}"#;
         let rows = "preparation,measurement,outcome,count\n1,0,1,10\n0,0,0,7\n0,0,1,3\n";
         let profile = profile();
-        assert_eq!(Posted::Json(json.into()).read(&profile).unwrap(), csv(rows).read(&profile).unwrap());
+        assert_eq!(Posted::Json(json.into()).read(&profile, None).unwrap(), csv(rows).read(&profile, None).unwrap());
     }
 
     #[test]
@@ -204,7 +225,7 @@ mod tests {
             ("preparation,measurement,outcome,count\n0,0,0,1\n", ""),
         ];
         for (text, pointer) in cases {
-            let (BatchFault::Malformed(fault) | BatchFault::Impossible(fault)) = csv(text).read(&profile()).unwrap_err();
+            let (BatchFault::Malformed(fault) | BatchFault::Impossible(fault)) = csv(text).read(&profile(), None).unwrap_err();
             assert_eq!(fault.pointer, pointer, "{text}: {fault}");
         }
     }

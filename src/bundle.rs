@@ -14,8 +14,8 @@ use crate::{
 };
 
 /// What a service adds to a certificate when it records it. Nothing of this can be recomputed.
-const ENVELOPE: [&str; 9] =
-    ["concerns", "id", "rig", "profile_version", "recorded_at", "started_at", "ended_at", "leakage_source", "timings"];
+const ENVELOPE: [&str; 10] =
+    ["id", "rig", "profile_version", "recorded_at", "started_at", "ended_at", "leakage_source", "commitment", "concerns", "timings"];
 
 /// Witness documents by the digests of their canonical bytes.
 pub type Witnesses = BTreeMap<String, Witness>;

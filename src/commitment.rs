@@ -40,6 +40,7 @@ const DISTRIBUTION_SLACK: f64 = 1e-12;
 pub struct CommitmentDocument {
     pub scenario: ScenarioDocument,
     /// The behaviour the rig is expected to show. It affects how many bits are certified, never whether they are there.
+    #[cfg_attr(feature = "service", schema(value_type = Vec<Vec<Vec<f64>>>))]
     pub expected_behaviour: Table<f64>,
     /// Probability `π(x,y)` of each setting, positive everywhere, drawn independently of everything else.
     pub setting_distribution: Vec<Vec<f64>>,
@@ -114,11 +115,13 @@ pub struct Commitment {
     pub rounds: u64,
     pub setting_distribution: Vec<Vec<f64>>,
     pub failure: FailureTotal,
+    #[cfg_attr(feature = "service", schema(value_type = Vec<Vec<Vec<f64>>>))]
     pub expected_behaviour: Table<f64>,
     /// `β` in units of `2^-30`.
     pub power: u32,
     pub targets: Vec<CommittedTarget>,
     /// `F`, `[x][y][b]`, rounded down.
+    #[cfg_attr(feature = "service", schema(value_type = Vec<Vec<Vec<f64>>>))]
     pub factors: Table<f64>,
     /// Bits certified from a batch that shows exactly the expected behaviour; no promise.
     pub expected_bits: f64,

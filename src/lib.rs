@@ -55,6 +55,8 @@ pub mod certify;
 #[cfg(feature = "service")]
 pub mod clock;
 pub mod commitment;
+#[cfg(feature = "service")]
+pub mod committed;
 pub mod counts;
 pub mod entropy;
 pub mod exact;

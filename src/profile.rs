@@ -95,9 +95,6 @@ impl TryFrom<ProfileDocument> for Profile {
     fn try_from(document: ProfileDocument) -> Result<Self, Fault> {
         let ProfileDocument { scenario, rounds, failure, level, setting_distribution, outcome_labels, notes } = document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
-        if rounds == RoundModel::Memory {
-            return Err(Fault::new("/rounds", "rounds with memory need a commitment made before the data; this version has none"));
-        }
         failure.check().map_err(|fault| fault.under("/failure"))?;
         // Too large for every level is said now, and not when a batch comes in.
         let culprit = if level == LevelChoice::Auto { "/scenario" } else { "/level" };

@@ -12,11 +12,11 @@ use crate::{
 };
 
 /// How long a certification took, in seconds.
-#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize, utoipa::ToSchema)]
+#[derive(Debug, Clone, Copy, Default, PartialEq, Serialize, Deserialize, utoipa::ToSchema)]
 pub struct Timings {
     /// From acceptance until a solver was free.
     pub queued_seconds: f64,
-    /// On the solver.
+    /// On the solver; zero for rounds with memory, which need none.
     pub solved_seconds: f64,
 }
 
@@ -36,6 +36,9 @@ pub struct Record {
     #[schema(value_type = String, format = DateTime)]
     pub ended_at: Stamp,
     pub leakage_source: LeakageSource,
+    /// Rounds with memory only: identifier of the commitment that the batch was certified under.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    pub commitment: Option<Uuid>,
     #[serde(flatten)]
     pub certificate: Certificate,
     /// What the reader should know about the data: settings that are not drawn as declared, outcomes that drifted since the rig's newest

@@ -50,12 +50,17 @@ impl Refusal {
 fn explanation(certificate: &Certificate) -> String {
     match certificate.reason {
         Some(Reason::ZeroBound) => {
-            let min_entropy: f64 = certificate.targets.iter().filter_map(|target| target.min_entropy).sum();
+            let block = certificate.block.as_ref().map(|block| block.min_entropy);
+            let min_entropy = block.unwrap_or_else(|| certificate.targets.iter().filter_map(|target| target.min_entropy).sum());
             if min_entropy > 0.0 {
                 format!(
                     "The bound proves {min_entropy:.1} bits of min-entropy, but what is subtracted for the published counts and the \
                      hash uses up all of it. More rounds, or a smaller leakage, may help."
                 )
+            } else if block.is_some() {
+                "The counts, weighed with the committed factors, prove no min-entropy: they show less than was expected when the \
+                 commitment was made."
+                    .into()
             } else {
                 "Whoever made the devices may know every outcome: the bound on the guessing probability reaches 1. The counts, at \
                  the declared dimension and leakage, show no randomness."

@@ -1,5 +1,6 @@
 //! The service: takes batches in, has them solved, keeps what came out. Knows no HTTP.
 
+mod commitments;
 mod quality;
 mod solvers;
 mod turns;
@@ -12,11 +13,16 @@ use std::sync::{
 use tokio::sync::watch;
 use uuid::{NoContext, Uuid};
 
-pub use self::solvers::{Certifier, SolveError, Solvers};
-use self::{solvers::Solved, turns::Turns};
+use self::turns::Turns;
+pub use self::{
+    commitments::{Listed, OrderError},
+    solvers::{Certifier, SolveError, Solvers},
+};
 use crate::{
-    batch::{Batch, BatchFault, Posted},
+    batch::{Batch, BatchFault, Posted, Task},
+    certify::Certification,
     clock::{Clock, Stamp},
+    committed::Committed,
     ledger::{
         Ledger, LedgerError,
         history::{Filter, Page, Window},
@@ -25,7 +31,7 @@ use crate::{
     },
     profile::{Profile, RigName},
     record::{Record, Timings},
-    request::Data,
+    request::RoundModel,
     rig_yield::RigYield,
     submission::{IdempotencyKey, Submission},
 };
@@ -35,6 +41,8 @@ use crate::{
 pub enum SubmitError {
     #[error("there is no rig of this name")]
     UnknownRig,
+    #[error("the rig's rounds have memory, and no commitment stands for its newest profile")]
+    Uncommitted,
     #[error(transparent)]
     Batch(#[from] BatchFault),
     #[error("this idempotency key already stands for another batch")]
@@ -57,6 +65,15 @@ pub struct Check {
     pub fault: Option<String>,
 }
 
+/// What a certification rests on.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Evidence {
+    /// The commitment's document; rounds with memory only.
+    pub commitment: Option<String>,
+    /// Digest and document of each witness.
+    pub witnesses: Vec<(String, String)>,
+}
+
 /// A running service.
 pub struct Service {
     ledger: Ledger,
@@ -64,7 +81,7 @@ pub struct Service {
     clock: Arc<dyn Clock>,
     turns: Arc<Turns>,
     accepting: AtomicBool,
-    /// Batches that are being worked on, whether or not their posters still wait.
+    /// Batches and commitments that are being worked on, whether or not their posters still wait.
     active: watch::Sender<usize>,
 }
 
@@ -120,17 +137,31 @@ impl Service {
             let same = answered.body_digest == submission.body_digest;
             return if same { Ok(Settled { answered, replayed: true }) } else { Err(SubmitError::KeyReused) };
         }
-        let batch = posted.read(&profile.profile)?;
-        let solved = self.solvers.solve(batch.request.clone()).await?;
-        self.keep(profile, batch, solved, submission).await
+        let committed = match profile.profile.rounds() {
+            RoundModel::Memory => Some(self.standing(&profile).await?.ok_or(SubmitError::Uncommitted)?),
+            RoundModel::PlugIn | RoundModel::Independent => None,
+        };
+        let batch = posted.read(&profile.profile, committed.as_ref())?;
+        self.keep(profile, committed, batch, submission).await
     }
 
-    async fn keep(&self, profile: ProfileVersion, batch: Batch, solved: Solved, submission: Submission) -> Result<Settled, SubmitError> {
-        let Solved { certification, queued, solved } = solved;
-        let concerns = match batch.request.data() {
-            Data::Counts(counts) => quality::concerns(&self.ledger, &profile.rig, &profile.profile, counts).await?,
-            Data::Behaviour(_) => Vec::new(),
+    async fn keep(
+        &self,
+        profile: ProfileVersion,
+        committed: Option<Committed>,
+        batch: Batch,
+        submission: Submission,
+    ) -> Result<Settled, SubmitError> {
+        let (Certification { certificate, witnesses }, timings) = match batch.task {
+            Task::Solve(request) => {
+                let done = self.solvers.certify(*request).await?;
+                (done.outcome, Timings { queued_seconds: done.queued.as_secs_f64(), solved_seconds: done.solved.as_secs_f64() })
+            }
+            Task::Done(certificate) => (Certification { certificate: *certificate, witnesses: vec![] }, Timings::default()),
         };
+        let declared = profile.profile.setting_distribution();
+        let distribution = committed.as_ref().map(|committed| &committed.commitment.setting_distribution[..]).or(declared);
+        let concerns = quality::concerns(&self.ledger, &profile.rig, distribution, &certificate).await?;
         let recorded_at = self.clock.now();
         let record = Record {
             id: new_id(recorded_at),
@@ -140,11 +171,12 @@ impl Service {
             started_at: batch.started_at,
             ended_at: batch.ended_at,
             leakage_source: batch.leakage_source,
-            certificate: certification.certificate,
+            commitment: committed.map(|committed| committed.id),
+            certificate,
             concerns,
-            timings: Timings { queued_seconds: queued.as_secs_f64(), solved_seconds: solved.as_secs_f64() },
+            timings,
         };
-        let entry = Entry::new(&record, &certification.witnesses, submission)?;
+        let entry = Entry::new(&record, &witnesses, submission)?;
         self.ledger.writer.keep_entry(entry).await.map_err(|error| match error {
             WriteError::KeyReused => SubmitError::KeyReused,
             WriteError::Ledger(error) => SubmitError::Ledger(error),
@@ -161,12 +193,17 @@ impl Service {
         self.ledger.history.record(id).await
     }
 
-    /// Digest and document of each witness of a certification; `None` if there is no such certification.
+    /// What a certification rests on; `None` if there is no such certification.
     ///
     /// # Errors
     /// The ledger's.
-    pub async fn witnesses(&self, id: Uuid) -> Result<Option<Vec<(String, String)>>, LedgerError> {
-        self.ledger.history.witnesses(id).await
+    pub async fn evidence(&self, id: Uuid) -> Result<Option<Evidence>, LedgerError> {
+        let Some(mut witnesses) = self.ledger.history.witnesses(id).await? else { return Ok(None) };
+        let commitment = self.ledger.history.commitment_of(id).await?.map(|(committed, of_commitment)| {
+            witnesses.extend(of_commitment);
+            committed.document
+        });
+        Ok(Some(Evidence { commitment, witnesses }))
     }
 
     /// One page of the history, newest first.
@@ -209,7 +246,7 @@ impl Service {
         self.accepting.store(false, Ordering::Relaxed);
     }
 
-    /// Finishes all batches that are being worked on, writes them, and closes the ledger.
+    /// Finishes all batches and commitments that are being worked on, writes them, and closes the ledger.
     pub async fn close(&self) {
         self.announce_shutdown();
         // The sender lives in `self`: waiting cannot fail.
@@ -219,7 +256,7 @@ impl Service {
     }
 }
 
-/// Counts as one active batch for as long as it lives.
+/// Counts as one active batch or commitment for as long as it lives.
 struct Working {
     service: Arc<Service>,
 }

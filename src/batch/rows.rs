@@ -68,6 +68,9 @@ impl Rows {
 
     /// Turns a fault of the table into one of the rows. A setting without rounds has no row to blame: the words name it.
     pub fn blame(&self, fault: Fault) -> Fault {
+        if fault.pointer == "/counts" {
+            return Fault { pointer: String::new(), ..fault };
+        }
         let Some(path) = fault.pointer.strip_prefix("/counts/") else { return fault };
         let cell: Vec<usize> = path.split('/').filter_map(|index| index.parse().ok()).collect();
         if let Some(row) = self.rows.iter().find(|row| row.cell[..] == cell[..]) {

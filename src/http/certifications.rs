@@ -19,13 +19,14 @@ use super::{
 use crate::{
     certificate::Verdict,
     clock::Stamp,
+    commitment::Commitment,
     ledger::{
         history::{Filter, Page},
         rows::Recorded,
     },
     profile::RigName,
     record::{Record, Summary},
-    service::Service,
+    service::{Evidence, Service},
     witness::witness::Witness,
 };
 
@@ -50,17 +51,20 @@ pub async fn get(
     Ok(json(StatusCode::OK, record))
 }
 
-/// The witnesses that a certification rests on.
+/// What a certification rests on: its witnesses, or its commitment and the commitment's witnesses.
 #[derive(Serialize, ToSchema)]
 pub struct Witnesses {
     /// Identifier of the certification.
     certification: uuid::Uuid,
+    /// Rounds with memory only: the commitment that the certification rests on.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    commitment: Option<Commitment>,
     /// Each witness under its `sha256:` digest; exact integers, enough to check the bound offline.
     #[schema(value_type = std::collections::BTreeMap<String, Object>)]
     witnesses: std::collections::BTreeMap<String, Witness>,
 }
 
-/// The witnesses of a certification.
+/// What a certification rests on, enough to check it offline.
 #[utoipa::path(
     get, path = "/v1/certifications/{id}/witness", tag = "certifications", operation_id = "get_witness",
     params(("id" = String, Path, description = "Identifier of the certification.")),
@@ -75,10 +79,11 @@ pub async fn witness(
     TakesJson: TakesJson,
     State(service): State<Arc<Service>>,
 ) -> Result<Response<Body>, Problem> {
-    let found = service.witnesses(id).await?.ok_or_else(no_certification)?;
+    let Evidence { commitment, witnesses } = service.evidence(id).await?.ok_or_else(no_certification)?;
     // The documents are texts that were kept as they are, so that their digests still hold.
-    let members: Vec<String> = found.into_iter().map(|(digest, document)| format!("\"{digest}\":{document}")).collect();
-    Ok(json(StatusCode::OK, format!("{{\"certification\":\"{id}\",\"witnesses\":{{{}}}}}", members.join(","))))
+    let commitment = commitment.map_or_else(String::new, |document| format!("\"commitment\":{document},"));
+    let members: Vec<String> = witnesses.into_iter().map(|(digest, document)| format!("\"{digest}\":{document}")).collect();
+    Ok(json(StatusCode::OK, format!("{{\"certification\":\"{id}\",{commitment}\"witnesses\":{{{}}}}}", members.join(","))))
 }
 
 #[derive(IntoParams)]

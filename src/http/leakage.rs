@@ -7,13 +7,10 @@ use axum::{
 
 use super::{
     negotiation::TakesJson,
-    problem::{Culprit, Problem, ProblemDocument},
-    wire::{Media, Payload, Query, json},
+    problem::{Problem, ProblemDocument},
+    wire::{Payload, Query, json},
 };
-use crate::{
-    fault::parse_object,
-    leakage::budget::{Budget, BudgetDocument},
-};
+use crate::leakage::budget::{Budget, BudgetDocument};
 
 const BUDGET_LIMIT: usize = 64 * 1024;
 
@@ -33,11 +30,7 @@ const BUDGET_LIMIT: usize = 64 * 1024;
     )
 )]
 pub async fn post(Query(()): Query<()>, TakesJson: TakesJson, payload: Payload<BUDGET_LIMIT>) -> Result<Response<Body>, Problem> {
-    if payload.media != Media::Json {
-        let detail = "A budget is application/json.";
-        return Err(Problem::new(StatusCode::UNSUPPORTED_MEDIA_TYPE, detail).blaming(Culprit::Header("Content-Type")));
-    }
-    let document: BudgetDocument = parse_object(&payload.bytes).map_err(|fault| Problem::body(StatusCode::BAD_REQUEST, fault))?;
+    let document: BudgetDocument = payload.object("A budget")?;
     let budget = Budget::try_from(document).map_err(|fault| Problem::body(StatusCode::UNPROCESSABLE_ENTITY, fault))?;
     let text = serde_json::to_string(&budget.report()).map_err(|error| Problem::internal(&error))?;
     Ok(json(StatusCode::OK, text))

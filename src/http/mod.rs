@@ -2,6 +2,7 @@
 
 mod batches;
 mod certifications;
+mod commitments;
 mod condition;
 mod health;
 mod intake;

@@ -22,6 +22,7 @@ use crate::scenario::LeakageDocument;
     ),
     tags(
         (name = "rigs", description = "What operators declare about their rigs, and what the rigs yield."),
+        (name = "commitments", description = "What is fixed ahead of the data of rounds with memory."),
         (name = "batches", description = "What rigs post."),
         (name = "certifications", description = "What was certified, and what was refused."),
         (name = "leakage", description = "What leaves the carrier, from what was measured."),

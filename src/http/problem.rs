@@ -1,5 +1,7 @@
 //! Everything that goes wrong, as a problem document (RFC 9457).
 
+use std::time::Duration;
+
 use axum::{
     body::Body,
     http::{HeaderName, HeaderValue, Response, StatusCode, header},
@@ -12,7 +14,7 @@ use crate::{
     batch::BatchFault,
     fault::Fault,
     ledger::{LedgerError, writer::WriteError},
-    service::{Check, SolveError, SubmitError},
+    service::{Check, OrderError, SolveError, SubmitError},
 };
 
 /// Media type of every error.
@@ -151,6 +153,12 @@ impl Problem {
         self.with_header(header::RETRY_AFTER, HeaderValue::from(seconds))
     }
 
+    fn queue_full(detail: String, retry_after: Duration) -> Self {
+        Self::new(StatusCode::SERVICE_UNAVAILABLE, detail)
+            .named("urn:bitassay:problem:queue-full", "The queue is full")
+            .retry_after(retry_after.as_secs().max(1))
+    }
+
     /// Not ready, and why.
     pub fn not_ready(failed: Vec<Check>) -> Self {
         let mut problem = Self::new(StatusCode::SERVICE_UNAVAILABLE, "The service takes no batches at present.").retry_after(5);
@@ -217,6 +225,11 @@ impl From<SubmitError> for Problem {
     fn from(error: SubmitError) -> Self {
         match error {
             SubmitError::UnknownRig => Self::not_found("There is no rig of this name; an operator has to put its profile first."),
+            SubmitError::Uncommitted => {
+                let detail = "The rig's rounds have memory, and no commitment stands for its newest profile. Nothing was recorded; commit \
+                              first, with a POST to the rig's commitments, and post batches that begin afterwards.";
+                Self::new(StatusCode::UNPROCESSABLE_ENTITY, detail).named("urn:bitassay:problem:no-commitment", "Nothing is committed")
+            }
             SubmitError::Batch(BatchFault::Malformed(fault)) => Self::body(StatusCode::BAD_REQUEST, fault),
             SubmitError::Batch(BatchFault::Impossible(fault)) => Self::body(StatusCode::UNPROCESSABLE_ENTITY, fault),
             SubmitError::KeyReused => {
@@ -226,17 +239,38 @@ impl From<SubmitError> for Problem {
                     .blaming(Culprit::Header("Idempotency-Key"))
             }
             SubmitError::Solve(SolveError::QueueFull { waiting, retry_after }) => {
-                let detail =
-                    format!("{waiting} batches are waiting already. Nothing was recorded; send the batch again, under the same key.");
-                Self::new(StatusCode::SERVICE_UNAVAILABLE, detail)
-                    .named("urn:bitassay:problem:queue-full", "The queue is full")
-                    .retry_after(retry_after.as_secs().max(1))
+                let detail = format!("{waiting} jobs are waiting already. Nothing was recorded; send the batch again, under the same key.");
+                Self::queue_full(detail, retry_after)
             }
             SubmitError::Solve(SolveError::Stopped) => LedgerError::Closed.into(),
             SubmitError::Ledger(error) => error.into(),
             error @ (SubmitError::Solve(SolveError::Panicked) | SubmitError::Unwritable(_) | SubmitError::Abandoned(_)) => {
                 Self::internal(&error)
             }
+        }
+    }
+}
+
+impl From<OrderError> for Problem {
+    fn from(error: OrderError) -> Self {
+        match error {
+            OrderError::UnknownRig => SubmitError::UnknownRig.into(),
+            OrderError::OtherRounds => {
+                let detail = "Only rounds with memory are committed to, and the rig's profile does not say that its rounds have memory.";
+                Self::new(StatusCode::UNPROCESSABLE_ENTITY, detail)
+            }
+            OrderError::Order(fault) => Self::body(StatusCode::UNPROCESSABLE_ENTITY, fault),
+            OrderError::Commit(error) => {
+                let detail = format!("No commitment came of it, and nothing was recorded: {error}.");
+                Self::new(StatusCode::UNPROCESSABLE_ENTITY, detail)
+            }
+            OrderError::Solve(SolveError::QueueFull { waiting, retry_after }) => {
+                let detail = format!("{waiting} jobs are waiting already. Nothing was recorded; send the commitment again.");
+                Self::queue_full(detail, retry_after)
+            }
+            OrderError::Solve(SolveError::Stopped) => LedgerError::Closed.into(),
+            OrderError::Ledger(error) => error.into(),
+            error @ (OrderError::Solve(SolveError::Panicked) | OrderError::Abandoned(_)) => Self::internal(&error),
         }
     }
 }

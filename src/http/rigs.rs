@@ -14,12 +14,11 @@ use utoipa::{IntoParams, ToSchema};
 use super::{
     condition::{Expects, Holds, entity_tag},
     negotiation::TakesJson,
-    problem::{Culprit, Problem, ProblemDocument},
-    wire::{FromParameters, Media, Parameters, Payload, Query, RigPath, cursor, json, link_next, no_rig, page},
+    problem::{Problem, ProblemDocument},
+    wire::{FromParameters, Parameters, Payload, Query, RigPath, cursor, json, link_next, no_rig, page},
 };
 use crate::{
     clock::Stamp,
-    fault::parse_object,
     ledger::{rows::ProfileVersion, writer::Kept},
     profile::{Profile, ProfileDocument, RigName},
     service::Service,
@@ -54,7 +53,8 @@ pub async fn put(
     State(service): State<Arc<Service>>,
     payload: Payload<PROFILE_LIMIT>,
 ) -> Result<Response<Body>, Problem> {
-    let profile = read_profile(&payload)?;
+    let document: ProfileDocument = payload.object("A profile")?;
+    let profile = Profile::try_from(document).map_err(|fault| Problem::body(StatusCode::UNPROCESSABLE_ENTITY, fault))?;
     let location = format!("/v1/rigs/{rig}");
     let text = serde_json::to_string(&profile).map_err(|error| Problem::internal(&error))?;
     let (kept, version) = service.keep_profile(rig, profile, expectation).await?;
@@ -63,15 +63,6 @@ pub async fn put(
         Kept::Created => (tag, [(header::LOCATION, location)], json(StatusCode::CREATED, text)).into_response(),
         Kept::Updated | Kept::Unchanged => (tag, json(StatusCode::OK, text)).into_response(),
     })
-}
-
-fn read_profile<const LIMIT: usize>(payload: &Payload<LIMIT>) -> Result<Profile, Problem> {
-    if payload.media != Media::Json {
-        let detail = "A profile is application/json.";
-        return Err(Problem::new(StatusCode::UNSUPPORTED_MEDIA_TYPE, detail).blaming(Culprit::Header("Content-Type")));
-    }
-    let document: ProfileDocument = parse_object(&payload.bytes).map_err(|fault| Problem::body(StatusCode::BAD_REQUEST, fault))?;
-    Profile::try_from(document).map_err(|fault| Problem::body(StatusCode::UNPROCESSABLE_ENTITY, fault))
 }
 
 #[derive(IntoParams)]

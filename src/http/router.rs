@@ -13,7 +13,7 @@ use tower_http::{catch_panic::CatchPanicLayer, trace::TraceLayer};
 use utoipa::OpenApi;
 use utoipa_axum::{router::OpenApiRouter, routes};
 
-use super::{batches, certifications, health, intake, leakage, openapi, problem::Problem, rigs, yields};
+use super::{batches, certifications, commitments, health, intake, leakage, openapi, problem::Problem, rigs, yields};
 use crate::service::Service;
 
 pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
@@ -21,6 +21,8 @@ pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
         .routes(routes!(rigs::list))
         .routes(routes!(rigs::get, rigs::put))
         .routes(routes!(batches::post))
+        .routes(routes!(commitments::list, commitments::post))
+        .routes(routes!(commitments::get))
         .routes(routes!(yields::get))
         .routes(routes!(certifications::list))
         .routes(routes!(certifications::get))

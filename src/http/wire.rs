@@ -46,14 +46,33 @@ impl<S: Send + Sync> FromRequestParts<S> for CertificationPath {
     type Rejection = Problem;
 
     async fn from_request_parts(parts: &mut Parts, state: &S) -> Result<Self, Problem> {
-        let text = Path::<String>::from_request_parts(parts, state).await.ok();
-        let id = text.and_then(|Path(text)| Uuid::try_parse(&text).ok().filter(|id| id.to_string() == text));
-        id.map(Self).ok_or_else(no_certification)
+        identifier(parts, state).await.map(Self).ok_or_else(no_certification)
     }
+}
+
+/// The `{id}` of a commitment's path. What is no identifier names nothing.
+pub struct CommitmentPath(pub Uuid);
+
+impl<S: Send + Sync> FromRequestParts<S> for CommitmentPath {
+    type Rejection = Problem;
+
+    async fn from_request_parts(parts: &mut Parts, state: &S) -> Result<Self, Problem> {
+        identifier(parts, state).await.map(Self).ok_or_else(no_commitment)
+    }
+}
+
+/// The path's identifier, in the one way that it is written.
+async fn identifier<S: Send + Sync>(parts: &mut Parts, state: &S) -> Option<Uuid> {
+    let Path(text) = Path::<String>::from_request_parts(parts, state).await.ok()?;
+    Uuid::try_parse(&text).ok().filter(|id| id.to_string() == text)
 }
 
 pub fn no_certification() -> Problem {
     Problem::not_found("There is no certification of this identifier.")
+}
+
+pub fn no_commitment() -> Problem {
+    Problem::not_found("There is no commitment of this identifier.")
 }
 
 pub fn no_rig() -> Problem {
@@ -221,6 +240,17 @@ impl<const LIMIT: usize, S: Send + Sync> FromRequest<S> for Payload<LIMIT> {
             return Err(too_large(LIMIT));
         }
         Ok(Self { media, bytes })
+    }
+}
+
+impl<const LIMIT: usize> Payload<LIMIT> {
+    /// The body as a JSON object; `what` begins the sentence that is answered to any other kind of body.
+    pub fn object<T: DeserializeOwned>(&self, what: &str) -> Result<T, Problem> {
+        if self.media != Media::Json {
+            let detail = format!("{what} is application/json.");
+            return Err(Problem::new(StatusCode::UNSUPPORTED_MEDIA_TYPE, detail).blaming(Culprit::Header("Content-Type")));
+        }
+        fault::parse_object(&self.bytes).map_err(|fault| Problem::body(StatusCode::BAD_REQUEST, fault))
     }
 }
 

@@ -7,9 +7,9 @@ use uuid::Uuid;
 
 use super::{
     LedgerError,
-    rows::{Answered, ProfileVersion, Read, Recorded, Tally, word},
+    rows::{Answered, NumberedCommitment, ProfileVersion, Read, Recorded, Tally, word},
 };
-use crate::{certificate::Verdict, clock::Stamp, profile::RigName, record::Summary, submission::IdempotencyKey};
+use crate::{certificate::Verdict, clock::Stamp, committed::Committed, profile::RigName, record::Summary, submission::IdempotencyKey};
 
 /// Which records a page of the history is taken from.
 #[derive(Debug, Clone, Default, PartialEq)]
@@ -135,6 +135,53 @@ impl History {
             return Ok(None);
         }
         Ok(Some(rows.into_iter().filter_map(|(digest, document)| digest.zip(document)).collect()))
+    }
+
+    /// One commitment.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn commitment(&self, id: Uuid) -> Result<Option<Committed>, LedgerError> {
+        let sql = "SELECT * FROM commitments WHERE id = ?";
+        let row = sqlx::query(sql).bind(id.to_string()).fetch_optional(&self.pool).await?;
+        row.map(|row| Committed::read(&row)).transpose()
+    }
+
+    /// The newest commitment of a rig that was made under a version of its profile.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn newest_commitment(&self, rig: &RigName, profile_version: u64) -> Result<Option<Committed>, LedgerError> {
+        let sql = "SELECT * FROM commitments WHERE rig = ? AND profile_version = ? ORDER BY commitment DESC LIMIT 1";
+        let row = sqlx::query(sql).bind(rig.as_str()).bind(clamped(profile_version)).fetch_optional(&self.pool).await?;
+        row.map(|row| Committed::read(&row)).transpose()
+    }
+
+    /// A rig's commitments, newest first, those before the number `before`.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn commitments(&self, rig: &RigName, before: Option<u64>, limit: u32) -> Result<Page<NumberedCommitment>, LedgerError> {
+        let sql = "SELECT * FROM commitments WHERE rig = ? AND commitment < ? ORDER BY commitment DESC LIMIT ?";
+        let before = clamped(before.unwrap_or(u64::MAX));
+        let rows = sqlx::query(sql).bind(rig.as_str()).bind(before).bind(i64::from(limit) + 1).fetch_all(&self.pool).await?;
+        let items = rows.iter().map(NumberedCommitment::read).collect::<Result<_, _>>()?;
+        Ok(Page::of(items, limit))
+    }
+
+    /// The commitment that a certification rests on, and digest and document of each of its witnesses.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn commitment_of(&self, certification: Uuid) -> Result<Option<(Committed, Vec<(String, String)>)>, LedgerError> {
+        let sql = "SELECT m.* FROM certifications c JOIN certification_commitments USING (entry) JOIN commitments m USING (commitment) \
+                   WHERE c.id = ?";
+        let Some(row) = sqlx::query(sql).bind(certification.to_string()).fetch_optional(&self.pool).await? else { return Ok(None) };
+        let NumberedCommitment { number, committed } = NumberedCommitment::read(&row)?;
+        let sql = "SELECT w.digest, w.document FROM commitment_witnesses JOIN witnesses w USING (digest) WHERE commitment = ? \
+                   ORDER BY w.digest";
+        let witnesses = sqlx::query_as(sql).bind(clamped(number)).fetch_all(&self.pool).await?;
+        Ok(Some((committed, witnesses)))
     }
 
     /// The answer that a submission was given.

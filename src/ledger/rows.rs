@@ -9,6 +9,8 @@ use super::LedgerError;
 use crate::{
     certificate::{Reason, Verdict},
     clock::Stamp,
+    commitment::Commitment,
+    committed::Committed,
     profile::{Profile, RigName},
     record::Record,
     refusal::Refusal,
@@ -37,6 +39,8 @@ pub struct Entry {
     pub certified_bits: u64,
     pub rounds: u64,
     pub failure: Option<f64>,
+    /// The commitment it rests on, whose witnesses are not listed here again.
+    pub commitment: Option<Uuid>,
     /// The record's text.
     pub record: String,
     /// Digest and document of each witness.
@@ -53,10 +57,6 @@ impl Entry {
     /// A figure that JSON cannot hold.
     pub fn new(record: &Record, witnesses: &[Witness], submission: Submission) -> Result<Self, serde_json::Error> {
         let certificate = &record.certificate;
-        let mut witnesses: Vec<_> = witnesses.iter().map(|witness| (witness.digest(), witness.canonical_json())).collect();
-        // Targets may rest on the same witness.
-        witnesses.sort();
-        witnesses.dedup();
         Ok(Self {
             id: record.id,
             rig: record.rig.clone(),
@@ -67,12 +67,28 @@ impl Entry {
             certified_bits: certificate.certified_bits,
             rounds: certificate.total_rounds.unwrap_or(0),
             failure: certificate.failure.map(|failure| failure.total),
+            commitment: record.commitment,
             record: serde_json::to_string(record)?,
-            witnesses,
+            witnesses: documents(witnesses),
             submission,
             refusal: Refusal::of(record).map(|refusal| serde_json::to_string(&refusal)).transpose()?,
         })
     }
+}
+
+/// Digest and document of each witness, once each: targets may rest on the same one.
+pub fn documents(witnesses: &[Witness]) -> Vec<(String, String)> {
+    let mut documents: Vec<_> = witnesses.iter().map(|witness| (witness.digest(), witness.canonical_json())).collect();
+    documents.sort();
+    documents.dedup();
+    documents
+}
+
+/// One commitment of a list.
+#[derive(Debug, Clone, PartialEq)]
+pub struct NumberedCommitment {
+    pub number: u64,
+    pub committed: Committed,
 }
 
 /// The answer that a submission was given, to be given again.
@@ -140,6 +156,30 @@ impl Read for ProfileVersion {
             profile: serde_json::from_str(&profile)
                 .map_err(|source| LedgerError::Unreadable { what: "profile", source: Arc::new(source) })?,
         })
+    }
+}
+
+impl Read for Committed {
+    fn read(row: &SqliteRow) -> Result<Self, LedgerError> {
+        let document: String = row.try_get("document")?;
+        let commitment: Commitment =
+            serde_json::from_str(&document).map_err(|source| LedgerError::Unreadable { what: "commitment", source: Arc::new(source) })?;
+        Ok(Self {
+            id: value(row.try_get("id")?, "id")?,
+            rig: value(row.try_get("rig")?, "rig name")?,
+            profile_version: unsigned(row.try_get("profile_version")?, "version")?,
+            recorded_at: time(row.try_get("recorded_at")?)?,
+            level: value(row.try_get("level")?, "level")?,
+            digest: row.try_get("digest")?,
+            document,
+            commitment,
+        })
+    }
+}
+
+impl Read for NumberedCommitment {
+    fn read(row: &SqliteRow) -> Result<Self, LedgerError> {
+        Ok(Self { number: unsigned(row.try_get("commitment")?, "commitment number")?, committed: Committed::read(row)? })
     }
 }
 

@@ -15,6 +15,7 @@ use super::{
 };
 use crate::{
     clock::Stamp,
+    committed::Committed,
     profile::{Profile, RigName},
 };
 
@@ -72,16 +73,19 @@ pub struct Settled {
 
 type ProfileAnswer = Result<(Kept, u64), WriteError>;
 type EntryAnswer = Result<Settled, WriteError>;
+type CommitmentAnswer = Result<(), LedgerError>;
 
 enum Item {
     Profile { rig: RigName, profile: Box<Profile>, expectation: Expectation, recorded_at: Stamp, answer: oneshot::Sender<ProfileAnswer> },
     Entry { entry: Box<Entry>, answer: oneshot::Sender<EntryAnswer> },
+    Commitment { committed: Box<Committed>, witnesses: Vec<(String, String)>, answer: oneshot::Sender<CommitmentAnswer> },
 }
 
 /// An item's outcome, kept back until the transaction is committed.
 enum Outcome {
     Profile(oneshot::Sender<ProfileAnswer>, ProfileAnswer),
     Entry(oneshot::Sender<EntryAnswer>, EntryAnswer),
+    Commitment(oneshot::Sender<CommitmentAnswer>, CommitmentAnswer),
 }
 
 impl Outcome {
@@ -90,32 +94,35 @@ impl Outcome {
         match self {
             Self::Profile(answer, outcome) => drop(answer.send(outcome)),
             Self::Entry(answer, outcome) => drop(answer.send(outcome)),
+            Self::Commitment(answer, outcome) => drop(answer.send(outcome)),
         }
     }
 
     /// Whether the database, and not the item, is to blame.
     fn broken(&self) -> Option<&LedgerError> {
         match self {
-            Self::Profile(_, Err(WriteError::Ledger(error))) | Self::Entry(_, Err(WriteError::Ledger(error))) => Some(error),
+            Self::Profile(_, Err(WriteError::Ledger(error)))
+            | Self::Entry(_, Err(WriteError::Ledger(error)))
+            | Self::Commitment(_, Err(error)) => Some(error),
             _ => None,
         }
     }
 
     fn failed(self, error: &LedgerError) -> Self {
-        let error = WriteError::Ledger(error.clone());
         match self {
-            Self::Profile(answer, _) => Self::Profile(answer, Err(error)),
-            Self::Entry(answer, _) => Self::Entry(answer, Err(error)),
+            Self::Profile(answer, _) => Self::Profile(answer, Err(error.clone().into())),
+            Self::Entry(answer, _) => Self::Entry(answer, Err(error.clone().into())),
+            Self::Commitment(answer, _) => Self::Commitment(answer, Err(error.clone())),
         }
     }
 }
 
 impl Item {
     fn failed(self, error: &LedgerError) -> Outcome {
-        let error = WriteError::Ledger(error.clone());
         match self {
-            Self::Profile { answer, .. } => Outcome::Profile(answer, Err(error)),
-            Self::Entry { answer, .. } => Outcome::Entry(answer, Err(error)),
+            Self::Profile { answer, .. } => Outcome::Profile(answer, Err(error.clone().into())),
+            Self::Entry { answer, .. } => Outcome::Entry(answer, Err(error.clone().into())),
+            Self::Commitment { answer, .. } => Outcome::Commitment(answer, Err(error.clone())),
         }
     }
 
@@ -126,6 +133,9 @@ impl Item {
                 Outcome::Profile(answer, outcome)
             }
             Self::Entry { entry, answer } => Outcome::Entry(answer, write_entry(connection, *entry).await),
+            Self::Commitment { committed, witnesses, answer } => {
+                Outcome::Commitment(answer, write_commitment(connection, &committed, &witnesses).await)
+            }
         }
     }
 }
@@ -174,6 +184,17 @@ impl Writer {
     pub async fn keep_entry(&self, entry: Entry) -> EntryAnswer {
         let (answer, outcome) = oneshot::channel();
         self.sender()?.send(Item::Entry { entry: Box::new(entry), answer }).await.map_err(|_| LedgerError::Closed)?;
+        outcome.await.map_err(|_| LedgerError::Closed)?
+    }
+
+    /// Keeps a commitment with its witnesses; durable when answered.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn keep_commitment(&self, committed: Committed, witnesses: Vec<(String, String)>) -> CommitmentAnswer {
+        let (answer, outcome) = oneshot::channel();
+        let item = Item::Commitment { committed: Box::new(committed), witnesses, answer };
+        self.sender()?.send(item).await.map_err(|_| LedgerError::Closed)?;
         outcome.await.map_err(|_| LedgerError::Closed)?
     }
 
@@ -295,7 +316,17 @@ async fn write_entry(connection: &mut SqliteConnection, entry: Entry) -> EntryAn
     }
     let number = insert_certification(connection, &entry).await?;
     for (digest, document) in &entry.witnesses {
-        insert_witness(connection, number, digest, document).await?;
+        insert_witness(connection, digest, document).await?;
+        sqlx::query("INSERT INTO certification_witnesses (entry, digest) VALUES (?, ?)")
+            .bind(number)
+            .bind(digest)
+            .execute(&mut *connection)
+            .await?;
+    }
+    if let Some(commitment) = entry.commitment {
+        // A commitment that is not there makes this NULL, which the column refuses.
+        let sql = "INSERT INTO certification_commitments (entry, commitment) VALUES (?, (SELECT commitment FROM commitments WHERE id = ?))";
+        sqlx::query(sql).bind(number).bind(commitment.to_string()).execute(&mut *connection).await?;
     }
     sqlx::query("INSERT INTO submissions (rig, idempotency_key, body_digest, entry, refusal) VALUES (?, ?, ?, ?, ?)")
         .bind(rig.as_str())
@@ -311,7 +342,6 @@ async fn write_entry(connection: &mut SqliteConnection, entry: Entry) -> EntryAn
 
 /// Adds the certification as the next entry; answers with its number.
 async fn insert_certification(connection: &mut SqliteConnection, entry: &Entry) -> Result<i64, WriteError> {
-    let signed = |number: u64, what| i64::try_from(number).map_err(|_| LedgerError::OutOfRange { what });
     let sql = "INSERT INTO certifications (entry, id, rig, profile_version, verdict, reason, recorded_at, certified_bits, rounds, \
                failure, record) VALUES ((SELECT COALESCE(MAX(entry), -1) + 1 FROM certifications), ?, ?, ?, ?, ?, ?, ?, ?, ?, ?) \
                RETURNING entry";
@@ -331,13 +361,37 @@ async fn insert_certification(connection: &mut SqliteConnection, entry: &Entry) 
     Ok(number)
 }
 
-/// Keeps the witness, unless it is known, and ties it to the entry.
-async fn insert_witness(connection: &mut SqliteConnection, number: i64, digest: &str, document: &str) -> Result<(), WriteError> {
+async fn write_commitment(connection: &mut SqliteConnection, committed: &Committed, witnesses: &[(String, String)]) -> CommitmentAnswer {
+    let sql = "INSERT INTO commitments (commitment, id, rig, profile_version, recorded_at, level, digest, document) \
+               VALUES ((SELECT COALESCE(MAX(commitment), -1) + 1 FROM commitments), ?, ?, ?, ?, ?, ?, ?) RETURNING commitment";
+    let number: i64 = sqlx::query_scalar(sql)
+        .bind(committed.id.to_string())
+        .bind(committed.rig.as_str())
+        .bind(signed(committed.profile_version, "version")?)
+        .bind(committed.recorded_at.microseconds())
+        .bind(word(committed.level))
+        .bind(&committed.digest)
+        .bind(&committed.document)
+        .fetch_one(&mut *connection)
+        .await?;
+    for (digest, document) in witnesses {
+        insert_witness(connection, digest, document).await?;
+        let sql = "INSERT INTO commitment_witnesses (commitment, digest) VALUES (?, ?)";
+        sqlx::query(sql).bind(number).bind(digest).execute(&mut *connection).await?;
+    }
+    Ok(())
+}
+
+fn signed(number: u64, what: &'static str) -> Result<i64, LedgerError> {
+    i64::try_from(number).map_err(|_| LedgerError::OutOfRange { what })
+}
+
+/// Keeps the witness, unless it is known.
+async fn insert_witness(connection: &mut SqliteConnection, digest: &str, document: &str) -> Result<(), LedgerError> {
     sqlx::query("INSERT INTO witnesses (digest, document) SELECT ?1, ?2 WHERE NOT EXISTS (SELECT 1 FROM witnesses WHERE digest = ?1)")
         .bind(digest)
         .bind(document)
-        .execute(&mut *connection)
+        .execute(connection)
         .await?;
-    sqlx::query("INSERT INTO certification_witnesses (entry, digest) VALUES (?, ?)").bind(number).bind(digest).execute(connection).await?;
     Ok(())
 }

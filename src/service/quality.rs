@@ -3,10 +3,10 @@
 use serde::Deserialize;
 
 use crate::{
-    certificate::Verdict,
+    certificate::{Certificate, Verdict},
     counts::{Counts, Table},
     ledger::{Ledger, LedgerError, history::Filter},
-    profile::{Profile, RigName},
+    profile::RigName,
     record::Concern,
     statistics::quality::{Expectations, examine},
 };
@@ -22,23 +22,27 @@ struct Earlier {
     counts: Option<Table<u64>>,
 }
 
-/// Settings against the declared distribution, outcomes against the rig's newest certified batch, and settings with few rounds.
+/// Settings against the distribution that was declared or committed, outcomes against the rig's newest certified batch, and settings with few rounds.
 ///
 /// # Errors
 /// The ledger's.
-pub async fn concerns(ledger: &Ledger, rig: &RigName, profile: &Profile, counts: &Counts) -> Result<Vec<Concern>, LedgerError> {
+pub async fn concerns(
+    ledger: &Ledger,
+    rig: &RigName,
+    distribution: Option<&[Vec<f64>]>,
+    certificate: &Certificate,
+) -> Result<Vec<Concern>, LedgerError> {
+    let geometry = certificate.scenario.geometry();
+    let fitting = |table: Table<u64>| Counts::try_new(table, geometry).ok();
+    // A certificate of a posted batch has counts, and they fit.
+    let Some(counts) = certificate.counts.clone().and_then(fitting) else { return Ok(vec![]) };
     let filter = Filter { rig: Some(rig.clone()), verdict: Some(Verdict::Certified), ..Filter::default() };
     let newest = ledger.history.page(&filter, 1).await?.items.into_iter().next();
     let table = newest.and_then(|recorded| serde_json::from_str::<Earlier>(&recorded.record).ok()?.counts);
     // A batch of another geometry is nothing to compare with.
-    let previous = table.and_then(|table| Counts::try_new(table, profile.scenario().geometry()).ok());
-    let expectations = Expectations {
-        distribution: profile.setting_distribution(),
-        previous: previous.as_ref(),
-        least_rounds: LEAST_ROUNDS,
-        significance: SIGNIFICANCE,
-    };
-    // Distribution and counts fit the geometry of a valid profile.
-    let findings = examine(counts, &expectations).unwrap_or_default();
+    let previous = table.and_then(fitting);
+    let expectations = Expectations { distribution, previous: previous.as_ref(), least_rounds: LEAST_ROUNDS, significance: SIGNIFICANCE };
+    // Distribution and counts fit the geometry of a valid profile or commitment.
+    let findings = examine(&counts, &expectations).unwrap_or_default();
     Ok(findings.into_iter().map(|finding| Concern { detail: finding.to_string(), finding }).collect())
 }

@@ -18,34 +18,31 @@ use crate::{certify::Certification, request::Request};
 /// What certifies: the core's [`crate::certify::certify`], or a stand-in for it in tests.
 pub type Certifier = Arc<dyn Fn(&Request) -> Certification + Send + Sync>;
 
-/// Why a request was not solved.
+/// Why a job was not done.
 #[derive(Debug, Clone, PartialEq, Eq, thiserror::Error)]
 pub enum SolveError {
-    #[error("{waiting} batches are waiting already, and no more may")]
+    #[error("{waiting} jobs are waiting already, and no more may")]
     QueueFull {
         waiting: usize,
-        /// When there may be room, going by how long recent batches took.
+        /// When there may be room, going by how long recent jobs took.
         retry_after: Duration,
     },
-    #[error("the solver failed on this batch")]
+    #[error("the solver failed on this job")]
     Panicked,
     #[error("the solvers have stopped")]
     Stopped,
 }
 
-/// A solved request, and how long it took.
+/// What came out of a job, and how long it took.
 #[derive(Debug)]
-pub(super) struct Solved {
-    pub certification: Certification,
+pub(super) struct Solved<T> {
+    pub outcome: T,
     pub queued: Duration,
     pub solved: Duration,
 }
 
-struct Job {
-    request: Request,
-    accepted: Instant,
-    answer: oneshot::Sender<Result<Solved, SolveError>>,
-}
+/// Something to do on a solver thread, with its answer already addressed.
+type Job = Box<dyn FnOnce(&Load) + Send>;
 
 /// What callers and threads share.
 #[derive(Debug, Default)]
@@ -55,9 +52,17 @@ struct Load {
     recent: AtomicU64,
 }
 
+impl Load {
+    fn add(&self, solved: Duration) {
+        let milliseconds = u64::try_from(solved.as_millis()).unwrap_or(u64::MAX);
+        let average = |recent| Some(recent - recent / 4 + milliseconds / 4);
+        let _ = self.recent.fetch_update(Ordering::Relaxed, Ordering::Relaxed, average);
+    }
+}
+
 /// The threads and their queue.
-#[derive(Debug)]
 pub struct Solvers {
+    certifier: Certifier,
     /// `None` once closed.
     queue: Mutex<Option<SyncSender<Job>>>,
     threads: Mutex<Vec<JoinHandle<()>>>,
@@ -66,7 +71,7 @@ pub struct Solvers {
 }
 
 impl Solvers {
-    /// Starts `number` threads, at least one, behind a queue of `length` requests.
+    /// Starts `number` threads, at least one, behind a queue of `length` jobs.
     ///
     /// # Errors
     /// The operating system's, if it refuses a thread.
@@ -77,20 +82,38 @@ impl Solvers {
         let load = Arc::new(Load::default());
         let threads = (0..number)
             .map(|i| {
-                let (jobs, load, certifier) = (Arc::clone(&jobs), Arc::clone(&load), Arc::clone(&certifier));
-                std::thread::Builder::new().name(format!("solver-{i}")).spawn(move || work(&jobs, &load, &certifier))
+                let (jobs, load) = (Arc::clone(&jobs), Arc::clone(&load));
+                std::thread::Builder::new().name(format!("solver-{i}")).spawn(move || work(&jobs, &load))
             })
             .collect::<Result<Vec<_>, _>>()?;
-        Ok(Self { queue: Mutex::new(Some(queue)), threads: Mutex::new(threads), number, load })
+        Ok(Self { certifier, queue: Mutex::new(Some(queue)), threads: Mutex::new(threads), number, load })
     }
 
-    /// Has a request solved, once a thread is free.
+    /// Has a request certified, once a thread is free.
     ///
     /// # Errors
     /// A full queue, a panic inside the solve, or closed solvers.
-    pub(super) async fn solve(&self, request: Request) -> Result<Solved, SolveError> {
+    pub(super) async fn certify(&self, request: Request) -> Result<Solved<Certification>, SolveError> {
+        let certifier = Arc::clone(&self.certifier);
+        self.run(move || certifier(&request)).await
+    }
+
+    /// Runs a job, once a thread is free.
+    ///
+    /// # Errors
+    /// A full queue, a panic inside the job, or closed solvers.
+    pub(super) async fn run<T: Send + 'static>(&self, job: impl FnOnce() -> T + Send + 'static) -> Result<Solved<T>, SolveError> {
         let (answer, outcome) = oneshot::channel();
-        self.enqueue(Job { request, accepted: Instant::now(), answer })?;
+        let accepted = Instant::now();
+        self.enqueue(Box::new(move |load| {
+            let started = Instant::now();
+            // The job is gone afterwards and the core has no state: nothing half-changed can be seen.
+            let outcome = catch_unwind(AssertUnwindSafe(job));
+            let (queued, solved) = (started.duration_since(accepted), started.elapsed());
+            load.add(solved);
+            // Whoever asked may have gone.
+            drop(answer.send(outcome.map(|outcome| Solved { outcome, queued, solved }).map_err(|_| SolveError::Panicked)));
+        }))?;
         // A sender that is dropped unused means that its thread is gone.
         outcome.await.unwrap_or(Err(SolveError::Stopped))
     }
@@ -125,7 +148,7 @@ impl Solvers {
         (gone > 0).then(|| format!("{gone} of {} solver threads are gone", self.number))
     }
 
-    /// Takes no more requests, solves those that were taken, and ends the threads.
+    /// Takes no more jobs, does those that were taken, and ends the threads.
     pub(super) async fn close(&self) {
         drop(own(&self.queue).take());
         let threads = std::mem::take(&mut *own(&self.threads));
@@ -141,21 +164,11 @@ fn own<T>(mutex: &Mutex<T>) -> MutexGuard<'_, T> {
     mutex.lock().unwrap_or_else(|poisoned| poisoned.into_inner())
 }
 
-fn work(jobs: &Mutex<Receiver<Job>>, load: &Load, certifier: &Certifier) {
+fn work(jobs: &Mutex<Receiver<Job>>, load: &Load) {
     loop {
         // The lock is held while waiting: idle threads queue for the lock in place of the channel.
-        let Ok(Job { request, accepted, answer }) = own(jobs).recv() else { return };
+        let Ok(job) = own(jobs).recv() else { return };
         load.waiting.fetch_sub(1, Ordering::Relaxed);
-        let started = Instant::now();
-        // The request is dropped afterwards and the core has no state: nothing half-changed can be seen.
-        let outcome = catch_unwind(AssertUnwindSafe(|| certifier(&request)));
-        let solved = started.elapsed();
-        let milliseconds = u64::try_from(solved.as_millis()).unwrap_or(u64::MAX);
-        let _ = load.recent.fetch_update(Ordering::Relaxed, Ordering::Relaxed, |recent| Some(recent - recent / 4 + milliseconds / 4));
-        let outcome = outcome
-            .map(|certification| Solved { certification, queued: started.duration_since(accepted), solved })
-            .map_err(|_| SolveError::Panicked);
-        // Whoever asked may have gone.
-        drop(answer.send(outcome));
+        job(load);
     }
 }

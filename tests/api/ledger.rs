@@ -18,7 +18,7 @@ use uuid::Uuid;
 use crate::server::{Running, batch, profile, query, with_rig};
 
 /// Runs a statement on the database; answers with what went wrong.
-fn refusal(running: &Running, sql: &str) -> Option<String> {
+pub fn refusal(running: &Running, sql: &str) -> Option<String> {
     query(&running.database, async |mut connection| {
         let outcome = sqlx::query(AssertSqlSafe(sql.to_owned())).execute(&mut connection).await;
         connection.close().await.unwrap();
@@ -120,6 +120,7 @@ fn entry(key: &str, witness: &str) -> Entry {
         certified_bits: 0,
         rounds: 10,
         failure: None,
+        commitment: None,
         record: format!("{{\"key\":\"{key}\"}}"),
         witnesses: vec![(witness.to_owned(), "{}".to_owned())],
         submission: Submission { key: IdempotencyKey::try_from(key).unwrap(), body_digest: "sha256:0".into() },
