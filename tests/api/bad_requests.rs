@@ -42,6 +42,16 @@ fn post(name: &'static str, body: impl Into<Vec<u8>>, status: u16, blame: Blame)
     Case { name, method: "POST", path: "/v1/rigs/bench/batches".into(), headers: vec![JSON, KEY], body: Some(body.into()), status, blame }
 }
 
+/// A commitment for the rig `vault`, whose rounds have memory, with one member changed.
+fn order(name: &'static str, at: &str, value: Value, status: u16, blame: Blame) -> Case {
+    let good = json!({"expected_behaviour": [[[0.78, 0.22]], [[0.22, 0.78]]], "setting_distribution": [[0.5], [0.5]], "rounds": 400_000});
+    commit(name, changed(good, at, value).to_string(), status, blame)
+}
+
+fn commit(name: &'static str, body: impl Into<Vec<u8>>, status: u16, blame: Blame) -> Case {
+    post(name, body, status, blame).with(&[JSON]).via("POST", "/v1/rigs/vault/commitments")
+}
+
 /// A batch with one member changed.
 fn report(name: &'static str, at: &str, value: Value, status: u16, blame: Blame) -> Case {
     post(name, changed(batch(1000), at, value).to_string(), status, blame)
@@ -121,7 +131,6 @@ fn profiles() -> Vec<Case> {
         declare("a target twice", "/scenario/targets", json!([[0, 0], [0, 0]]), 422, Pointer("/scenario/targets/1")),
         declare("half a target", "/scenario/targets", json!([[0]]), 400, Pointer("/scenario/targets/0")),
         declare("unknown rounds", "/rounds", json!("guessed"), 400, Pointer("/rounds")),
-        declare("rounds with memory", "/rounds", json!("memory"), 422, Pointer("/rounds")),
         declare("a failure of one", "/failure", json!({"estimation": 1, "hashing": 1e-10}), 422, Pointer("/failure/estimation")),
         declare("no failure at all", "/failure", json!({"estimation": 1e-10, "hashing": 0}), 422, Pointer("/failure/hashing")),
         declare("an unknown level", "/level", json!("dull"), 400, Pointer("/level")),
@@ -237,8 +246,55 @@ fn batches() -> Vec<Case> {
     ]
 }
 
+fn commitments() -> Vec<Case> {
+    let good =
+        || json!({"expected_behaviour": [[[0.78, 0.22]], [[0.22, 0.78]]], "setting_distribution": [[0.5], [0.5]], "rounds": 400_000});
+    let unknown = json!("01900000-0000-7000-8000-000000000000");
+    vec![
+        commit("no JSON", "certainly", 400, Pointer("")),
+        commit("no object", "[]", 400, Pointer("")),
+        commit("no rounds", without(good(), "rounds"), 400, Pointer("")),
+        commit("nothing expected", without(good(), "expected_behaviour"), 422, Pointer("/expected_behaviour")),
+        commit("no distribution anywhere", without(good(), "setting_distribution"), 422, Pointer("/setting_distribution")),
+        order("an unknown member", "/colour", json!("red"), 400, Pointer("/colour")),
+        order("the profile's business", "/scenario", json!({}), 400, Pointer("/scenario")),
+        order("half a round", "/rounds", json!(0.5), 400, Pointer("/rounds")),
+        order("no rounds at all", "/rounds", json!(0), 422, Pointer("/rounds")),
+        order("endless rounds", "/rounds", json!(u64::MAX), 422, Pointer("/rounds")),
+        order("too few rounds for a bit", "/rounds", json!(10), 422, Nothing),
+        order("an outcome too few", "/expected_behaviour/1/0", json!([1.0]), 422, Pointer("/expected_behaviour/1/0")),
+        order("a preparation too few", "/expected_behaviour", json!([[[0.5, 0.5]]]), 422, Pointer("/expected_behaviour")),
+        order("a probability above one", "/expected_behaviour/0/0/1", json!(1.5), 422, Pointer("/expected_behaviour/0/0/1")),
+        order("probabilities that miss one", "/expected_behaviour/0/0/1", json!(0.5), 422, Pointer("/expected_behaviour/0/0")),
+        order("a probability as text", "/expected_behaviour/0/0/1", json!("0.22"), 400, Pointer("/expected_behaviour/0/0/1")),
+        order("a distribution that misses one", "/setting_distribution", json!([[0.5], [0.4999]]), 422, Pointer("/setting_distribution")),
+        order("a setting that is never used", "/setting_distribution", json!([[1], [0]]), 422, Pointer("/setting_distribution/1/0")),
+        order("a failure of one", "/failure", json!({"estimation": 1, "hashing": 1e-10}), 422, Pointer("/failure/estimation")),
+        order("an unknown level", "/level", json!("dull"), 400, Pointer("/level")),
+        order("expected twice", "/certification", unknown.clone(), 422, Pointer("/certification")),
+        order("a certification that is none", "/certification", json!("yesterday's"), 400, Pointer("/certification")),
+        commit(
+            "a certification that is not",
+            json!({"certification": unknown, "setting_distribution": [[0.5], [0.5]], "rounds": 400_000}).to_string(),
+            422,
+            Pointer("/certification"),
+        ),
+        commit("a commitment as CSV", good().to_string(), 415, Header("Content-Type")).with(&[CSV]),
+        commit("a large commitment", " ".repeat(256 * 1024 + 1), 413, Nothing),
+        commit("a parameter", good().to_string(), 400, Parameter("force")).via("POST", "/v1/rigs/vault/commitments?force=1"),
+        commit("a rig whose rounds have no memory", good().to_string(), 422, Nothing).via("POST", "/v1/rigs/bench/commitments"),
+        commit("a rig that nobody declared", good().to_string(), 404, Nothing).via("POST", "/v1/rigs/fresh/commitments"),
+        post("a batch that nothing was committed for", batch(1000).to_string(), 422, Nothing).via("POST", "/v1/rigs/vault/batches"),
+    ]
+}
+
 fn questions() -> Vec<Case> {
     vec![
+        get("commitments of nobody", "/v1/rigs/fresh/commitments", 404, Nothing),
+        get("a commitment that is not", "/v1/commitments/01900000-0000-7000-8000-000000000000", 404, Nothing),
+        get("a commitment that cannot be", "/v1/commitments/x", 404, Nothing),
+        get("a page of no commitments", "/v1/rigs/vault/commitments?limit=0", 400, Parameter("limit")),
+        get("a cursor of other commitments", "/v1/rigs/vault/commitments?cursor=MTIz", 400, Parameter("cursor")),
         get("nothing there", "/v1/nothing", 404, Nothing),
         get("nothing at the root", "/", 404, Nothing),
         get("a slash too many", "/v1/rigs/", 404, Nothing),
@@ -273,10 +329,11 @@ fn questions() -> Vec<Case> {
 fn bad_requests_are_turned_away_with_a_reason_and_without_a_trace() {
     let (running, client) = with_rig();
     client.post_batch("bench", "taken", &batch(3000)).expect(201);
+    client.put_rig("vault", &changed(profile(), "/rounds", json!("memory")), &[]).expect(201);
     let before = running.rows();
     assert!(before.iter().any(|(table, rows)| table == "certifications" && *rows == 1));
 
-    let cases: Vec<Case> = [profiles(), batches(), questions()].into_iter().flatten().collect();
+    let cases: Vec<Case> = [profiles(), batches(), commitments(), questions()].into_iter().flatten().collect();
     assert!(cases.len() >= 40);
     let mut faults = vec![];
     for case in cases {

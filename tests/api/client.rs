@@ -72,6 +72,11 @@ impl Client {
         self.call("PUT", &format!("/v1/rigs/{rig}"), &headers, Some(profile.to_string().as_bytes()))
     }
 
+    pub fn post_commitment(&self, rig: &str, order: &Value) -> Reply {
+        let headers = [("content-type", "application/json")];
+        self.call("POST", &format!("/v1/rigs/{rig}/commitments"), &headers, Some(order.to_string().as_bytes()))
+    }
+
     pub fn post_batch(&self, rig: &str, key: &str, batch: &Value) -> Reply {
         let headers = [("content-type", "application/json"), ("idempotency-key", key)];
         self.call("POST", &format!("/v1/rigs/{rig}/batches"), &headers, Some(batch.to_string().as_bytes()))

@@ -5,6 +5,7 @@ mod batches;
 mod certifications;
 mod client;
 mod command_line;
+mod commitments;
 mod connections;
 mod examples;
 mod health;
