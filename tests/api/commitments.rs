@@ -79,6 +79,7 @@ fn what_was_committed_certifies_the_batches_that_follow() {
     assert_eq!((&record["verdict"], &record["rounds"]), (&json!("certified"), &json!("memory")));
     assert_eq!((&record["commitment"], &record["block"]["commitment"]), (&committed["id"], &committed["digest"]));
     assert_eq!((&record["leakage_source"], &record["timings"]["solved_seconds"]), (&json!("profile"), &json!(0.0)));
+    assert_eq!(record["concerns"], json!([]));
     // Exactly the expected frequencies, at settings as frequent as expected.
     let bits = record["certified_bits"].as_u64().unwrap();
     assert!(bits > 1000 && (bits as f64 - commitment.expected_bits).abs() <= 2.0, "{bits}, expected {}", commitment.expected_bits);
@@ -221,6 +222,10 @@ fn what_was_seen_may_be_expected() {
     assert_eq!(commitment["setting_distribution"], json!([[0.75], [0.25]]));
     assert_eq!((&commitment["failure"]["estimation"], &commitment["failure"]["hashing"]), (&json!(1e-6), &json!(1e-7)));
     assert_eq!(second["level"], "standard");
+    // Settings are held against the distribution that was committed, not the profile's.
+    let balanced = client.post_batch("bench", "balanced", &batch(ROUNDS, &second["recorded_at"]));
+    let record = client.get(balanced.header("location").unwrap()).expect(200).json();
+    assert_eq!((&record["concerns"][0]["concern"], &record["level"]), (&json!("setting-imbalance"), &json!("standard")));
 
     // Another rig's is not what this one showed, and other sizes do not fit.
     client.put_rig("other", &memory(), &[]).expect(201);
