@@ -122,7 +122,7 @@ impl TryFrom<RequestDocument> for Request {
         let culprit = if level == LevelChoice::Auto { "/scenario" } else { "/level" };
         let start = choose(level, &scenario).map_err(|fault| fault.under(culprit))?;
         if rounds == RoundModel::Memory {
-            return Err(Fault::new("/rounds", "rounds with memory need a commitment made before the data; this version has none"));
+            return Err(Fault::new("/rounds", "rounds with memory need a commitment recorded before the data: post them to the service"));
         }
         let geometry = scenario.geometry();
         let data = match (counts, behaviour) {
