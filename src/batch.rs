@@ -154,7 +154,8 @@ impl BatchDocument {
         if let Some(leakage) = leakage {
             scenario = scenario.with_leakage(leakage)?;
             // A leakage that is not exactly zero makes a solve larger, possibly too large.
-            choose(profile.level(), &scenario).map_err(|fault| fault.under("/leakage"))?;
+            let outcomes = scenario.geometry().outcomes;
+            choose(profile.level(), &scenario, outcomes).map_err(|fault| Fault::new("/leakage", fault.detail))?;
         }
         // Scenario, rounds and failure come from a valid profile: what can still be wrong is in the batch, under its own name.
         let request = Request::try_from(RequestDocument {

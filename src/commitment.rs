@@ -16,6 +16,7 @@ use crate::{
     },
     fault::Fault,
     relaxation::{
+        cells::COVER_CELLS,
         cost::choose,
         level::{Level, LevelChoice},
     },
@@ -75,10 +76,8 @@ impl TryFrom<CommitmentDocument> for Plan {
             return Err(Fault::new("/rounds", format!("a batch has 1 to {} rounds", crate::counts::MAX_ROUNDS)));
         }
         failure.check().map_err(|fault| fault.under("/failure"))?;
-        let culprit = if level == LevelChoice::Auto { "/scenario" } else { "/level" };
-        // A power witness has several times the groups of a guessing witness; `auto` stays below the sharpest level.
-        let level = choose(level, &scenario).map_err(|fault| fault.under(culprit))?;
-        let level = if document.level == LevelChoice::Auto { level.min(Level::Standard) } else { level };
+        // One group per cell of a cover.
+        let level = choose(level, &scenario, COVER_CELLS)?;
         Ok(Self { scenario, expected, distribution, rounds, failure, level })
     }
 }

@@ -97,8 +97,7 @@ impl TryFrom<ProfileDocument> for Profile {
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
         // Too large for every level is said now, and not when a batch comes in.
-        let culprit = if level == LevelChoice::Auto { "/scenario" } else { "/level" };
-        choose(level, &scenario).map_err(|fault| fault.under(culprit))?;
+        choose(level, &scenario, scenario.geometry().outcomes)?;
         if let Some(distribution) = &setting_distribution {
             check_distribution(distribution, scenario.geometry(), NORMALISATION_SLACK)
                 .map_err(|fault| fault.under("/setting_distribution"))?;

@@ -119,8 +119,7 @@ impl TryFrom<RequestDocument> for Request {
         let RequestDocument { scenario, counts, behaviour, rounds, failure, level, lost_rounds } = document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
-        let culprit = if level == LevelChoice::Auto { "/scenario" } else { "/level" };
-        let start = choose(level, &scenario).map_err(|fault| fault.under(culprit))?;
+        let start = choose(level, &scenario, scenario.geometry().outcomes)?;
         if rounds == RoundModel::Memory {
             return Err(Fault::new("/rounds", "rounds with memory need a commitment recorded before the data: post them to the service"));
         }

@@ -15,31 +15,34 @@ pub const AUTO_BUDGET: f64 = 4e9;
 /// Nothing above this is solved at all.
 pub const LIMIT: f64 = 2e11;
 
-/// The level to start at.
+/// The level to start at, for a question with this many groups.
 ///
 /// # Errors
-/// The figure, if the scenario is too large for the level that is asked for, or for every level. The pointer is empty.
-pub fn choose(choice: LevelChoice, scenario: &Scenario) -> Result<Level, Fault> {
-    let level = match choice {
-        LevelChoice::Lean => Level::Lean,
-        LevelChoice::Standard => Level::Standard,
-        LevelChoice::Sharp => Level::Sharp,
-        LevelChoice::Auto => Level::ALL.into_iter().rev().find(|level| estimate(*level, scenario) <= AUTO_BUDGET).unwrap_or(Level::Lean),
+/// The figure, if the scenario is too large for the level that is asked for (pointer `/level`), or for every level (`/scenario`).
+pub fn choose(choice: LevelChoice, scenario: &Scenario, groups: usize) -> Result<Level, Fault> {
+    let (level, pointer, what) = match choice {
+        LevelChoice::Lean => (Level::Lean, "/level", "this level"),
+        LevelChoice::Standard => (Level::Standard, "/level", "this level"),
+        LevelChoice::Sharp => (Level::Sharp, "/level", "this level"),
+        LevelChoice::Auto => {
+            let affordable = |level: &Level| estimate(*level, scenario, groups) <= AUTO_BUDGET;
+            (Level::ALL.into_iter().rev().find(affordable).unwrap_or(Level::Lean), "/scenario", "every level")
+        }
     };
-    let cost = estimate(level, scenario);
+    let cost = estimate(level, scenario, groups);
     if cost <= LIMIT {
         return Ok(level);
     }
-    let what = if choice == LevelChoice::Auto { "every level" } else { "this level" };
-    Err(Fault::new("", format!("the scenario is too large for {what}: a solve is estimated at {cost:.1e} steps, the limit is {LIMIT:.0e}")))
+    let detail = format!("the scenario is too large for {what}: a solve is estimated at {cost:.1e} steps, the limit is {LIMIT:.0e}");
+    Err(Fault::new(pointer, detail))
 }
 
-/// Estimated steps of one solve of a target's guessing probability.
-pub fn estimate(level: Level, scenario: &Scenario) -> f64 {
+/// Estimated steps of one solve.
+fn estimate(level: Level, scenario: &Scenario, groups: usize) -> f64 {
     let exact: Vec<bool> = scenario.leakage().iter().map(|leakage| *leakage == 0.0).collect();
     let algebra = Algebra::new(scenario.geometry(), &exact);
     let bases = split(&level.monomials(&algebra), &algebra);
     let triangle = |side: f64| side * (side + 1.0) / 2.0;
     let size: f64 = bases.iter().map(|basis| triangle(basis.monomials.len() as f64)).sum();
-    scenario.geometry().outcomes as f64 * size.powi(3)
+    groups as f64 * size.powi(3)
 }

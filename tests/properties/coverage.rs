@@ -19,7 +19,7 @@ use bitassay::{
     witness::check::Place,
 };
 
-use crate::rig::{behaviour, code};
+use crate::rig::{Numbers, behaviour, code};
 
 const FAILURE: f64 = 0.05;
 const ROUNDS: u64 = 40_000;
@@ -50,30 +50,17 @@ fn scenario() -> ScenarioDocument {
     }
 }
 
-/// Uniform numbers in [0, 1), splitmix64.
-struct Numbers(u64);
-
-impl Numbers {
-    fn next(&mut self) -> f64 {
-        self.0 = self.0.wrapping_add(0x9e37_79b9_7f4a_7c15);
-        let mut z = self.0;
-        z = (z ^ (z >> 30)).wrapping_mul(0xbf58_476d_1ce4_e5b9);
-        z = (z ^ (z >> 27)).wrapping_mul(0x94d0_49bb_1331_11eb);
-        ((z ^ (z >> 31)) >> 11) as f64 / 2f64.powi(53)
-    }
-
-    fn setting(&mut self, distribution: &[Vec<f64>]) -> Setting {
-        let mut left = self.next();
-        for (x, row) in distribution.iter().enumerate() {
-            for (y, p) in row.iter().enumerate() {
-                left -= p;
-                if left < 0.0 {
-                    return Setting { x, y };
-                }
+fn drawn_setting(numbers: &mut Numbers, distribution: &[Vec<f64>]) -> Setting {
+    let mut left = numbers.next();
+    for (x, row) in distribution.iter().enumerate() {
+        for (y, p) in row.iter().enumerate() {
+            left -= p;
+            if left < 0.0 {
+                return Setting { x, y };
             }
         }
-        TARGET
     }
+    TARGET
 }
 
 /// Strategies on a qubit that the adversary switches between: the honest code, both measurements turned towards the target state,
@@ -124,7 +111,7 @@ fn play(device: Device, numbers: &mut Numbers) -> (Counts, f64) {
         } else {
             &strategies[2]
         };
-        let setting = numbers.setting(&distribution);
+        let setting = drawn_setting(numbers, &distribution);
         let p = strategy[setting.x][setting.y][0];
         let b = usize::from(numbers.next() >= p);
         table[setting.x][setting.y][b] += 1;

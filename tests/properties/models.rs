@@ -10,29 +10,19 @@ use bitassay::{
 };
 use nalgebra::{DMatrix, DVector};
 
-/// Uniform numbers in (−1, 1), splitmix64.
-struct Numbers(u64);
-
-impl Numbers {
-    fn next(&mut self) -> f64 {
-        self.0 = self.0.wrapping_add(0x9e37_79b9_7f4a_7c15);
-        let mut z = self.0;
-        z = (z ^ (z >> 30)).wrapping_mul(0xbf58_476d_1ce4_e5b9);
-        z = (z ^ (z >> 27)).wrapping_mul(0x94d0_49bb_1331_11eb);
-        ((z ^ (z >> 31)) >> 11) as f64 / 2f64.powi(52) - 1.0
-    }
-}
+use crate::rig::Numbers;
 
 /// A model with real amplitudes: the carrier is spanned by the first d of `d + 2` axes; outcomes are groups of columns of a random basis.
 /// Weights outside the carrier are exactly the tolerances.
 fn strategy(numbers: &mut Numbers, sizes: (usize, usize, usize), dimension: usize, leakage: &[f64]) -> Table<f64> {
     let (preparations, measurements, outcomes) = sizes;
     let whole = dimension + 2;
-    let mut unit =
-        |from: usize, to: usize| DVector::from_fn(whole, |i, _| if (from..to).contains(&i) { numbers.next() } else { 0.0 }).normalize();
+    let mut unit = |from: usize, to: usize| {
+        DVector::from_fn(whole, |i, _| if (from..to).contains(&i) { numbers.symmetric() } else { 0.0 }).normalize()
+    };
     let states: Vec<DVector<f64>> =
         (0..preparations).map(|x| unit(0, dimension) * (1.0 - leakage[x]).sqrt() + unit(dimension, whole) * leakage[x].sqrt()).collect();
-    let bases: Vec<DMatrix<f64>> = (0..measurements).map(|_| DMatrix::from_fn(whole, whole, |_, _| numbers.next()).qr().q()).collect();
+    let bases: Vec<DMatrix<f64>> = (0..measurements).map(|_| DMatrix::from_fn(whole, whole, |_, _| numbers.symmetric()).qr().q()).collect();
     let probability = |x: usize, y: usize, b: usize| -> f64 {
         (0..whole).filter(|column| column % outcomes == b).map(|column| bases[y].column(column).dot(&states[x]).powi(2)).sum()
     };
@@ -70,7 +60,7 @@ fn explicit_models_are_possible_and_are_not_undercut() {
     ] {
         for level in [Level::Lean, Level::Standard] {
             let (one, other) = (strategy(&mut numbers, sizes, dimension, &leakage), strategy(&mut numbers, sizes, dimension, &leakage));
-            let share = 0.5 + 0.4 * numbers.next();
+            let share = 0.5 + 0.4 * numbers.symmetric();
             let behaviour = mixed(&one, &other, share);
             let scenario = Scenario::try_from(ScenarioDocument {
                 preparations: sizes.0,

@@ -57,3 +57,22 @@ pub fn run(document: RequestDocument) -> Certification {
 pub fn guess(certificate: &Certificate) -> f64 {
     certificate.targets[0].guessing_probability_bound.expect("a checked bound")
 }
+
+/// Uniform numbers, splitmix64.
+pub struct Numbers(pub u64);
+
+impl Numbers {
+    /// In [0, 1).
+    pub fn next(&mut self) -> f64 {
+        self.0 = self.0.wrapping_add(0x9e37_79b9_7f4a_7c15);
+        let mut z = self.0;
+        z = (z ^ (z >> 30)).wrapping_mul(0xbf58_476d_1ce4_e5b9);
+        z = (z ^ (z >> 27)).wrapping_mul(0x94d0_49bb_1331_11eb);
+        ((z ^ (z >> 31)) >> 11) as f64 / 2f64.powi(53)
+    }
+
+    /// In [−1, 1).
+    pub fn symmetric(&mut self) -> f64 {
+        2.0 * self.next() - 1.0
+    }
+}

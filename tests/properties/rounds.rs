@@ -9,25 +9,12 @@ use bitassay::{
 };
 use nalgebra::{DMatrix, DVector, SymmetricEigen};
 
-use crate::rig::code;
+use crate::rig::{Numbers, code};
 
 const DIMENSION: usize = 4;
 
-/// Uniform numbers in (−1, 1), splitmix64.
-struct Numbers(u64);
-
-impl Numbers {
-    fn next(&mut self) -> f64 {
-        self.0 = self.0.wrapping_add(0x9e37_79b9_7f4a_7c15);
-        let mut z = self.0;
-        z = (z ^ (z >> 30)).wrapping_mul(0xbf58_476d_1ce4_e5b9);
-        z = (z ^ (z >> 27)).wrapping_mul(0x94d0_49bb_1331_11eb);
-        ((z ^ (z >> 31)) >> 11) as f64 / 2f64.powi(52) - 1.0
-    }
-
-    fn vector(&mut self, support: std::ops::Range<usize>) -> DVector<f64> {
-        DVector::from_fn(DIMENSION, |i, _| if support.contains(&i) { self.next() } else { 0.0 }).normalize()
-    }
+fn unit(numbers: &mut Numbers, support: std::ops::Range<usize>) -> DVector<f64> {
+    DVector::from_fn(DIMENSION, |i, _| if support.contains(&i) { numbers.symmetric() } else { 0.0 }).normalize()
 }
 
 /// Projector on the positive part of a symmetric matrix.
@@ -46,21 +33,21 @@ struct Strategy {
 
 impl Strategy {
     fn random(numbers: &mut Numbers) -> Self {
-        let most = [0.0, 1e-4, 1e-3, 1e-2][(numbers.next().abs() * 4.0) as usize % 4];
-        let leakage: Vec<f64> = (0..4).map(|_| most * numbers.next().abs()).collect();
+        let most = [0.0, 1e-4, 1e-3, 1e-2][(numbers.symmetric().abs() * 4.0) as usize % 4];
+        let leakage: Vec<f64> = (0..4).map(|_| most * numbers.symmetric().abs()).collect();
         // From the ideal code, turned a little, to anything at all.
-        let spread = [0.0, 0.02, 0.1, 0.5, 4.0][(numbers.next().abs() * 5.0) as usize % 5];
+        let spread = [0.0, 0.02, 0.1, 0.5, 4.0][(numbers.symmetric().abs() * 5.0) as usize % 5];
         let ideal = [1.0, -1.0, 3.0, -3.0].map(|eighths| eighths * std::f64::consts::PI / 8.0);
         let mut states = Vec::new();
         for (angle, leak) in ideal.iter().zip(&leakage) {
-            let turned: f64 = angle + spread * numbers.next();
+            let turned: f64 = angle + spread * numbers.symmetric();
             let inside = DVector::from_vec(vec![turned.cos(), turned.sin(), 0.0, 0.0]);
-            states.push(inside * (1.0f64 - leak).sqrt() + numbers.vector(2..4) * leak.sqrt());
+            states.push(inside * (1.0f64 - leak).sqrt() + unit(numbers, 2..4) * leak.sqrt());
         }
         let score = |y: usize, numbers: &mut Numbers| {
             // As good as possible at a random mixture of the code's question and noise.
             let weight = |x: usize, noise: f64| if (x >> (1 - y)) & 1 == 0 { 1.0 + noise } else { noise - 1.0 };
-            let noise = spread * numbers.next();
+            let noise = spread * numbers.symmetric();
             states.iter().enumerate().map(|(x, s)| s * s.transpose() * weight(x, noise)).sum::<DMatrix<f64>>()
         };
         let measurements = (0..2).map(|y| positive_part(score(y, numbers))).collect();
