@@ -154,8 +154,8 @@ impl BatchDocument {
         if let Some(leakage) = leakage {
             scenario = scenario.with_leakage(leakage)?;
             // A leakage that is not exactly zero makes a solve larger, possibly too large.
-            let outcomes = scenario.geometry().outcomes;
-            choose(profile.level(), &scenario, outcomes).map_err(|fault| Fault::new("/leakage", fault.detail))?;
+            let groups = profile.entropy().groups(&scenario);
+            choose(profile.level(), &scenario, groups).map_err(|fault| Fault::new("/leakage", fault.detail))?;
         }
         // Scenario, rounds and failure come from a valid profile: what can still be wrong is in the batch, under its own name.
         let request = Request::try_from(RequestDocument {
@@ -165,6 +165,7 @@ impl BatchDocument {
             rounds: profile.rounds(),
             failure: profile.failure(),
             level: profile.level(),
+            entropy: profile.entropy(),
             lost_rounds,
         })?;
         Ok(Batch { started_at, ended_at, leakage_source, task: Task::Solve(Box::new(request)) })

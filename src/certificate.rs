@@ -5,7 +5,7 @@ use serde::{Deserialize, Serialize};
 use crate::{
     counts::Table,
     relaxation::level::{Level, LevelChoice},
-    request::{LostRounds, RoundModel},
+    request::{EntropyChoice, LostRounds, RoundModel},
     scenario::{Scenario, Setting},
 };
 
@@ -60,7 +60,8 @@ pub struct TargetCertificate {
     pub guessing_probability_bound: Option<f64>,
     /// `−log2` of the bound, in bits per target round, rounded down.
     pub min_entropy_per_round: f64,
-    /// Min-entropy of the target string, in bits, rounded down, before anything is subtracted; `null` for plug-in figures.
+    /// Min-entropy of the target string, in bits, rounded down, before anything is subtracted: the better one of what the guessing
+    /// probability and a power entropy give; `null` for plug-in figures.
     pub min_entropy: Option<f64>,
     /// Bits subtracted because the counts are public, rounded up; `null` for plug-in figures.
     pub publication_cost: Option<f64>,
@@ -74,6 +75,29 @@ pub struct TargetCertificate {
     pub witness: Option<String>,
     /// What rounding the witness to integers cost in guessing probability, an approximate figure for information.
     pub rounding_cost: Option<f64>,
+    /// The account of a power entropy, if one was asked for and found.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub power: Option<PowerCertificate>,
+}
+
+/// A bound on the power entropy of a target's outcomes.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[serde(deny_unknown_fields)]
+pub struct PowerCertificate {
+    /// `β` in units of `2^-30`.
+    pub power: u32,
+    /// Lower bound on the mean of `η_β`, in bits per target round, rounded down.
+    pub entropy_per_round: f64,
+    /// Failure probability of the step from rounds to the block.
+    pub failure: f64,
+    /// Min-entropy of the target string that follows, in bits, rounded down, before anything is subtracted.
+    pub min_entropy: f64,
+    pub level: Level,
+    /// `sha256:` digest of the witness document.
+    pub witness: String,
+    /// What rounding the witness cost, in nats, an approximate figure for information.
+    pub rounding_cost: f64,
 }
 
 impl TargetCertificate {
@@ -144,6 +168,9 @@ pub struct Certificate {
     pub failure: Option<FailureTotal>,
     /// The level that was asked for.
     pub level: LevelChoice,
+    /// The entropy that was asked for.
+    #[serde(default)]
+    pub entropy: EntropyChoice,
     /// Confidence interval `[low, high]` of every probability, `[x][y][b]`; `null` for plug-in figures.
     #[cfg_attr(feature = "service", schema(value_type = Option<Vec<Vec<Vec<Vec<f64>>>>>))]
     pub region: Option<Table<[f64; 2]>>,

@@ -3,15 +3,18 @@
 use num_rational::BigRational;
 
 use crate::{
-    bound::{Answer, guessing_probability},
-    certificate::{Certificate, FailureTotal, OutsideModel, Reason, TargetCertificate, Verdict},
+    bound::{Answer, guessing_probability, power_entropy},
+    certificate::{Certificate, FailureTotal, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
     commitment::Commitment,
     counts::{Counts, Table},
-    entropy::extraction::{extractable, hashing_cost, min_entropy, min_entropy_per_round, publication_cost},
+    entropy::{
+        extraction::{extractable, hashing_cost, min_entropy, min_entropy_per_round, publication_cost},
+        independent::{block_min_entropy, entropy_in_bits, largest_power_entropy, power_for},
+    },
     exact::round_down,
     fault::Fault,
     relaxation::level::{Level, LevelChoice},
-    request::{Data, Failure, LostRounds, LostTreatment, Request, RoundModel},
+    request::{Data, EntropyChoice, Failure, LostRounds, LostTreatment, Request, RoundModel},
     scenario::{LeakageReading, Setting},
     solver::Limits,
     statistics::region::{frequencies, region},
@@ -38,7 +41,15 @@ pub fn certify(request: &Request) -> Certification {
                 let least = contradiction.least_leakage.as_ref().map(|(least, witness)| (least, witness));
                 return draft.outside(&contradiction.found.witness, least);
             }
-            Answer::Bounded(found) => draft.add(request, *target, found.level, &found.witness, &found.bound),
+            Answer::Bounded(found) => {
+                draft.add(request, *target, found.level, &found.witness, &found.bound);
+                if let Some((power, _)) = power_terms(request, *target).filter(|_| found.bound.rounded_up() < 1.0)
+                    && let Some(found) =
+                        power_entropy(request.scenario(), *target, evidence.place(), power, request.start, Limits::default())
+                {
+                    draft.add_power(request, *target, &evidence, found.level, &found.witness, &found.bound);
+                }
+            }
             Answer::Unverified => draft.add_unverified(request, *target),
         }
     }
@@ -73,6 +84,7 @@ pub fn certify_block(
         failure: Failure { estimation, hashing },
         level,
         start: Level::Lean,
+        entropy: EntropyChoice::Guessing,
         lost_rounds,
     };
     let mut certificate = Draft::new(&request, None).certificate;
@@ -112,9 +124,19 @@ pub(crate) fn evidence(request: &Request) -> Evidence {
         (Data::Behaviour(behaviour), _) => Evidence::Point(behaviour.table().clone()),
         (Data::Counts(counts), RoundModel::PlugIn) => Evidence::Point(frequencies(counts)),
         (Data::Counts(counts), RoundModel::Independent | RoundModel::Memory) => {
-            Evidence::Region(region(counts, request.failure.estimation))
+            // A power entropy takes the other half.
+            let share = if request.entropy == EntropyChoice::Power { 0.5 } else { 1.0 };
+            Evidence::Region(region(counts, request.failure.estimation * share))
         }
     }
+}
+
+/// The power of a target's power entropy and its share of the estimation failure; `None` if none is asked for.
+fn power_terms(request: &Request, target: Setting) -> Option<(u32, f64)> {
+    let rounds =
+        request.rounds_at(target).filter(|_| request.rounds == RoundModel::Independent && request.entropy == EntropyChoice::Power)?;
+    let failure = (request.failure.estimation * 0.5 / request.scenario().targets().len() as f64).next_down();
+    Some((power_for(rounds, failure), failure))
 }
 
 /// A certificate in the making.
@@ -147,6 +169,7 @@ impl Draft {
             total_rounds: counts.map(|counts| counts.total()),
             failure,
             level: request.level,
+            entropy: request.entropy,
             region,
             targets: Vec::new(),
             block: None,
@@ -175,6 +198,36 @@ impl Draft {
         entry.rounding_cost = Some(witness.rounding_cost());
         entry.fill(bound.rounded_up(), request);
         self.certificate.targets.push(entry);
+    }
+
+    /// Adds a power entropy to the target that was added last. One that exceeds what the data allow anyway proves that there is no model, and
+    /// is no entropy: it is left out.
+    pub(crate) fn add_power(
+        &mut self,
+        request: &Request,
+        target: Setting,
+        evidence: &Evidence,
+        level: Level,
+        witness: &CheckedWitness,
+        bound: &CheckedBound,
+    ) {
+        let (Some((power, failure)), Evidence::Region(region)) = (power_terms(request, target), evidence) else { return };
+        let entropy_per_round = entropy_in_bits(bound.exact());
+        let largest = largest_power_entropy(&region[target.x][target.y], power) * std::f64::consts::LOG2_E;
+        if entropy_per_round > largest {
+            return;
+        }
+        let digest = self.keep(witness);
+        let Some(entry) = self.certificate.targets.last_mut() else { return };
+        let rounds = entry.rounds.unwrap_or(0);
+        let min_entropy = block_min_entropy(bound.exact(), rounds, power, failure);
+        let rounding_cost = witness.rounding_cost();
+        entry.power = Some(PowerCertificate { power, entropy_per_round, failure, min_entropy, level, witness: digest, rounding_cost });
+        if let (Some(known), Some(publication), Some(hashing)) = (entry.min_entropy, entry.publication_cost, entry.hashing_cost) {
+            let better = known.max(min_entropy);
+            entry.min_entropy = Some(better);
+            entry.certified_bits = extractable(better, &[publication, hashing]);
+        }
     }
 
     pub(crate) fn add_unverified(&mut self, request: &Request, target: Setting) {
@@ -242,6 +295,7 @@ impl TargetCertificate {
             level: None,
             witness: None,
             rounding_cost: None,
+            power: None,
         }
     }
 

@@ -8,7 +8,7 @@ use crate::{
     counts::{NORMALISATION_SLACK, check_distribution},
     fault::Fault,
     relaxation::{cost::choose, level::LevelChoice},
-    request::{Failure, RoundModel},
+    request::{EntropyChoice, Failure, RoundModel},
     scenario::{Scenario, ScenarioDocument},
 };
 
@@ -65,6 +65,8 @@ pub struct ProfileDocument {
     pub failure: Failure,
     #[serde(default)]
     pub level: LevelChoice,
+    #[serde(default)]
+    pub entropy: EntropyChoice,
     /// Probability `π(x,y)` with which the rig chooses each setting, `[x][y]`; adds up to 1.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub setting_distribution: Option<Vec<Vec<f64>>>,
@@ -84,6 +86,7 @@ pub struct Profile {
     rounds: RoundModel,
     failure: Failure,
     level: LevelChoice,
+    entropy: EntropyChoice,
     setting_distribution: Option<Vec<Vec<f64>>>,
     outcome_labels: Option<Vec<String>>,
     notes: Option<String>,
@@ -93,11 +96,11 @@ impl TryFrom<ProfileDocument> for Profile {
     type Error = Fault;
 
     fn try_from(document: ProfileDocument) -> Result<Self, Fault> {
-        let ProfileDocument { scenario, rounds, failure, level, setting_distribution, outcome_labels, notes } = document;
+        let ProfileDocument { scenario, rounds, failure, level, entropy, setting_distribution, outcome_labels, notes } = document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
         // Too large for every level is said now, and not when a batch comes in.
-        choose(level, &scenario, scenario.geometry().outcomes)?;
+        choose(level, &scenario, entropy.groups(&scenario))?;
         if let Some(distribution) = &setting_distribution {
             check_distribution(distribution, scenario.geometry(), NORMALISATION_SLACK)
                 .map_err(|fault| fault.under("/setting_distribution"))?;
@@ -108,7 +111,7 @@ impl TryFrom<ProfileDocument> for Profile {
         if notes.as_ref().is_some_and(|notes| notes.len() > MAX_NOTES) {
             return Err(Fault::new("/notes", format!("notes have at most {MAX_NOTES} bytes")));
         }
-        Ok(Self { scenario, rounds, failure, level, setting_distribution, outcome_labels, notes })
+        Ok(Self { scenario, rounds, failure, level, entropy, setting_distribution, outcome_labels, notes })
     }
 }
 
@@ -129,8 +132,8 @@ fn check_labels(labels: &[String], outcomes: usize) -> Result<(), Fault> {
 
 impl From<Profile> for ProfileDocument {
     fn from(profile: Profile) -> Self {
-        let Profile { scenario, rounds, failure, level, setting_distribution, outcome_labels, notes } = profile;
-        Self { scenario: scenario.into(), rounds, failure, level, setting_distribution, outcome_labels, notes }
+        let Profile { scenario, rounds, failure, level, entropy, setting_distribution, outcome_labels, notes } = profile;
+        Self { scenario: scenario.into(), rounds, failure, level, entropy, setting_distribution, outcome_labels, notes }
     }
 }
 
@@ -152,6 +155,10 @@ impl Profile {
         self.setting_distribution.as_deref()
     }
 
+    pub fn entropy(&self) -> EntropyChoice {
+        self.entropy
+    }
+
     pub fn level(&self) -> LevelChoice {
         self.level
     }
@@ -170,7 +177,7 @@ mod tests {
         let document: ProfileDocument = parse(PROFILE.as_bytes()).unwrap();
         let profile = Profile::try_from(document).unwrap();
         let text = serde_json::to_string(&profile).unwrap();
-        assert!(text.contains(r#""failure":{"estimation":1e-10,"hashing":1e-10},"level":"auto""#), "{text}");
+        assert!(text.contains(r#""failure":{"estimation":1e-10,"hashing":1e-10},"level":"auto","entropy":"guessing""#), "{text}");
         assert_eq!(serde_json::from_str::<Profile>(&text).unwrap(), profile);
     }
 

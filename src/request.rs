@@ -6,6 +6,7 @@ use crate::{
     counts::{Behaviour, Counts, Table},
     fault::Fault,
     relaxation::{
+        cells::COVER_CELLS,
         cost::choose,
         level::{Level, LevelChoice},
     },
@@ -23,6 +24,29 @@ pub enum RoundModel {
     Independent,
     /// No independence is assumed; factors are committed ahead of the data.
     Memory,
+}
+
+/// Which entropy the certified bits come from.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Default, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[serde(rename_all = "kebab-case")]
+pub enum EntropyChoice {
+    /// The min-entropy, from the guessing probability of one round.
+    #[default]
+    Guessing,
+    /// With independent rounds also a power entropy, which gives up to three times the bits and takes several times as long. The better of
+    /// the two counts. Half of the estimation failure goes to it.
+    Power,
+}
+
+impl EntropyChoice {
+    /// Most groups of a question that this asks.
+    pub fn groups(self, scenario: &Scenario) -> usize {
+        match self {
+            Self::Guessing => scenario.geometry().outcomes,
+            Self::Power => COVER_CELLS,
+        }
+    }
 }
 
 /// Failure probabilities that the poster is willing to accept, each in `[1e-100, 0.5]`.
@@ -88,6 +112,8 @@ pub struct RequestDocument {
     pub failure: Failure,
     #[serde(default)]
     pub level: LevelChoice,
+    #[serde(default)]
+    pub entropy: EntropyChoice,
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub lost_rounds: Option<LostRounds>,
 }
@@ -109,6 +135,7 @@ pub struct Request {
     pub(crate) level: LevelChoice,
     /// The level that the choice comes to.
     pub(crate) start: Level,
+    pub(crate) entropy: EntropyChoice,
     pub(crate) lost_rounds: Option<LostRounds>,
 }
 
@@ -116,10 +143,10 @@ impl TryFrom<RequestDocument> for Request {
     type Error = Fault;
 
     fn try_from(document: RequestDocument) -> Result<Self, Fault> {
-        let RequestDocument { scenario, counts, behaviour, rounds, failure, level, lost_rounds } = document;
+        let RequestDocument { scenario, counts, behaviour, rounds, failure, level, entropy, lost_rounds } = document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
-        let start = choose(level, &scenario, scenario.geometry().outcomes)?;
+        let start = choose(level, &scenario, entropy.groups(&scenario))?;
         if rounds == RoundModel::Memory {
             return Err(Fault::new("/rounds", "rounds with memory need a commitment recorded before the data: post them to the service"));
         }
@@ -143,7 +170,7 @@ impl TryFrom<RequestDocument> for Request {
             (Some(_), Some(_)) => return Err(Fault::new("/behaviour", "give counts or a behaviour, not both")),
             (None, None) => return Err(Fault::new("/counts", "counts are missing")),
         };
-        Ok(Self { scenario, data, rounds, failure, level, start, lost_rounds })
+        Ok(Self { scenario, data, rounds, failure, level, start, entropy, lost_rounds })
     }
 }
 

@@ -65,6 +65,7 @@ fn request(certificate: &Certificate) -> Result<Request, Fault> {
         rounds: certificate.rounds,
         failure: certificate.failure.map_or_else(Failure::default, |f| Failure { estimation: f.estimation, hashing: f.hashing }),
         level: certificate.level,
+        entropy: certificate.entropy,
         lost_rounds: None,
     };
     let mut request = Request::try_from(document)?;
@@ -102,6 +103,21 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
                 return Err(claim("the numbers contradict the declaration, so there is no entropy to speak of"));
             }
             draft.add(&request, *target, level, &witness, &bound);
+            if let Some(recorded) = &recorded.power {
+                let pointer = format!("/targets/{}/power/witness", draft.targets() - 1);
+                let power = find(witnesses, &recorded.witness, &pointer)?;
+                let claim = |detail| Discrepancy::Claim { pointer: pointer.clone(), digest: recorded.witness.clone(), detail };
+                let of_target =
+                    matches!(&power.witness().claim, Claim::Power { target: of, power, .. } if of == target && *power == recorded.power);
+                if !of_target || power.witness().geometry != request.scenario().geometry() || !is_of_level(power.witness(), recorded.level)
+                {
+                    return Err(claim("it bounds something else"));
+                }
+                let bound = power.bound(evidence.place(), request.scenario().leakage(), request.scenario().leakage_holds());
+                let bound =
+                    bound.map_err(|error| Discrepancy::Witness { pointer: pointer.clone(), digest: recorded.witness.clone(), error })?;
+                draft.add_power(&request, *target, &evidence, recorded.level, &power, &bound);
+            }
         }
         draft.conclude().certificate
     };

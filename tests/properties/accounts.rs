@@ -2,7 +2,7 @@
 
 use bitassay::{
     certificate::Verdict,
-    request::{LostRounds, LostTreatment, Request, RequestDocument},
+    request::{EntropyChoice, LostRounds, LostTreatment, Request, RequestDocument},
     scenario::Setting,
     verify::verify,
 };
@@ -59,4 +59,45 @@ fn lost_rounds_of_another_shape_are_turned_away() {
     assert_eq!(Request::try_from(wrong.clone()).unwrap_err().pointer, "/lost_rounds/treatment/as-outcome");
     wrong.lost_rounds = Some(LostRounds { counts: vec![vec![1; 2]; 3], treatment: LostTreatment::FairSampling });
     assert_eq!(Request::try_from(wrong).unwrap_err().pointer, "/lost_rounds/counts");
+}
+
+/// A power entropy gives more bits from the same counts, and is confirmed without a solver.
+#[test]
+fn a_power_entropy_gives_more_bits() {
+    let plain = document(counts(&code(0.99), 1_000_000), 2, 0.0);
+    let guessing = run(plain.clone()).certificate;
+    let certification = run(RequestDocument { entropy: EntropyChoice::Power, ..plain });
+    let certificate = &certification.certificate;
+    let power = certificate.targets[0].power.as_ref().expect("a power entropy");
+    println!("{} bits by guessing, {} by {power:?}", guessing.certified_bits, certificate.certified_bits);
+    assert!(certificate.certified_bits > 2 * guessing.certified_bits);
+    assert_eq!(certificate.failure, guessing.failure);
+    // H = (1/β)(−n log2 Φ − log2(1/δ')) with Φ = 1 − βE, in a calculator's precision.
+    let beta = f64::from(power.power) / 2f64.powi(30);
+    let phi = 1.0 - beta * power.entropy_per_round * std::f64::consts::LN_2;
+    let block = (-1e6 * phi.log2() - (1.0 / power.failure).log2()) / beta;
+    assert!((power.min_entropy - block).abs() < 1e-6 * block && power.min_entropy <= block + 1e-6 * block);
+    // Not more than Shannon allows at these frequencies.
+    let p: f64 = 0.5 * (1.0 + 0.99 / 2f64.sqrt());
+    assert!(power.entropy_per_round < -p * p.log2() - (1.0 - p) * (1.0 - p).log2());
+    assert_eq!(verify(certificate, None, &certification.witnesses), Ok(()));
+
+    let mut changed = certificate.clone();
+    changed.targets[0].power.as_mut().unwrap().min_entropy += 1.0;
+    assert!(verify(&changed, None, &certification.witnesses).is_err());
+    let mut changed = certificate.clone();
+    changed.targets[0].power.as_mut().unwrap().power *= 2;
+    assert!(verify(&changed, None, &certification.witnesses).is_err());
+    let mut changed = certificate.clone();
+    changed.entropy = EntropyChoice::Guessing;
+    assert!(verify(&changed, None, &certification.witnesses).is_err());
+}
+
+/// Where no bits are to be had by guessing, none come from elsewhere.
+#[test]
+fn a_power_entropy_finds_nothing_where_there_is_nothing() {
+    let request = RequestDocument { entropy: EntropyChoice::Power, ..document(counts(&code(0.7), 1_000_000), 2, 0.0) };
+    let certification = run(request);
+    assert_eq!(certification.certificate.verdict, Verdict::Refused);
+    assert_eq!(verify(&certification.certificate, None, &certification.witnesses), Ok(()));
 }

@@ -5,7 +5,7 @@ use bitassay::{
     certify::{Certification, certify},
     counts::Table,
     relaxation::level::LevelChoice,
-    request::{Failure, Request, RequestDocument, RoundModel},
+    request::{EntropyChoice, Failure, Request, RequestDocument, RoundModel},
     scenario::{LeakageDocument, LeakageReading, ScenarioDocument, Setting},
 };
 
@@ -46,6 +46,7 @@ pub fn document(counts: Table<u64>, dimension: u32, leakage: f64) -> RequestDocu
         rounds: RoundModel::Independent,
         failure: Failure::default(),
         level: LevelChoice::Lean,
+        entropy: EntropyChoice::Guessing,
         lost_rounds: None,
     }
 }
