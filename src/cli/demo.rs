@@ -72,11 +72,14 @@ impl Demo {
             let base = format!("http://{}", listener.local_addr()?);
             let (stop, stopped) = oneshot::channel::<()>();
             let server = tokio::spawn(server::run(listener, service, async { drop(stopped.await) }));
-            println!("server    {base}\ndatabase  {}\n", database.display());
+            writeln!(std::io::stdout(), "server    {base}\ndatabase  {}\n", database.display())?;
             let told = base.clone();
             let visit = tokio::task::spawn_blocking(move || Visit { base: told, agent: agent() }.all()).await?;
             if visit.is_ok() && self.stay {
-                println!("\nThe server stays at {base}; try  curl {base}/v1/certifications  and interrupt it when done.");
+                writeln!(
+                    std::io::stdout(),
+                    "\nThe server stays at {base}; try  curl {base}/v1/certifications  and interrupt it when done."
+                )?;
                 tokio::signal::ctrl_c().await.context("no interrupts on this system")?;
             }
             // The server may have ended on its own; its result is asked for next.
@@ -101,7 +104,15 @@ struct Visit {
 impl Visit {
     fn all(&self) -> anyhow::Result<()> {
         self.declare()?;
-        println!("{:<14} {:>6} {:>10} {:>12} {:>10}   what happened, and why", "day", "status", "verdict", "bits", "per round");
+        writeln!(
+            std::io::stdout(),
+            "{:<14} {:>6} {:>10} {:>12} {:>10}   what happened, and why",
+            "day",
+            "status",
+            "verdict",
+            "bits",
+            "per round"
+        )?;
         for (number, day) in DAYS.iter().enumerate() {
             self.post(number, day)?;
         }
@@ -126,8 +137,14 @@ impl Visit {
         });
         let answer = self.agent.put(format!("{}/v1/rigs/{RIG}", self.base)).send_json(profile)?;
         ensure!(answer.status() == 201, "the rig was not accepted: {}", answer.status());
-        println!("rig       {RIG}: 4 preparations, 2 measurements, qubit carrier, declared leakage {DECLARED_LEAKAGE:e},");
-        println!("          {ROUNDS_PER_SETTING} rounds per setting, target outcomes of preparation 0 with measurement 0\n");
+        writeln!(
+            std::io::stdout(),
+            "rig       {RIG}: 4 preparations, 2 measurements, qubit carrier, declared leakage {DECLARED_LEAKAGE:e},"
+        )?;
+        writeln!(
+            std::io::stdout(),
+            "          {ROUNDS_PER_SETTING} rounds per setting, target outcomes of preparation 0 with measurement 0\n"
+        )?;
         Ok(())
     }
 
@@ -137,7 +154,7 @@ impl Visit {
             "started_at": format!("2026-05-{:02}T06:00:00Z", number + 1),
             "ended_at": format!("2026-05-{:02}T18:00:00Z", number + 1),
         });
-        print!("{:<14} ", day.name);
+        write!(std::io::stdout(), "{:<14} ", day.name)?;
         // The row is finished when the answer is in.
         std::io::stdout().flush()?;
         let request = self.agent.post(format!("{}/v1/rigs/{RIG}/batches", self.base)).header("idempotency-key", day.name);
@@ -156,31 +173,32 @@ impl Visit {
         };
         let per_round = record["bits_per_round"].as_f64().unwrap_or(0.0);
         let (verdict, bits) = (record["verdict"].as_str().unwrap_or("?"), record["certified_bits"].as_u64().unwrap_or(0));
-        println!("{:>6} {verdict:>10} {bits:>12} {per_round:>10.6}   {}{why}", status.as_u16(), day.story);
+        writeln!(std::io::stdout(), "{:>6} {verdict:>10} {bits:>12} {per_round:>10.6}   {}{why}", status.as_u16(), day.story)?;
         Ok(())
     }
 
     fn history(&self) -> anyhow::Result<()> {
-        println!("\nhistory, newest first (GET /v1/certifications?rig={RIG})");
+        writeln!(std::io::stdout(), "\nhistory, newest first (GET /v1/certifications?rig={RIG})")?;
         let page = self.get(&format!("/v1/certifications?rig={RIG}&limit=10"))?;
         for record in page["items"].as_array().into_iter().flatten() {
             let bound = record["targets"][0]["guessing_probability_bound"].as_f64();
-            println!(
+            writeln!(
+                std::io::stdout(),
                 "  {}  {:<10} {:<14} guessing probability {}",
                 record["id"].as_str().unwrap_or("?"),
                 record["verdict"].as_str().unwrap_or("?"),
                 record["reason"].as_str().unwrap_or("-"),
                 bound.map_or_else(|| "not bounded".to_owned(), |bound| format!("at most {bound:.7}")),
-            );
+            )?;
         }
         Ok(())
     }
 
     fn rig_yield(&self) -> anyhow::Result<()> {
-        println!("\nyield (GET /v1/rigs/{RIG}/yield?batches=10)");
+        writeln!(std::io::stdout(), "\nyield (GET /v1/rigs/{RIG}/yield?batches=10)")?;
         let sums = self.get(&format!("/v1/rigs/{RIG}/yield?batches=10"))?;
-        println!("{}", serde_json::to_string_pretty(&sums)?);
-        println!("\nCertified figures hold under the assumptions that each record lists, and only under them.");
+        writeln!(std::io::stdout(), "{}", serde_json::to_string_pretty(&sums)?)?;
+        writeln!(std::io::stdout(), "\nCertified figures hold under the assumptions that each record lists, and only under them.")?;
         Ok(())
     }
 }

@@ -43,7 +43,18 @@ pub fn run() -> ExitCode {
         Command::Openapi(command) => command.run(),
     };
     outcome.unwrap_or_else(|error| {
+        // Whoever reads standard output may stop when they have seen enough. Nothing is said then, and the status is the one the shell gives
+        // to a process that the pipe ended: a verdict that was not read is no success.
+        if error.chain().any(is_broken_pipe) {
+            return ExitCode::from(141);
+        }
         eprintln!("bitassay: {error:#}");
         ExitCode::from(2)
     })
+}
+
+fn is_broken_pipe(cause: &(dyn std::error::Error + 'static)) -> bool {
+    let of_io = cause.downcast_ref::<std::io::Error>().map(std::io::Error::kind);
+    let of_json = cause.downcast_ref::<serde_json::Error>().and_then(serde_json::Error::io_error_kind);
+    of_io.or(of_json) == Some(std::io::ErrorKind::BrokenPipe)
 }

@@ -1,6 +1,6 @@
 //! `bitassay openapi`
 
-use std::process::ExitCode;
+use std::{io::Write, process::ExitCode};
 
 use clap::Args;
 
@@ -15,7 +15,7 @@ pub struct Openapi {}
 
 impl Openapi {
     pub fn run(self) -> anyhow::Result<ExitCode> {
-        print!("{}", document()?);
+        write!(std::io::stdout(), "{}", document()?)?;
         Ok(ExitCode::SUCCESS)
     }
 }

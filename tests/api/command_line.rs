@@ -127,3 +127,19 @@ fn the_interface_can_be_printed() {
     assert!(output.status.success());
     assert_eq!(String::from_utf8(output.stdout).unwrap(), document().unwrap());
 }
+
+/// A reader that has seen enough ends the command quietly, and never with success.
+#[test]
+fn a_reader_that_stops_ends_the_command_quietly() {
+    use std::{
+        io::Read,
+        process::{Command, Stdio},
+    };
+    let mut command = Command::new(env!("CARGO_BIN_EXE_bitassay"));
+    let mut child = command.arg("openapi").stdout(Stdio::piped()).stderr(Stdio::piped()).spawn().unwrap();
+    // Taken and dropped at once: the document is longer than a pipe holds.
+    drop(child.stdout.take());
+    let mut said = String::new();
+    child.stderr.take().unwrap().read_to_string(&mut said).unwrap();
+    assert_eq!((child.wait().unwrap().code(), said.as_str()), (Some(141), ""));
+}
