@@ -7,6 +7,7 @@ mod client;
 mod command_line;
 mod commitments;
 mod connections;
+mod documents;
 mod examples;
 mod health;
 mod leakage;
