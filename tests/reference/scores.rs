@@ -102,3 +102,20 @@ fn dimension_witness_with_four_preparations() {
     assert_close(largest((4, 3, 2), 2, 0.0, &i4, 1, Level::Standard), 6.0, 1e-4);
     assert_close(largest((4, 3, 2), 3, 0.0, &i4, 1, Level::Standard), 7.968871, 2e-3);
 }
+
+/// Best deterministic encoding of two bits in one, counted: 0.75. A qubit does better, so its bound lies above.
+#[test]
+fn two_to_one_code_on_a_classical_bit() {
+    let mut best = 0;
+    for encoding in 0..16u32 {
+        // Each measurement answers one of four functions of the bit it receives.
+        let right = |y: usize, decoding: u32| {
+            let hits = |x: usize| decoding >> (encoding >> x & 1) & 1 == (x >> y & 1) as u32;
+            (0..4usize).filter(|x| hits(*x)).count()
+        };
+        let most = |y: usize| (0..4).map(|decoding| right(y, decoding)).max().unwrap();
+        best = best.max(most(0) + most(1));
+    }
+    assert_eq!(best as f64 / 8.0, 0.75);
+    assert!(largest((4, 2, 2), 2, 0.0, &code_score(2), 8, Level::Lean) > 0.75);
+}
