@@ -5,7 +5,7 @@ use num_rational::BigRational;
 use num_traits::{One, Signed};
 
 use crate::{
-    counts::Table,
+    counts::{Table, fits},
     relaxation::{
         cells::{Cut, cover},
         level::Level,
@@ -145,6 +145,9 @@ struct Attempt {
 fn attempt(geometry: Geometry, question: &Question, place: Place, level: Level, limits: Limits) -> Attempt {
     let exact: Vec<bool> = question.leakage.iter().map(|leakage| *leakage == 0.0).collect();
     let failed = Attempt { status: Status::Failed, found: None, facets: Vec::new() };
+    if !is_about(question, geometry) {
+        return failed;
+    }
     let Ok(mut moments) = Moments::new(Algebra::new(geometry, &exact), level) else { return failed };
     let Ok(posed) = pose(&mut moments, question) else { return failed };
     let candidate = solve(&posed.program, limits);
@@ -155,6 +158,21 @@ fn attempt(geometry: Geometry, question: &Question, place: Place, level: Level, 
         Some(Found { witness, bound, level })
     });
     Attempt { status: candidate.status, found, facets }
+}
+
+/// Whether everything in a question has the shape of the geometry; one that has not is left unanswered.
+fn is_about(question: &Question, geometry: Geometry) -> bool {
+    let known = match question.knowledge {
+        Knowledge::Nothing => true,
+        Knowledge::Exactly(table) => fits(table, geometry),
+        Knowledge::Within(table) => fits(table, geometry),
+    };
+    let claimed = match &question.claim {
+        Claim::Guess { target } | Claim::Power { target, .. } => target.x < geometry.preparations && target.y < geometry.measurements,
+        Claim::Score { coefficients } => fits(coefficients, geometry),
+        Claim::Contradiction => true,
+    };
+    known && claimed && question.leakage.len() == geometry.preparations
 }
 
 fn knowledge(place: Place<'_>) -> Knowledge<'_> {
@@ -191,7 +209,7 @@ const COVERS: usize = 5;
 /// passed the exact check.
 pub fn power_entropy(scenario: &Scenario, target: Setting, place: Place, power: u32, level: Level, limits: Limits) -> Option<Found> {
     let outcomes = scenario.geometry().outcomes;
-    let mut wanted = first_vertices(&expected(place, target));
+    let mut wanted = first_vertices(&expected(place, target, outcomes));
     let mut cuts = cover(outcomes, &wanted);
     let mut best: Option<Found> = None;
     for _ in 0..COVERS {
@@ -233,12 +251,17 @@ fn power_attempt(scenario: &Scenario, claim: Claim, place: Place, level: Level, 
     attempt(scenario.geometry(), &question, place, level, limits)
 }
 
-/// The distribution of a target's outcome that a place suggests.
-fn expected(place: Place, target: Setting) -> DVector<f64> {
-    let values: Vec<f64> = match place {
-        Place::Behaviour(table) => table[target.x][target.y].clone(),
-        Place::Region(table) => table[target.x][target.y].iter().map(|[low, high]| 0.5 * (low + high)).collect(),
+/// The distribution of a target's outcome that a place suggests; without any, the uniform one.
+fn expected(place: Place, target: Setting, outcomes: usize) -> DVector<f64> {
+    let values: Option<Vec<f64>> = match place {
+        Place::Behaviour(table) => table.get(target.x).and_then(|t| t.get(target.y)).cloned(),
+        Place::Region(table) => {
+            let intervals = table.get(target.x).and_then(|t| t.get(target.y));
+            intervals.map(|intervals| intervals.iter().map(|[low, high]| 0.5 * (low + high)).collect())
+        }
     };
+    let values =
+        values.filter(|values| values.len() == outcomes && values.iter().sum::<f64>() > 0.0).unwrap_or_else(|| vec![1.0; outcomes]);
     let sum: f64 = values.iter().sum();
     DVector::from_vec(values) / sum
 }

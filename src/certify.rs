@@ -74,7 +74,18 @@ pub fn certify_block(
     if let Some(lost) = &lost_rounds {
         lost.fold_into(&mut counts, geometry.outcomes)?;
     }
-    let counts = Counts::try_new(counts, geometry).map_err(|fault| fault.under("/counts"))?;
+    certify_counted(commitment, level, counts, lost_rounds, in_time)
+}
+
+/// The same for counts that lost rounds were folded into already, as they stand in a record.
+pub(crate) fn certify_counted(
+    commitment: &Commitment,
+    level: LevelChoice,
+    counts: Table<u64>,
+    lost_rounds: Option<LostRounds>,
+    in_time: bool,
+) -> Result<Certificate, Fault> {
+    let counts = Counts::try_new(counts, commitment.scenario.geometry()).map_err(|fault| fault.under("/counts"))?;
     commitment.accepts(&counts).map_err(|fault| fault.under("/counts"))?;
     let FailureTotal { estimation, hashing, .. } = commitment.failure;
     let request = Request {
@@ -357,6 +368,7 @@ fn assumptions(request: &Request) -> Vec<String> {
              classical and of the past; if the leakage is read on average, its mean over the rounds of the block is within the declared one."
                 .to_owned(),
             "Outcomes at settings other than the targets are not published one by one.".to_owned(),
+            "The commitment was recorded before the first round of the block was played.".to_owned(),
         ]),
     }
     if request.lost_rounds.as_ref().is_some_and(|lost| lost.treatment == LostTreatment::FairSampling) {

@@ -354,6 +354,9 @@ impl Commitment {
             }
             checked.push(check(witness)?);
         }
+        if self.power == 0 {
+            return Err(CommitmentFault::Power);
+        }
         if checked.len() != self.scenario.targets().len() || self.targets.len() != checked.len() {
             return Err(CommitmentFault::Targets);
         }
@@ -375,6 +378,8 @@ pub enum CommitmentFault {
     Target { x: usize, y: usize, detail: &'static str },
     #[error("the targets of the commitment are not those of its scenario")]
     Targets,
+    #[error("the power is zero")]
+    Power,
     #[error("the factors do not follow from the witnesses")]
     Factors,
     #[error(transparent)]

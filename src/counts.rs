@@ -30,6 +30,11 @@ fn check_shape<T>(table: &Table<T>, geometry: Geometry) -> Result<(), Fault> {
     Ok(())
 }
 
+/// Whether a table has the shape of a geometry.
+pub fn fits<T>(table: &Table<T>, geometry: Geometry) -> bool {
+    check_shape(table, geometry).is_ok()
+}
+
 /// Counts of one batch: every setting was used at least once, and the total is at most [`MAX_ROUNDS`].
 #[derive(Debug, Clone, PartialEq, Eq, Serialize)]
 #[serde(transparent)]

@@ -9,7 +9,7 @@ use serde_json::Value;
 
 use crate::{
     certificate::{Certificate, OutsideModel, Reason},
-    certify::{Draft, Evidence, certify_block, evidence},
+    certify::{Draft, Evidence, certify_counted, evidence},
     commitment::{Commitment, CommitmentFault},
     fault::Fault,
     relaxation::{level::Level, parity::split, word::Algebra},
@@ -25,6 +25,8 @@ use crate::{
 pub enum Discrepancy {
     #[error("{0}")]
     Request(#[from] Fault),
+    #[error("/targets: the scenario has {declared} targets, the record {recorded}")]
+    Targets { declared: usize, recorded: usize },
     #[error("a record of rounds with memory is checked against its commitment, which is missing")]
     MissingCommitment,
     #[error("the commitment is not believed: {0}")]
@@ -80,7 +82,11 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
     let mut recomputed = if let Some(outside) = &certificate.outside_model {
         recompute_outside(draft, &request, &evidence, outside, witnesses)?
     } else {
-        for (target, recorded) in request.scenario().targets().iter().zip(&certificate.targets) {
+        let declared = request.scenario().targets();
+        if declared.len() != certificate.targets.len() {
+            return Err(Discrepancy::Targets { declared: declared.len(), recorded: certificate.targets.len() });
+        }
+        for (target, recorded) in declared.iter().zip(&certificate.targets) {
             let Some((level, digest)) = recorded.level.zip(recorded.witness.as_ref()) else {
                 draft.add_unverified(&request, *target);
                 continue;
@@ -132,10 +138,7 @@ fn recompute_block(certificate: &Certificate, commitment: Option<&Commitment>, w
     let counts = certificate.counts.clone().unwrap_or_default();
     // Lost rounds that were counted as an outcome are in the recorded counts already.
     let in_time = certificate.reason != Some(Reason::Uncommitted);
-    let mut recomputed = certify_block(commitment, certificate.level, counts, None, in_time)?;
-    recomputed.assumptions.clone_from(&certificate.assumptions);
-    recomputed.warnings.clone_from(&certificate.warnings);
-    recomputed.lost_rounds.clone_from(&certificate.lost_rounds);
+    let mut recomputed = certify_counted(commitment, certificate.level, counts, certificate.lost_rounds.clone(), in_time)?;
     recomputed.version.clone_from(&certificate.version);
     Ok(recomputed)
 }

@@ -113,6 +113,8 @@ impl RoundBound {
 pub enum FactorError {
     #[error("there is no target")]
     NoTarget,
+    #[error("the bounds and the setting distribution have different shapes")]
+    Shape,
     #[error("the factor of preparation {x}, measurement {y}, outcome {b} is not positive at this power")]
     NotPositive { x: usize, y: usize, b: usize },
 }
@@ -131,8 +133,15 @@ fn largest_excess(power: u32) -> BigRational {
 /// # Errors
 /// A factor that is not positive, or no bounds at all.
 pub fn factors(bounds: &[RoundBound], distribution: &[Vec<f64>], power: u32) -> Result<Table<f64>, FactorError> {
-    let pi = |setting: Setting| decimal(distribution[setting.x][setting.y]);
     let Some(first) = bounds.first() else { return Err(FactorError::NoTarget) };
+    let shape = |bound: &RoundBound| {
+        let rows = bound.linear.iter().map(Vec::len).eq(distribution.iter().map(Vec::len));
+        rows && distribution.get(bound.target.x).is_some_and(|row| bound.target.y < row.len())
+    };
+    if !bounds.iter().all(shape) {
+        return Err(FactorError::Shape);
+    }
+    let pi = |setting: Setting| decimal(distribution[setting.x][setting.y]);
     let mut weights: Table<BigRational> =
         first.linear.iter().map(|t| t.iter().map(|v| vec![BigRational::zero(); v.len()]).collect()).collect();
     for bound in bounds {

@@ -23,6 +23,12 @@ fn several_targets_have_their_own_bounds_and_add_up() {
     let hashing = certificate.targets[0].hashing_cost.unwrap();
     assert!((hashing - 2.0 * (2e10f64).log2()).abs() < 1e-9, "{hashing}");
     assert_eq!(verify(certificate, None, &certification.witnesses), Ok(()));
+    // A record that leaves out a target of its scenario is not confirmed.
+    let mut fewer = certificate.clone();
+    fewer.targets.pop();
+    fewer.certified_bits = fewer.targets[0].certified_bits;
+    fewer.bits_per_round = (fewer.certified_bits as f64 / 8e6).next_down();
+    assert!(verify(&fewer, None, &certification.witnesses).is_err());
     let alone = run(document(counts(&code(0.99), 1_000_000), 2, 0.0)).certificate;
     let of_two = certificate.targets[0].guessing_probability_bound.unwrap();
     assert!((of_two - alone.targets[0].guessing_probability_bound.unwrap()).abs() < 1e-9);

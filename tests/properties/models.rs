@@ -1,7 +1,7 @@
 //! What explicit models do is never called impossible, and never bounded below what its maker can guess.
 
 use bitassay::{
-    bound::{Answer, contradiction, guessing_probability},
+    bound::{Answer, contradiction, guessing_probability, power_entropy, score},
     counts::Table,
     relaxation::level::Level,
     scenario::{LeakageDocument, LeakageReading, Scenario, ScenarioDocument, Setting},
@@ -112,4 +112,28 @@ fn a_solver_without_an_answer_leaves_a_target_unverified() {
         Answer::Bounded(found) => assert!(found.bound.rounded_up() >= 1.0),
         Answer::Outside(_) => panic!("nothing was proved"),
     }
+}
+
+/// Tables and targets that do not fit the scenario are left unanswered, without a panic.
+#[test]
+fn questions_of_another_shape_are_left_unanswered() {
+    let scenario = Scenario::try_from(ScenarioDocument {
+        preparations: 2,
+        measurements: 1,
+        outcomes: 2,
+        carrier_dimension: 1,
+        leakage: LeakageDocument::Uniform(0.1),
+        leakage_holds: LeakageReading::OnAverage,
+        targets: vec![Setting { x: 0, y: 0 }],
+    })
+    .unwrap();
+    let (good, short) = (vec![vec![vec![0.7, 0.3]]; 2], vec![vec![vec![0.7, 0.3]]]);
+    let (inside, outside, limits) = (Setting { x: 0, y: 0 }, Setting { x: 2, y: 0 }, Limits::default());
+    for (target, table) in [(inside, &short), (outside, &good)] {
+        let place = Place::Behaviour(table);
+        assert_eq!(guessing_probability(&scenario, target, place, Level::Lean, limits), Answer::Unverified);
+        assert_eq!(power_entropy(&scenario, target, place, 1 << 20, Level::Lean, limits), None);
+    }
+    assert_eq!(score(&scenario, vec![vec![vec![1, 0]]], Level::Lean, limits), None);
+    assert!(contradiction(&scenario, Place::Behaviour(&short), Level::Lean, limits).is_none());
 }

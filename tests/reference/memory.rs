@@ -1,10 +1,13 @@
 //! Rounds with memory.
 
 use bitassay::{
+    certificate::Certificate,
+    certify::certify_block,
     commitment::{Commitment, CommitmentDocument, Plan, commit},
     counts::Counts,
     relaxation::level::LevelChoice,
-    request::Failure,
+    request::{Failure, LostRounds, LostTreatment},
+    verify::verify,
     witness::witness::Witness,
 };
 
@@ -53,6 +56,16 @@ fn a_block_is_accounted_for_as_written() {
     assert!((account.certified_bits as f64 - commitment.expected_bits).abs() < 10.0);
     // Three bits of uniform settings a round, far more than comes out of one target in eight.
     assert!((account.setting_cost_per_round - 3.0).abs() < 1e-12 && account.net_bits_per_round < -2.9);
+    // The record is confirmed from commitment and counts; not without its assumptions, nor with a warning hidden.
+    let lost = LostRounds { counts: vec![vec![3; 2]; 4], treatment: LostTreatment::FairSampling };
+    let certificate = certify_block(&commitment, LevelChoice::Lean, counts.table().clone(), Some(lost), true).unwrap();
+    assert_eq!(verify(&certificate, Some(&commitment), &witnesses), Ok(()));
+    assert_eq!(certificate.warnings.len(), 1);
+    for hide in [|c: &mut Certificate| drop(c.assumptions.pop()), |c: &mut Certificate| c.warnings.clear()] {
+        let mut silent = certificate.clone();
+        hide(&mut silent);
+        assert!(verify(&silent, Some(&commitment), &witnesses).is_err());
+    }
     // A changed factor does not follow from the witness.
     let mut changed = commitment.clone();
     changed.factors[0][0][0] = changed.factors[0][0][0].next_up();
