@@ -67,6 +67,11 @@ impl Client {
         self.call("GET", path, &[], None)
     }
 
+    /// As [`Self::get`]; `None` if the server has gone.
+    pub fn try_get(&self, path: &str) -> Option<Reply> {
+        self.try_call("GET", path, &[], None)
+    }
+
     pub fn put_rig(&self, rig: &str, profile: &Value, headers: &[(&str, &str)]) -> Reply {
         let headers = [&[("content-type", "application/json")], headers].concat();
         self.call("PUT", &format!("/v1/rigs/{rig}"), &headers, Some(profile.to_string().as_bytes()))
