@@ -54,7 +54,7 @@ fn what_was_acknowledged_survives_every_kill() {
             }
             let (client, key) = (process.client.clone(), &key);
             scope.spawn(move || {
-                while let Some(reply) = client.try_get("/v1/ledger/checkpoint") {
+                while let Some(reply) = client.try_call("GET", "/v1/ledger/checkpoint", &[], None) {
                     saw.send(key.confirm(reply.expect(200).text()).unwrap()).unwrap();
                 }
             });
