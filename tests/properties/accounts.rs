@@ -73,7 +73,7 @@ fn a_power_entropy_gives_more_bits() {
     let plain = document(counts(&code(0.99), 1_000_000), 2, 0.0);
     let guessing = run(RequestDocument { entropy: EntropyChoice::Guessing, ..plain.clone() }).certificate;
     assert!(guessing.targets[0].power.as_ref().is_some_and(|power| power.min_entropy.is_none()), "shown, but no bits from it");
-    let certification = run(plain);
+    let certification = run(RequestDocument { entropy: EntropyChoice::Auto, ..plain });
     let certificate = &certification.certificate;
     let power = certificate.targets[0].power.as_ref().expect("a power entropy");
     println!("{} bits by guessing, {} by {power:?}", guessing.certified_bits, certificate.certified_bits);
