@@ -115,7 +115,6 @@ def whole_bits(claimed, exact, what):
 
 class Bundle:
     def __init__(self, document, eliminate=False):
-        require(set(document) <= {"record", "commitment", "witnesses"}, "a bundle has a record, witnesses and perhaps a commitment")
         self.record, self.commitment = document["record"], document.get("commitment")
         self.witnesses, self.eliminate = document["witnesses"], eliminate
         for name, witness in self.witnesses.items():
