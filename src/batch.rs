@@ -161,6 +161,7 @@ impl BatchDocument {
             scenario: ScenarioDocument::from(scenario),
             counts: Some(counts),
             behaviour: None,
+            scores: None,
             rounds: profile.rounds(),
             failure: profile.failure(),
             level: profile.level(),

@@ -7,6 +7,7 @@ use crate::{
     relaxation::level::{Level, LevelChoice},
     request::{EntropyChoice, LostRounds, RoundModel},
     scenario::{Scenario, Setting},
+    score::Score,
 };
 
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
@@ -162,6 +163,9 @@ pub struct Certificate {
     pub counts_digest: Option<String>,
     #[cfg_attr(feature = "service", schema(value_type = Option<Vec<Vec<Vec<f64>>>>))]
     pub behaviour: Option<Table<f64>>,
+    /// Scores that were stated in place of a behaviour.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub scores: Option<Vec<Score>>,
     pub lost_rounds: Option<LostRounds>,
     pub rounds: RoundModel,
     pub total_rounds: Option<u64>,

@@ -11,11 +11,12 @@ use crate::{
         extraction::{extractable, hashing_cost, min_entropy, min_entropy_per_round, publication_cost},
         independent::{block_min_entropy, entropy_in_bits, largest_power_entropy, power_for},
     },
-    exact::round_down,
+    exact::{decimal, round_down},
     fault::Fault,
     relaxation::level::{Level, LevelChoice},
     request::{Data, EntropyChoice, Failure, LostRounds, LostTreatment, Request, RoundModel},
     scenario::{LeakageReading, Setting},
+    score::Score,
     solver::Limits,
     statistics::region::{frequencies, region},
     witness::{
@@ -120,6 +121,7 @@ pub(crate) fn certify_counted(
 pub(crate) enum Evidence {
     Point(Table<f64>),
     Region(Table<[f64; 2]>),
+    Scores(Vec<Score>),
 }
 
 impl Evidence {
@@ -127,6 +129,7 @@ impl Evidence {
         match self {
             Self::Point(table) => Place::Behaviour(table),
             Self::Region(table) => Place::Region(table),
+            Self::Scores(scores) => Place::Scores(scores),
         }
     }
 }
@@ -134,6 +137,7 @@ impl Evidence {
 pub(crate) fn evidence(request: &Request) -> Evidence {
     match (&request.data, request.rounds) {
         (Data::Behaviour(behaviour), _) => Evidence::Point(behaviour.table().clone()),
+        (Data::Scores(scores), _) => Evidence::Scores(scores.clone()),
         (Data::Counts(counts), RoundModel::PlugIn) => Evidence::Point(frequencies(counts)),
         (Data::Counts(counts), RoundModel::Independent | RoundModel::Memory) => {
             Evidence::Region(region(counts, request.failure.estimation - power_failure(request)))
@@ -185,12 +189,13 @@ pub(crate) struct Draft {
 impl Draft {
     /// Everything that is known before the first bound.
     pub(crate) fn new(request: &Request, evidence: Option<&Evidence>) -> Self {
-        let (counts, behaviour) = match &request.data {
-            Data::Counts(counts) => (Some(counts), None),
-            Data::Behaviour(behaviour) => (None, Some(behaviour.table().clone())),
+        let (counts, behaviour, scores) = match &request.data {
+            Data::Counts(counts) => (Some(counts), None, None),
+            Data::Behaviour(behaviour) => (None, Some(behaviour.table().clone()), None),
+            Data::Scores(scores) => (None, None, Some(scores.clone())),
         };
         let region = match evidence {
-            None | Some(Evidence::Point(_)) => None,
+            None | Some(Evidence::Point(_) | Evidence::Scores(_)) => None,
             Some(Evidence::Region(table)) => Some(table.clone()),
         };
         let failure = (request.rounds != RoundModel::PlugIn).then(|| FailureTotal::new(request.failure));
@@ -201,6 +206,7 @@ impl Draft {
             counts: counts.map(|counts| counts.table().clone()),
             counts_digest: counts.map(|counts| counts.digest()),
             behaviour,
+            scores,
             lost_rounds: request.lost_rounds.clone(),
             rounds: request.rounds,
             total_rounds: counts.map(|counts| counts.total()),
@@ -363,7 +369,13 @@ impl TargetCertificate {
 impl FailureTotal {
     pub(crate) fn new(failure: Failure) -> Self {
         let Failure { estimation, hashing } = failure;
-        Self { estimation, hashing, total: (estimation + hashing).next_up() }
+        let sum = decimal(estimation) + decimal(hashing);
+        let mut total = (estimation + hashing).next_up();
+        // The decimal that is printed for a double may lie below it.
+        while decimal(total) < sum {
+            total = total.next_up();
+        }
+        Self { estimation, hashing, total }
     }
 }
 
@@ -389,7 +401,11 @@ fn assumptions(request: &Request) -> Vec<String> {
     ];
     match request.rounds {
         RoundModel::PlugIn => {
-            assumptions.push("Frequencies are taken as probabilities: a diagnostic from which no bits may be released.".to_owned())
+            let taken = match request.data {
+                Data::Scores(_) => "Stated scores are taken as true",
+                Data::Counts(_) | Data::Behaviour(_) => "Frequencies are taken as probabilities",
+            };
+            assumptions.push(format!("{taken}: a diagnostic from which no bits may be released."));
         }
         RoundModel::Independent => {
             assumptions

@@ -347,6 +347,9 @@ impl Commitment {
         let mut checked = Vec::new();
         for (target, committed) in self.scenario.targets().iter().zip(&self.targets) {
             let fault = |detail| CommitmentFault::Target { x: target.x, y: target.y, detail };
+            if (committed.preparation, committed.measurement) != (target.x, target.y) {
+                return Err(CommitmentFault::Targets);
+            }
             let witness = witnesses.iter().find(|witness| witness.digest() == committed.witness).ok_or(fault("its witness is missing"))?;
             let bounds_it = matches!(&witness.claim, Claim::Power { target: of, power, .. } if of == target && *power >= self.power);
             if !bounds_it || witness.geometry != self.scenario.geometry() {
@@ -356,6 +359,10 @@ impl Commitment {
         }
         if self.power == 0 {
             return Err(CommitmentFault::Power);
+        }
+        let FailureTotal { estimation, hashing, .. } = self.failure;
+        if self.failure != FailureTotal::new(Failure { estimation, hashing }) {
+            return Err(Fault::new("/failure/total", "it is not the sum of the failure probabilities, rounded up").into());
         }
         if checked.len() != self.scenario.targets().len() || self.targets.len() != checked.len() {
             return Err(CommitmentFault::Targets);

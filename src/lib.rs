@@ -77,6 +77,7 @@ pub mod request;
 #[cfg(feature = "service")]
 pub mod rig_yield;
 pub mod scenario;
+pub mod score;
 #[cfg(feature = "service")]
 pub mod service;
 pub mod solver;

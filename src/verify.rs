@@ -64,6 +64,7 @@ fn request(certificate: &Certificate) -> Result<Request, Fault> {
         scenario: certificate.scenario.clone().into(),
         counts: certificate.counts.clone(),
         behaviour: certificate.behaviour.clone(),
+        scores: certificate.scores.clone(),
         rounds: certificate.rounds,
         failure: certificate.failure.map_or_else(Failure::default, |f| Failure { estimation: f.estimation, hashing: f.hashing }),
         level: certificate.level,

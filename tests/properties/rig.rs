@@ -43,6 +43,7 @@ pub fn document(counts: Table<u64>, dimension: u32, leakage: f64) -> RequestDocu
         },
         counts: Some(counts),
         behaviour: None,
+        scores: None,
         rounds: RoundModel::Independent,
         failure: Failure::default(),
         level: LevelChoice::Lean,
