@@ -46,6 +46,8 @@
 
 #![deny(unsafe_code)]
 
+pub mod attack;
+
 #[cfg(feature = "service")]
 pub mod batch;
 pub mod bound;

@@ -1,5 +1,6 @@
 //! The command line: one file a command.
 
+mod attack;
 mod certify;
 mod demo;
 mod document;
@@ -27,6 +28,7 @@ enum Command {
     Serve(serve::Serve),
     Certify(certify::Certify),
     Verify(verify::Verify),
+    Attack(attack::Attack),
     Leakage(leakage::Leakage),
     Demo(demo::Demo),
     Openapi(openapi::Openapi),
@@ -38,6 +40,7 @@ pub fn run() -> ExitCode {
         Command::Serve(command) => command.run(),
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
+        Command::Attack(command) => command.run(),
         Command::Leakage(command) => command.run(),
         Command::Demo(command) => command.run(),
         Command::Openapi(command) => command.run(),
