@@ -135,7 +135,7 @@ impl Evidence {
     }
 
     /// Intervals that hold every behaviour within a distance of this in each probability.
-    fn widened(&self, by: f64) -> Table<[f64; 2]> {
+    pub(crate) fn widened(&self, by: f64) -> Table<[f64; 2]> {
         let wider = |[low, high]: [f64; 2]| [(low - by).next_down().max(0.0), (high + by).next_up().min(1.0)];
         match self {
             Self::Point(table) => map(table, |p| wider([*p, *p])),

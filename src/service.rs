@@ -3,6 +3,7 @@
 mod commitments;
 mod quality;
 mod solvers;
+mod tree;
 mod turns;
 
 use std::sync::{
@@ -17,6 +18,7 @@ use self::turns::Turns;
 pub use self::{
     commitments::{Listed, OrderError},
     solvers::{Certifier, SolveError, Solvers},
+    tree::Exported,
 };
 use crate::{
     batch::{Batch, BatchFault, Posted, Task},
@@ -237,6 +239,7 @@ impl Service {
             Check { name: "accepting", fault: unless(self.accepting.load(Ordering::Relaxed), "the service is shutting down") },
             Check { name: "database", fault: self.ledger.history.check().await.err().map(|error| error.to_string()) },
             Check { name: "writer", fault: unless(self.ledger.writer.is_open(), "the ledger is closed") },
+            Check { name: "ledger", fault: self.ledger.seal.fault().map(str::to_owned) },
             Check { name: "solvers", fault: self.solvers.fault() },
         ]
     }

@@ -27,11 +27,7 @@ use num_rational::BigRational;
 use num_traits::ToPrimitive;
 
 use super::strategy::Strategy;
-use crate::{
-    counts::Table,
-    scenario::{Geometry, Scenario},
-    witness::check::CheckedWitness,
-};
+use crate::{counts::Table, scenario::Scenario, witness::check::CheckedWitness};
 
 /// A strategy with what the linear programme needs to know of it.
 #[derive(Debug, Clone)]
@@ -98,7 +94,6 @@ pub struct Priced {
 /// What a mixture has to satisfy.
 #[derive(Debug, Clone)]
 pub struct Constraints {
-    pub geometry: Geometry,
     /// `[low, high]`, `[x][y][b]`.
     pub intervals: Table<[f64; 2]>,
     /// Limit of the mean leakage of each preparation; `None` where each strategy satisfies its own.

@@ -16,6 +16,7 @@ use crate::{
     request::Request,
     scenario::{Scenario, Setting},
     solver::Limits,
+    witness::check::Place,
 };
 
 /// A complex number as `[real, imaginary]`.
@@ -42,6 +43,8 @@ pub struct TargetReport {
     pub bound: Option<f64>,
     /// Level of the bound.
     pub level: Option<Level>,
+    /// Whether the attack exceeds what the bound's witness allows over the data, widened by the residual: the bound is wrong then.
+    pub contradicted: bool,
     pub model: Option<ModelReport>,
 }
 
@@ -106,12 +109,18 @@ fn on_target(request: &Request, target: Setting, evidence: &Evidence, effort: Ef
     };
     let hints = Hints { witness: found.as_ref().map(|found| &found.witness), known: &[] };
     let attack = if *outside { None } else { attack(request.scenario(), target, evidence.place(), Objective::Guess, hints, effort) };
+    let contradicted = found.as_ref().zip(attack.as_ref()).is_some_and(|(found, attack)| {
+        let widened = evidence.widened(attack.residual);
+        let allowed = found.witness.bound(Place::Region(&widened), request.scenario().leakage(), request.scenario().leakage_holds());
+        allowed.is_ok_and(|allowed| attack.guessing_probability() > allowed.rounded_up())
+    });
     TargetReport {
         preparation: target.x,
         measurement: target.y,
         attack: attack.as_ref().map(Attack::guessing_probability),
         bound: found.as_ref().map(|found| found.bound.rounded_up().min(1.0)),
         level: found.as_ref().map(|found| found.level),
+        contradicted,
         model: attack.as_ref().map(ModelReport::of),
     }
 }

@@ -45,7 +45,8 @@ pub fn case(number: u64) -> Option<Case> {
     let (preparations, measurements, outcomes) = (2 + pick(4), 1 + pick(3), if pick(3) == 0 { 3 } else { 2 });
     // A carrier with a dimension for every preparation certifies nothing.
     let carrier_dimension = (1 + pick(3)).min(preparations - 1) as u32;
-    let leakage = [0.0, 1e-4, 1e-3, 1e-2, 0.1][pick(5)];
+    // A carrier of one dimension without leakage tells nothing of the preparation.
+    let leakage = if carrier_dimension == 1 { [1e-4, 1e-3, 1e-2, 0.05, 0.1] } else { [0.0, 1e-4, 1e-3, 1e-2, 0.1] }[pick(5)];
     let leakage_holds = if pick(3) == 0 { LeakageReading::EveryEmission } else { LeakageReading::OnAverage };
     let noise = [0.0, 0.0, 0.001, 0.003, 0.01, 0.03][pick(6)];
     let mixed = pick(4) == 0;

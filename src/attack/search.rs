@@ -21,7 +21,7 @@ use crate::{
 pub struct Effort {
     /// Most rounds of column generation.
     pub rounds: usize,
-    /// Random starts in each round; three times as many before giving up.
+    /// Random starts in each round; ten times as many before giving up.
     pub starts: usize,
     /// Steps of one climb.
     pub steps: usize,
@@ -68,6 +68,8 @@ const LAST_REACH: f64 = 1e4;
 const KEPT: f64 = 0.6;
 /// An attack this close to the largest value that the objective has is not looked beyond.
 const FULL: f64 = 1e-10;
+/// How many times more random starts are made before nothing better is taken to exist.
+const LAST_STARTS: usize = 10;
 /// Columns added in one round.
 const ADDED: usize = 12;
 /// Columns climbed from in one round.
@@ -178,13 +180,12 @@ struct Search {
 
 impl Search {
     fn new(scenario: &Scenario, target: Setting, intervals: Table<[f64; 2]>, objective: Objective, effort: Effort) -> Self {
-        let geometry = scenario.geometry();
         let on_average = scenario.leakage_holds() == LeakageReading::OnAverage;
         let limits = scenario.leakage().iter();
         let mean_leakage = limits.map(|limit| (on_average && *limit > 0.0 && *limit < 1.0).then(|| within(*limit))).collect();
         Self {
             space: space(scenario, target, objective, effort),
-            constraints: Constraints { geometry, intervals, mean_leakage },
+            constraints: Constraints { intervals, mean_leakage },
             effort,
             numbers: Numbers::new(effort.seed),
             columns: Vec::new(),
@@ -235,7 +236,7 @@ impl Search {
                 kept = Some(prices.clone());
             }
             if found.is_empty() {
-                found = self.random_improvements(&prices, &prices, 3 * self.effort.starts);
+                found = self.random_improvements(&prices, &prices, LAST_STARTS * self.effort.starts);
             }
             if found.is_empty() {
                 if !leans || self.reach >= LAST_REACH {

@@ -69,8 +69,7 @@ fn in_words(report: &Report, found: &mut bool) -> Vec<String> {
         let missed =
             if model.residual > 1e-8 { format!(" (its behaviour misses the data by up to {:.1e})", model.residual) } else { String::new() };
         lines.push(match target.bound {
-            // A behaviour that is missed has another bound.
-            Some(bound) if attack > bound && model.residual <= 1e-8 => {
+            Some(bound) if target.contradicted => {
                 *found = false;
                 format!(
                     "{place}: an attack guesses {attack:.9} and the bound says {bound:.9}: THE BOUND IS WRONG, please report this request"

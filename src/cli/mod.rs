@@ -1,9 +1,11 @@
 //! The command line: one file a command.
 
 mod attack;
+mod backup;
 mod certify;
 mod demo;
 mod document;
+mod export;
 mod leakage;
 mod openapi;
 mod serve;
@@ -30,6 +32,8 @@ enum Command {
     Verify(verify::Verify),
     Attack(attack::Attack),
     Leakage(leakage::Leakage),
+    Export(export::Export),
+    Backup(backup::Backup),
     Demo(demo::Demo),
     Openapi(openapi::Openapi),
 }
@@ -42,6 +46,8 @@ pub fn run() -> ExitCode {
         Command::Verify(command) => command.run(),
         Command::Attack(command) => command.run(),
         Command::Leakage(command) => command.run(),
+        Command::Export(command) => command.run(),
+        Command::Backup(command) => command.run(),
         Command::Demo(command) => command.run(),
         Command::Openapi(command) => command.run(),
     };

@@ -12,6 +12,9 @@ use super::{
     LedgerError,
     history::answered_within,
     rows::{Answered, Entry, word},
+    seal::Fault,
+    source::{CERTIFICATION, COMMITMENT, PROFILE},
+    tree,
 };
 use crate::{
     clock::Stamp,
@@ -149,9 +152,9 @@ pub struct Writer {
 }
 
 impl Writer {
-    pub(super) fn start(connection: SqliteConnection) -> Self {
+    pub(super) fn start(connection: SqliteConnection, fault: Fault) -> Self {
         let (inbox, items) = mpsc::channel(GROUP);
-        Self { inbox: Mutex::new(Some(inbox)), task: Mutex::new(Some(tokio::spawn(run(connection, items)))) }
+        Self { inbox: Mutex::new(Some(inbox)), task: Mutex::new(Some(tokio::spawn(run(connection, items, fault)))) }
     }
 
     /// Whether the writer takes items.
@@ -210,9 +213,14 @@ impl Writer {
     }
 }
 
-async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>) {
+async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>, fault: Fault) {
     let mut group = Vec::with_capacity(GROUP);
     while items.recv_many(&mut group, GROUP).await > 0 {
+        if let Some(detail) = fault.get() {
+            let error = LedgerError::Fault { detail: detail.to_owned() };
+            group.drain(..).for_each(|item| item.failed(&error).tell());
+            continue;
+        }
         for outcome in commit(&mut connection, group.drain(..)).await {
             outcome.tell();
         }
@@ -302,8 +310,9 @@ async fn write_profile(
         .bind(version)
         .bind(recorded_at.microseconds())
         .bind(text)
-        .execute(connection)
+        .execute(&mut *connection)
         .await?;
+    tree::log(connection, &PROFILE, &format!("{rig}/{version}")).await?;
     let kept = if version == 1 { Kept::Created } else { Kept::Updated };
     Ok((kept, u64::try_from(version).map_err(|_| LedgerError::OutOfRange { what: "version" })?))
 }
@@ -334,8 +343,9 @@ async fn write_entry(connection: &mut SqliteConnection, entry: Entry) -> EntryAn
         .bind(&submission.body_digest)
         .bind(number)
         .bind(&entry.refusal)
-        .execute(connection)
+        .execute(&mut *connection)
         .await?;
+    tree::log(connection, &CERTIFICATION, &entry.id.to_string()).await?;
     let Entry { id, record, refusal, submission, .. } = entry;
     Ok(Settled { answered: Answered { id, body_digest: submission.body_digest, record, refusal }, replayed: false })
 }
@@ -379,6 +389,7 @@ async fn write_commitment(connection: &mut SqliteConnection, committed: &Committ
         let sql = "INSERT INTO commitment_witnesses (commitment, digest) VALUES (?, ?)";
         sqlx::query(sql).bind(number).bind(digest).execute(&mut *connection).await?;
     }
+    tree::log(connection, &COMMITMENT, &committed.id.to_string()).await?;
     Ok(())
 }
 
