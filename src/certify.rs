@@ -3,8 +3,9 @@
 use num_rational::BigRational;
 
 use crate::{
+    attack::{Effort, Hints, attack, objective::Objective},
     bound::{Answer, guessing_probability, power_entropy},
-    certificate::{Certificate, FailureTotal, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
+    certificate::{Bracket, Certificate, FailureTotal, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
     commitment::Commitment,
     counts::{Counts, Table},
     entropy::{
@@ -44,6 +45,9 @@ pub fn certify(request: &Request) -> Certification {
             }
             Answer::Bounded(found) => {
                 draft.add(request, *target, found.level, &found.witness, &found.bound);
+                if request.bracket {
+                    draft.attack(request, *target, &evidence, &found.witness);
+                }
                 let PowerTerms { power, .. } = power_terms(request, *target);
                 if let Some(level) = request.power_start.filter(|_| found.bound.rounded_up() < 1.0)
                     && let Some(found) = power_entropy(request.scenario(), *target, evidence.place(), power, level, Limits::default())
@@ -99,6 +103,7 @@ pub(crate) fn certify_counted(
         power_start: None,
         entropy: EntropyChoice::Power,
         lost_rounds,
+        bracket: false,
     };
     let mut certificate = Draft::new(&request, None).certificate;
     if !in_time {
@@ -132,7 +137,24 @@ impl Evidence {
             Self::Scores(scores) => Place::Scores(scores),
         }
     }
+
+    /// Intervals that hold every behaviour within a distance of this in each probability; none for scores.
+    pub(crate) fn widened(&self, by: f64) -> Option<Table<[f64; 2]>> {
+        let wider = |[low, high]: [f64; 2]| [(low - by).next_down().max(0.0), (high + by).next_up().min(1.0)];
+        match self {
+            Self::Point(table) => Some(map(table, |p| wider([*p, *p]))),
+            Self::Region(table) => Some(map(table, |interval| wider(*interval))),
+            Self::Scores(_) => None,
+        }
+    }
 }
+
+fn map<T>(table: &Table<T>, of: impl Fn(&T) -> [f64; 2]) -> Table<[f64; 2]> {
+    table.iter().map(|table| table.iter().map(|values| values.iter().map(&of).collect()).collect()).collect()
+}
+
+/// The most by which the behaviour of an attack that is recorded may miss the data.
+const LARGEST_RESIDUAL: f64 = 1e-6;
 
 pub(crate) fn evidence(request: &Request) -> Evidence {
     match (&request.data, request.rounds) {
@@ -243,6 +265,40 @@ impl Draft {
         self.certificate.targets.push(entry);
     }
 
+    /// Seeks an explicit attack on the target that was added last.
+    fn attack(&mut self, request: &Request, target: Setting, evidence: &Evidence, witness: &CheckedWitness) {
+        let hints = Hints { witness: Some(witness), known: &[] };
+        let found = attack(request.scenario(), target, evidence.place(), Objective::Guess, hints, Effort::default());
+        if let Some(found) = found {
+            self.add_bracket(request, evidence, witness, found.guessing_probability(), found.residual);
+        }
+    }
+
+    /// Adds an attack to the target that was added last; `false` if it exceeds what the witness allows over the data, widened by how far the
+    /// attack's behaviour may miss them. An attack that misses them by more than [`LARGEST_RESIDUAL`] says nothing of interest and is left
+    /// out.
+    pub(crate) fn add_bracket(
+        &mut self,
+        request: &Request,
+        evidence: &Evidence,
+        witness: &CheckedWitness,
+        attack: f64,
+        residual: f64,
+    ) -> bool {
+        let Some(widened) = evidence.widened(residual) else { return false };
+        let (leakage, reading) = (request.scenario.leakage(), request.scenario.leakage_holds());
+        let allowed = witness.bound(Place::Region(&widened), leakage, reading);
+        if !allowed.is_ok_and(|allowed| attack <= allowed.rounded_up()) {
+            return false;
+        }
+        if let Some(entry) = self.certificate.targets.last_mut()
+            && let Some(bound) = entry.guessing_probability_bound.filter(|_| residual <= LARGEST_RESIDUAL)
+        {
+            entry.bracket = Some(Bracket { attack, bound, residual });
+        }
+        true
+    }
+
     /// Adds a power entropy to the target that was added last. One that exceeds what the data allow anyway proves that there is no model, and
     /// is no entropy: it is left out.
     pub(crate) fn add_power(
@@ -259,6 +315,7 @@ impl Draft {
         let intervals: Vec<[f64; 2]> = match evidence {
             Evidence::Region(region) => region[target.x][target.y].clone(),
             Evidence::Point(table) => table[target.x][target.y].iter().map(|p| [*p, *p]).collect(),
+            Evidence::Scores(_) => vec![[0.0, 1.0]; request.scenario.geometry().outcomes],
         };
         let largest = largest_power_entropy(&intervals, power) * std::f64::consts::LOG2_E;
         if entropy_per_round > largest {
@@ -345,6 +402,7 @@ impl TargetCertificate {
             witness: None,
             rounding_cost: None,
             power: None,
+            bracket: None,
         }
     }
 

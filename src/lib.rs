@@ -21,6 +21,7 @@
 //! - [`relaxation`] turns a question about a scenario into a semidefinite programme; [`solver`] answers it in floating point, and is
 //!   not believed; [`witness`] rounds the answer to integers and proves a bound from them in exact arithmetic. [`bound`] strings these
 //!   together.
+//! - [`attack`] looks for explicit models from below: what is between an attack and a bound is what the bound may give away.
 //! - [`entropy`] turns a bound into whole bits, [`certify`] draws up the [`certificate`], and [`verify`] confirms one without a
 //!   solver; a [`bundle`] is what is needed for that.
 //! - With the feature `service`, on by default: profiles of rigs, an append-only ledger in SQLite, and HTTP.
@@ -45,6 +46,8 @@
 //! ```
 
 #![deny(unsafe_code)]
+
+pub mod attack;
 
 #[cfg(feature = "service")]
 pub mod batch;

@@ -70,6 +70,7 @@ fn request(certificate: &Certificate) -> Result<Request, Fault> {
         level: certificate.level,
         entropy: certificate.entropy,
         lost_rounds: None,
+        bracket: false,
     };
     let mut request = Request::try_from(document)?;
     request.lost_rounds = certificate.lost_rounds.clone();
@@ -110,6 +111,11 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
                 return Err(claim("the numbers contradict the declaration, so there is no entropy to speak of"));
             }
             draft.add(&request, *target, level, &witness, &bound);
+            if let Some(bracket) = recorded.bracket
+                && !draft.add_bracket(&request, &evidence, &witness, bracket.attack, bracket.residual)
+            {
+                return Err(claim("the attack exceeds it"));
+            }
             if let Some(recorded) = &recorded.power {
                 let pointer = format!("/targets/{}/power/witness", draft.targets() - 1);
                 let power = find(witnesses, &recorded.witness, &pointer)?;

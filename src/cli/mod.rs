@@ -1,5 +1,6 @@
 //! The command line: one file a command.
 
+mod attack;
 mod backup;
 mod certify;
 mod demo;
@@ -29,6 +30,7 @@ enum Command {
     Serve(serve::Serve),
     Certify(certify::Certify),
     Verify(verify::Verify),
+    Attack(attack::Attack),
     Leakage(leakage::Leakage),
     Export(export::Export),
     Backup(backup::Backup),
@@ -42,6 +44,7 @@ pub fn run() -> ExitCode {
         Command::Serve(command) => command.run(),
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
+        Command::Attack(command) => command.run(),
         Command::Leakage(command) => command.run(),
         Command::Export(command) => command.run(),
         Command::Backup(command) => command.run(),

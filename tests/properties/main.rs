@@ -7,4 +7,5 @@ mod monotone;
 mod relabelling;
 mod rig;
 mod rounds;
+mod sandwich;
 mod witnesses;
