@@ -12,7 +12,6 @@ use crate::{
     certify::{Draft, Evidence, certify_counted, evidence},
     commitment::{Commitment, CommitmentFault},
     fault::Fault,
-    relaxation::{level::Level, parity::split, word::Algebra},
     request::{Failure, Request, RequestDocument, RoundModel},
     witness::{
         check::{CheckError, CheckedWitness, check, proves_contradiction},
@@ -100,7 +99,7 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
             if witness.witness().geometry != request.scenario().geometry() {
                 return Err(claim("it is for another geometry"));
             }
-            if !is_of_level(witness.witness(), level) {
+            if !witness.witness().is_of_level(level) {
                 return Err(claim("it is not of the recorded level"));
             }
             let bound = witness.bound(evidence.place(), request.scenario().leakage(), request.scenario().leakage_holds());
@@ -108,21 +107,20 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
             if proves_contradiction(&witness, &bound, evidence.place()) {
                 return Err(claim("the numbers contradict the declaration, so there is no entropy to speak of"));
             }
-            draft.add(&request, *target, level, &witness, &bound);
+            draft.add(&request, *target, level, &witness, &bound, recorded.origin);
             if let Some(recorded) = &recorded.power {
                 let pointer = format!("/targets/{}/power/witness", draft.targets() - 1);
                 let power = find(witnesses, &recorded.witness, &pointer)?;
                 let claim = |detail| Discrepancy::Claim { pointer: pointer.clone(), digest: recorded.witness.clone(), detail };
                 let of_target =
-                    matches!(&power.witness().claim, Claim::Power { target: of, power, .. } if of == target && *power == recorded.power);
-                if !of_target || power.witness().geometry != request.scenario().geometry() || !is_of_level(power.witness(), recorded.level)
-                {
+                    matches!(&power.witness().claim, Claim::Power { target: of, power, .. } if of == target && *power >= recorded.power);
+                if !of_target || power.witness().geometry != request.scenario().geometry() || !power.witness().is_of_level(recorded.level) {
                     return Err(claim("it bounds something else"));
                 }
                 let bound = power.bound(evidence.place(), request.scenario().leakage(), request.scenario().leakage_holds());
                 let bound =
                     bound.map_err(|error| Discrepancy::Witness { pointer: pointer.clone(), digest: recorded.witness.clone(), error })?;
-                draft.add_power(&request, *target, &evidence, recorded.level, &power, &bound);
+                draft.add_power(&request, *target, &evidence, recorded.level, &power, &bound, recorded.origin);
             }
         }
         draft.conclude().certificate
@@ -182,14 +180,6 @@ fn find(witnesses: &BTreeMap<String, &Witness>, digest: &str, pointer: &str) -> 
         return Err(Discrepancy::MissingWitness { pointer, digest });
     };
     check(witness).map_err(|error| Discrepancy::Witness { pointer, digest, error })
-}
-
-/// Whether a witness has the monomials of a level.
-fn is_of_level(witness: &Witness, level: Level) -> bool {
-    let algebra = Algebra::new(witness.geometry, &witness.exact);
-    let bases = split(&level.monomials(&algebra), &algebra);
-    bases.len() == witness.bases.len()
-        && bases.iter().zip(&witness.bases).all(|(basis, span)| basis.parity == span.parity && basis.monomials == span.monomials)
 }
 
 fn compare(recorded: &Value, recomputed: &Value, pointer: String, differences: &mut Vec<Discrepancy>) {

@@ -11,7 +11,7 @@ use tokio::{
 use super::{
     LedgerError,
     history::answered_within,
-    rows::{Answered, Entry, word},
+    rows::{Answered, Entry, KeptRow, word},
 };
 use crate::{
     clock::Stamp,
@@ -74,11 +74,13 @@ pub struct Settled {
 type ProfileAnswer = Result<(Kept, u64), WriteError>;
 type EntryAnswer = Result<Settled, WriteError>;
 type CommitmentAnswer = Result<(), LedgerError>;
+type KeptAnswer = Result<(), LedgerError>;
 
 enum Item {
     Profile { rig: RigName, profile: Box<Profile>, expectation: Expectation, recorded_at: Stamp, answer: oneshot::Sender<ProfileAnswer> },
     Entry { entry: Box<Entry>, answer: oneshot::Sender<EntryAnswer> },
     Commitment { committed: Box<Committed>, witnesses: Vec<(String, String)>, answer: oneshot::Sender<CommitmentAnswer> },
+    Kept { added: Vec<KeptRow>, dropped: Vec<String>, answer: oneshot::Sender<KeptAnswer> },
 }
 
 /// An item's outcome, kept back until the transaction is committed.
@@ -86,6 +88,7 @@ enum Outcome {
     Profile(oneshot::Sender<ProfileAnswer>, ProfileAnswer),
     Entry(oneshot::Sender<EntryAnswer>, EntryAnswer),
     Commitment(oneshot::Sender<CommitmentAnswer>, CommitmentAnswer),
+    Kept(oneshot::Sender<KeptAnswer>, KeptAnswer),
 }
 
 impl Outcome {
@@ -95,6 +98,7 @@ impl Outcome {
             Self::Profile(answer, outcome) => drop(answer.send(outcome)),
             Self::Entry(answer, outcome) => drop(answer.send(outcome)),
             Self::Commitment(answer, outcome) => drop(answer.send(outcome)),
+            Self::Kept(answer, outcome) => drop(answer.send(outcome)),
         }
     }
 
@@ -103,7 +107,8 @@ impl Outcome {
         match self {
             Self::Profile(_, Err(WriteError::Ledger(error)))
             | Self::Entry(_, Err(WriteError::Ledger(error)))
-            | Self::Commitment(_, Err(error)) => Some(error),
+            | Self::Commitment(_, Err(error))
+            | Self::Kept(_, Err(error)) => Some(error),
             _ => None,
         }
     }
@@ -113,6 +118,7 @@ impl Outcome {
             Self::Profile(answer, _) => Self::Profile(answer, Err(error.clone().into())),
             Self::Entry(answer, _) => Self::Entry(answer, Err(error.clone().into())),
             Self::Commitment(answer, _) => Self::Commitment(answer, Err(error.clone())),
+            Self::Kept(answer, _) => Self::Kept(answer, Err(error.clone())),
         }
     }
 }
@@ -123,6 +129,7 @@ impl Item {
             Self::Profile { answer, .. } => Outcome::Profile(answer, Err(error.clone().into())),
             Self::Entry { answer, .. } => Outcome::Entry(answer, Err(error.clone().into())),
             Self::Commitment { answer, .. } => Outcome::Commitment(answer, Err(error.clone())),
+            Self::Kept { answer, .. } => Outcome::Kept(answer, Err(error.clone())),
         }
     }
 
@@ -136,6 +143,7 @@ impl Item {
             Self::Commitment { committed, witnesses, answer } => {
                 Outcome::Commitment(answer, write_commitment(connection, &committed, &witnesses).await)
             }
+            Self::Kept { added, dropped, answer } => Outcome::Kept(answer, write_kept(connection, &added, &dropped).await),
         }
     }
 }
@@ -195,6 +203,16 @@ impl Writer {
         let (answer, outcome) = oneshot::channel();
         let item = Item::Commitment { committed: Box::new(committed), witnesses, answer };
         self.sender()?.send(item).await.map_err(|_| LedgerError::Closed)?;
+        outcome.await.map_err(|_| LedgerError::Closed)?
+    }
+
+    /// Writes down which witnesses are kept from now on, and which no longer; their documents stay.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn keep_witnesses(&self, added: Vec<KeptRow>, dropped: Vec<String>) -> KeptAnswer {
+        let (answer, outcome) = oneshot::channel();
+        self.sender()?.send(Item::Kept { added, dropped, answer }).await.map_err(|_| LedgerError::Closed)?;
         outcome.await.map_err(|_| LedgerError::Closed)?
     }
 
@@ -323,6 +341,10 @@ async fn write_entry(connection: &mut SqliteConnection, entry: Entry) -> EntryAn
             .execute(&mut *connection)
             .await?;
     }
+    for digest in &entry.kept {
+        let sql = "INSERT INTO certification_witnesses (entry, digest) VALUES (?, ?)";
+        sqlx::query(sql).bind(number).bind(digest).execute(&mut *connection).await?;
+    }
     if let Some(commitment) = entry.commitment {
         // A commitment that is not there makes this NULL, which the column refuses.
         let sql = "INSERT INTO certification_commitments (entry, commitment) VALUES (?, (SELECT commitment FROM commitments WHERE id = ?))";
@@ -378,6 +400,18 @@ async fn write_commitment(connection: &mut SqliteConnection, committed: &Committ
         insert_witness(connection, digest, document).await?;
         let sql = "INSERT INTO commitment_witnesses (commitment, digest) VALUES (?, ?)";
         sqlx::query(sql).bind(number).bind(digest).execute(&mut *connection).await?;
+    }
+    Ok(())
+}
+
+async fn write_kept(connection: &mut SqliteConnection, added: &[KeptRow], dropped: &[String]) -> KeptAnswer {
+    for KeptRow { digest, document, made_for } in added {
+        insert_witness(connection, digest, document).await?;
+        let sql = "INSERT OR REPLACE INTO kept_witnesses (digest, made_for) VALUES (?, ?)";
+        sqlx::query(sql).bind(digest).bind(made_for).execute(&mut *connection).await?;
+    }
+    for digest in dropped {
+        sqlx::query("DELETE FROM kept_witnesses WHERE digest = ?").bind(digest).execute(&mut *connection).await?;
     }
     Ok(())
 }
