@@ -165,7 +165,9 @@ async fn write_bytes(file: &Path) -> channel::Sender<oneshot::Sender<()>> {
                 sqlx::query("INSERT INTO bytes (bytes) VALUES (?)").bind(record).execute(&mut connection).await.expect("a row");
             }
             sqlx::query("COMMIT").execute(&mut connection).await.expect("a commit");
-            group.drain(..).for_each(|written| drop(written.send(())));
+            for written in group.drain(..) {
+                let _ = written.send(());
+            }
         }
     });
     writer
