@@ -1,8 +1,8 @@
 //! Writing the ledger: one task, one transaction for everything that is waiting, one answer each after the commit.
 
-use std::sync::Mutex;
+use std::sync::{Arc, LazyLock, Mutex};
 
-use sqlx::{Connection, SqliteConnection};
+use sqlx::{AssertSqlSafe, Connection, SqliteConnection};
 use tokio::{
     sync::{mpsc, oneshot},
     task::JoinHandle,
@@ -245,7 +245,7 @@ async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>) 
 /// Writes a group of items in one transaction. An item that fails is undone alone; if the transaction fails, all of them have.
 async fn commit(connection: &mut SqliteConnection, items: impl Iterator<Item = Item>) -> Vec<Outcome> {
     let mut outcomes = Vec::new();
-    let mut broken = execute(connection, "BEGIN IMMEDIATE").await.err();
+    let mut broken = execute(connection, "BEGIN IMMEDIATE; SAVEPOINT item").await.err();
     for item in items {
         let outcome = match &broken {
             Some(error) => item.failed(error),
@@ -263,23 +263,12 @@ async fn commit(connection: &mut SqliteConnection, items: impl Iterator<Item = I
     outcomes.into_iter().map(|outcome| outcome.failed(&error)).collect()
 }
 
-/// Writes one item inside a savepoint. `broken` is set if the transaction itself can no longer be trusted.
+/// Writes one item inside the savepoint that is open, and opens it anew. `broken` is set if the transaction itself can no longer be trusted.
 async fn write_undoable(connection: &mut SqliteConnection, item: Item, broken: &mut Option<LedgerError>) -> Outcome {
-    if let Err(error) = execute(connection, "SAVEPOINT item").await {
-        let outcome = item.failed(&error);
-        *broken = Some(error);
-        return outcome;
-    }
     let outcome = item.write(connection).await;
-    if outcome.broken().is_some()
-        && let Err(error) = execute(connection, "ROLLBACK TO item").await
-    {
-        *broken = Some(error);
-        return outcome;
-    }
-    if let Err(error) = execute(connection, "RELEASE item").await {
-        *broken = Some(error);
-    }
+    // Undone, the savepoint stays open for the next item.
+    let next = if outcome.broken().is_some() { "ROLLBACK TO item" } else { "RELEASE item; SAVEPOINT item" };
+    *broken = execute(connection, next).await.err();
     outcome
 }
 
@@ -330,48 +319,40 @@ async fn write_profile(
 }
 
 async fn write_entry(connection: &mut SqliteConnection, entry: Entry) -> EntryAnswer {
-    let Entry { submission, rig, .. } = &entry;
-    if let Some(answered) = answered_within(connection, rig, &submission.key).await? {
-        let same = answered.body_digest == submission.body_digest;
+    if let Err(error) = insert_entry(connection, &entry).await {
+        // The key may stand for a batch already. To ask first would cost every batch a question, and hardly any has been sent before.
+        execute(connection, "ROLLBACK TO item").await?;
+        let Some(answered) = answered_within(connection, &entry.rig, &entry.submission.key).await? else { return Err(error.into()) };
+        let same = answered.body_digest == entry.submission.body_digest;
         return if same { Ok(Settled { answered, replayed: true }) } else { Err(WriteError::KeyReused) };
     }
-    let number = insert_certification(connection, &entry).await?;
-    for (digest, document) in &entry.witnesses {
-        insert_witness(connection, digest, document).await?;
-        sqlx::query("INSERT INTO certification_witnesses (entry, digest) VALUES (?, ?)")
-            .bind(number)
-            .bind(digest)
-            .execute(&mut *connection)
-            .await?;
-    }
-    for digest in &entry.kept {
-        let sql = "INSERT INTO certification_witnesses (entry, digest) VALUES (?, ?)";
-        sqlx::query(sql).bind(number).bind(digest).execute(&mut *connection).await?;
-    }
-    if let Some(commitment) = entry.commitment {
-        // A commitment that is not there makes this NULL, which the column refuses.
-        let sql = "INSERT INTO certification_commitments (entry, commitment) VALUES (?, (SELECT commitment FROM commitments WHERE id = ?))";
-        sqlx::query(sql).bind(number).bind(commitment.to_string()).execute(&mut *connection).await?;
-    }
-    sqlx::query("INSERT INTO submissions (rig, idempotency_key, body_digest, entry, refusal) VALUES (?, ?, ?, ?, ?)")
-        .bind(rig.as_str())
-        .bind(submission.key.as_str())
-        .bind(&submission.body_digest)
-        .bind(number)
-        .bind(&entry.refusal)
-        .execute(&mut *connection)
-        .await?;
-    tree::log(connection, &CERTIFICATION, &entry.id.to_string()).await?;
     let Entry { id, record, refusal, submission, .. } = entry;
     Ok(Settled { answered: Answered { id, body_digest: submission.body_digest, record, refusal }, replayed: false })
 }
 
-/// Adds the certification as the next entry; answers with its number.
-async fn insert_certification(connection: &mut SqliteConnection, entry: &Entry) -> Result<i64, WriteError> {
-    let sql = "INSERT INTO certifications (entry, id, rig, profile_version, verdict, reason, recorded_at, certified_bits, rounds, \
-               failure, record) VALUES ((SELECT COALESCE(MAX(entry), -1) + 1 FROM certifications), ?, ?, ?, ?, ?, ?, ?, ?, ?, ?) \
-               RETURNING entry";
-    let number = sqlx::query_scalar(sql)
+/// A certification with all that belongs to it, and the row that is logged about it. One text, so that the database is asked once.
+///
+/// A commitment that is not there makes its column NULL, which the column refuses.
+static ENTRY: LazyLock<Arc<str>> = LazyLock::new(|| {
+    let inserts = "\
+        INSERT INTO certifications (entry, id, rig, profile_version, verdict, reason, recorded_at, certified_bits, rounds, failure, record) \
+            VALUES ((SELECT COALESCE(MAX(entry), -1) + 1 FROM certifications), $1, $2, $3, $4, $5, $6, $7, $8, $9, $10); \
+        INSERT INTO certification_witnesses (entry, digest) \
+            SELECT c.entry, w.value FROM certifications c, json_each($11) w WHERE c.id = $1; \
+        INSERT INTO certification_commitments (entry, commitment) \
+            SELECT entry, (SELECT commitment FROM commitments WHERE id = $12) FROM certifications WHERE id = $1 AND $12 IS NOT NULL; \
+        INSERT INTO submissions (rig, idempotency_key, body_digest, entry, refusal) \
+            SELECT $2, $13, $14, entry, $15 FROM certifications WHERE id = $1; ";
+    format!("{inserts}{}", CERTIFICATION.row).into()
+});
+
+/// Adds the certification as the next entry, with its witnesses and its submission, and logs it.
+async fn insert_entry(connection: &mut SqliteConnection, entry: &Entry) -> Result<(), LedgerError> {
+    for (digest, document) in &entry.witnesses {
+        insert_witness(connection, digest, document).await?;
+    }
+    let digests: Vec<&String> = entry.witnesses.iter().map(|(digest, _)| digest).chain(&entry.kept).collect();
+    let row = sqlx::query(AssertSqlSafe(Arc::clone(&ENTRY)))
         .bind(entry.id.to_string())
         .bind(entry.rig.as_str())
         .bind(signed(entry.profile_version, "version")?)
@@ -382,9 +363,16 @@ async fn insert_certification(connection: &mut SqliteConnection, entry: &Entry) 
         .bind(signed(entry.rounds, "number of rounds")?)
         .bind(entry.failure)
         .bind(&entry.record)
-        .fetch_one(connection)
+        // Strings only: serialisation cannot fail.
+        .bind(serde_json::to_string(&digests).unwrap_or_default())
+        .bind(entry.commitment.map(|id| id.to_string()))
+        .bind(entry.submission.key.as_str())
+        .bind(&entry.submission.body_digest)
+        .bind(&entry.refusal)
+        .fetch_one(&mut *connection)
         .await?;
-    Ok(number)
+    tree::append(connection, &CERTIFICATION.read(&row)?).await?;
+    Ok(())
 }
 
 async fn write_commitment(connection: &mut SqliteConnection, committed: &Committed, witnesses: &[(String, String)]) -> CommitmentAnswer {

@@ -297,12 +297,14 @@ impl Family {
         for other in &self.kept {
             for (made, seen) in [(new, other.as_ref()), (other.as_ref(), new)] {
                 let squared = seen.spot.squared_distance(&made.spot);
-                if !(squared > 0.0 && squared <= MEASURED_WITHIN) || !made.applies(&seen.spot, seen.power()) {
+                let noise = if matches!(new.subject, Subject::Power(_)) { POWER_NOISE } else { NOISE };
+                // Nearer than this, the noise would say more than the curvature.
+                let within = 4.0 * noise / FIRST_CURVATURE..=MEASURED_WITHIN;
+                if !within.contains(&squared) || !made.applies(&seen.spot, seen.power()) {
                     continue;
                 }
-                let noise = if matches!(new.subject, Subject::Power(_)) { POWER_NOISE } else { NOISE };
-                let lost = seen.bits - in_bits(made.subject, made.quick.at(&seen.spot)) - noise;
-                let curvature = lost.max(0.0) / squared;
+                let lost = seen.bits - in_bits(made.subject, made.quick.at(&seen.spot));
+                let curvature = (lost.max(0.0) + noise) / squared;
                 self.curvature = Some(self.curvature.map_or(curvature, |known| known.max(curvature)));
             }
         }

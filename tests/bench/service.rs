@@ -48,7 +48,11 @@ pub fn run() -> Section {
     let served = Served::start();
     section.note(format!("{} s each; server and clients share the machine; p50 and p99 from request to answer", TIME.as_secs()));
     section.note("certify: distinct batches of one rig, from kept witnesses, answered once durable");
-    section.note("write: the same requests, a record's bytes written durably to an SQLite file with the same settings, in groups");
+    section.note(format!(
+        "write: the same requests, {} bytes each, as many as a certification adds to the ledger, written durably to an SQLite file with the \
+         same settings, in groups",
+        BYTES.get().map_or(0, String::len)
+    ));
     section.note("nothing: the same requests, answered with a record's bytes");
     for clients in CLIENTS {
         let mut measure = |name: &str, path| {
@@ -103,6 +107,7 @@ impl Served {
         });
         let address = address.recv().expect("a server");
         RECORD.get_or_init(|| first_record(address).into());
+        BYTES.get_or_init(|| bytes_of_a_certification(address, &folder.path().join("ledger.sqlite")));
         Self { address, stop, thread, _folder: folder }
     }
 
@@ -112,8 +117,12 @@ impl Served {
     }
 }
 
-/// What the routes of the bench write and answer: the record of a batch that kept witnesses certified.
+/// What the routes of the bench answer: the record of a batch that kept witnesses certified.
 static RECORD: OnceLock<Bytes> = OnceLock::new();
+/// What the route that writes writes.
+static BYTES: OnceLock<String> = OnceLock::new();
+/// Certifications over which their size is averaged.
+const SAMPLE: u64 = 500;
 
 /// Declares the rig, has its geometry solved, and certifies one more batch.
 fn first_record(address: SocketAddr) -> Vec<u8> {
@@ -131,6 +140,21 @@ fn first_record(address: SocketAddr) -> Vec<u8> {
     record
 }
 
+/// As many bytes as a certification adds to the ledger's file, with its share of indexes and tree.
+fn bytes_of_a_certification(address: SocketAddr, ledger: &Path) -> String {
+    let size = || {
+        let runtime = tokio::runtime::Builder::new_current_thread().enable_all().build().expect("a thread");
+        let pages: i64 = runtime.block_on(async {
+            let mut connection = SqliteConnectOptions::new().filename(ledger).read_only(true).connect().await.expect("a ledger");
+            sqlx::query_scalar("PRAGMA page_count").fetch_one(&mut connection).await.expect("a number")
+        });
+        4096 * pages as u64
+    };
+    let before = size();
+    requests::post(address, "/v1/rigs/bench/batches", 8, Until::Answers(SAMPLE));
+    "x".repeat(((size() - before) / SAMPLE) as usize)
+}
+
 /// The routes that only the bench has.
 async fn beside(file: &Path) -> Router {
     let writer = write_bytes(file).await;
@@ -146,7 +170,7 @@ async fn beside(file: &Path) -> Router {
     )
 }
 
-/// A task that writes the bytes of a record for everyone who asks, in groups, and answers after the commit.
+/// A task that writes as many bytes as a certification for everyone who asks, in groups, and answers after the commit.
 async fn write_bytes(file: &Path) -> channel::Sender<oneshot::Sender<()>> {
     let options = SqliteConnectOptions::new().filename(file).create_if_missing(true);
     let options = options.journal_mode(SqliteJournalMode::Wal).synchronous(SqliteSynchronous::Full);
@@ -161,8 +185,8 @@ async fn write_bytes(file: &Path) -> channel::Sender<oneshot::Sender<()>> {
         while asked.recv_many(&mut group, GROUP).await > 0 {
             sqlx::query("BEGIN IMMEDIATE").execute(&mut connection).await.expect("a transaction");
             for _ in &group {
-                let record = RECORD.get().and_then(|record| std::str::from_utf8(record).ok()).unwrap_or_default();
-                sqlx::query("INSERT INTO bytes (bytes) VALUES (?)").bind(record).execute(&mut connection).await.expect("a row");
+                let bytes = BYTES.get().map_or("", String::as_str);
+                sqlx::query("INSERT INTO bytes (bytes) VALUES (?)").bind(bytes).execute(&mut connection).await.expect("a row");
             }
             sqlx::query("COMMIT").execute(&mut connection).await.expect("a commit");
             for written in group.drain(..) {

@@ -90,8 +90,8 @@ fn what_was_not_solved_nearby_is_not_certified() {
 /// A bound below the likeliest outcome proves a contradiction. It is never taken for entropy, whatever loss is acceptable.
 #[test]
 fn a_vacuous_bound_is_never_taken() {
-    let pool = pool_of(&solved(&document(counts(&code(0.5), ROUNDS), 2, 0.0)));
-    let mut impossible = code(0.5);
+    let pool = pool_of(&solved(&document(counts(&code(0.99), ROUNDS), 2, 0.0)));
+    let mut impossible = code(0.99);
     // Far better than any qubit on the settings that are not targets.
     for (x, per_measurement) in impossible.iter_mut().enumerate() {
         for (y, outcomes) in per_measurement.iter_mut().enumerate().filter(|(y, _)| (x, *y) != (0, 0)) {
@@ -137,7 +137,7 @@ fn variants(number: usize) -> Vec<Arc<Kept>> {
     let (witness, made_for) = solved(&document(counts(&code(0.99), ROUNDS), 2, 1e-3)).remove(0);
     let variant = |by: usize| {
         let mut variant = witness.clone();
-        variant.behaviour[0][0][0] += 1 + 1000 * by as i64;
+        variant.behaviour[0][0][0] += (by as i64) << 30;
         Arc::new(Kept::try_new(complete(variant).unwrap().witness(), made_for.clone()).unwrap())
     };
     (0..number).map(variant).collect()
