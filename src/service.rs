@@ -5,6 +5,7 @@ mod kept;
 mod newest;
 mod quality;
 mod solvers;
+mod tree;
 mod turns;
 
 use std::sync::{
@@ -18,6 +19,7 @@ use uuid::{NoContext, Uuid};
 pub use self::{
     commitments::{Listed, OrderError},
     solvers::{Certifier, SolveError, Solvers},
+    tree::Exported,
 };
 use self::{
     kept::{KeptWitnesses, Outcome},
@@ -305,6 +307,7 @@ impl Service {
             Check { name: "accepting", fault: unless(self.accepting.load(Ordering::Relaxed), "the service is shutting down") },
             Check { name: "database", fault: self.ledger.history.check().await.err().map(|error| error.to_string()) },
             Check { name: "writer", fault: unless(self.ledger.writer.is_open(), "the ledger is closed") },
+            Check { name: "ledger", fault: self.ledger.seal.fault().map(str::to_owned) },
             Check { name: "solvers", fault: self.solvers.fault() },
         ]
     }
