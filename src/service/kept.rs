@@ -112,8 +112,11 @@ impl Service {
             (service.kept.len(), unusable)
         });
         let Ok((number, unusable)) = recalled.await else { return Ok(0) };
-        if !unusable.is_empty() {
-            self.ledger.writer.keep_witnesses(vec![], unusable).await?;
+        if !unusable.is_empty()
+            && let Err(error) = self.ledger.writer.keep_witnesses(vec![], unusable).await
+        {
+            // They are looked at again at the next start, and are not used meanwhile.
+            tracing::warn!(error = &error as &dyn std::error::Error, "unusable witnesses are still listed");
         }
         Ok(number)
     }
