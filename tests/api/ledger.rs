@@ -141,7 +141,7 @@ async fn an_item_that_fails_takes_no_other_with_it() {
     let now = Stamp::from_microseconds(0).unwrap();
     ledger.writer.keep_profile(rig.clone(), profile, Expectation::Unstated, now).await.unwrap();
 
-    let witness = format!("sha256:{}", "0".repeat(64));
+    let witness = "sha256:44136fa355b3678a1146ad16f7e8649e94fb4fc21fe77e8310c060f61caaff8a".to_owned(); // of `{}`
     // All of these wait before the writer has its turn: they share a transaction. The second fails at its witness, after its
     // certification was inserted.
     let (first, second, third, again, reused) = tokio::join!(
