@@ -1,11 +1,13 @@
 //! The pure pipeline: a request in, a certificate and its witnesses out.
 
+use std::sync::Arc;
+
 use num_rational::BigRational;
 
 use crate::{
     attack::{Effort, Hints, attack, objective::Objective},
     bound::{Answer, guessing_probability, power_entropy},
-    certificate::{Bracket, Certificate, FailureTotal, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
+    certificate::{Bracket, Certificate, FailureTotal, Origin, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
     commitment::Commitment,
     counts::{Counts, Table},
     entropy::{
@@ -21,7 +23,8 @@ use crate::{
     solver::Limits,
     statistics::region::{frequencies, region},
     witness::{
-        check::{CheckedBound, CheckedWitness, Place},
+        check::{CheckedBound, CheckedWitness, Place, proves_contradiction},
+        pool::{Kept, MadeFor, Pool, Spot, Subject},
         witness::Witness,
     },
 };
@@ -44,7 +47,7 @@ pub fn certify(request: &Request) -> Certification {
                 return draft.outside(&contradiction.found.witness, least);
             }
             Answer::Bounded(found) => {
-                draft.add(request, *target, found.level, &found.witness, &found.bound);
+                draft.add(request, *target, found.level, &found.witness, &found.bound, Some(Origin::Fresh));
                 if request.bracket {
                     draft.attack(request, *target, &evidence, &found.witness);
                 }
@@ -52,13 +55,87 @@ pub fn certify(request: &Request) -> Certification {
                 if let Some(level) = request.power_start.filter(|_| found.bound.rounded_up() < 1.0)
                     && let Some(found) = power_entropy(request.scenario(), *target, evidence.place(), power, level, Limits::default())
                 {
-                    draft.add_power(request, *target, &evidence, found.level, &found.witness, &found.bound);
+                    let origin = Some(Origin::Fresh);
+                    draft.add_power(request, *target, &evidence, found.level, &found.witness, &found.bound, origin);
                 }
             }
             Answer::Unverified => draft.add_unverified(request, *target),
         }
     }
     draft.conclude()
+}
+
+/// A certificate that kept witnesses gave. Its witnesses are the pool's.
+#[derive(Debug, Clone)]
+pub struct FromPool {
+    pub certificate: Certificate,
+    pub kept: Vec<Arc<Kept>>,
+    /// Estimate of how many bits per round of a target a solve would give more, the largest over the targets.
+    pub loss: f64,
+}
+
+/// Certifies a request with kept witnesses alone, without a solve; the pool's documentation says when they are good enough.
+///
+/// `None` where a solve is called for: some target's bound is estimated to give away more than `acceptable_loss` bits per round of that
+/// target, or the numbers seem to contradict the declaration. Plug-in figures, which are diagnostics, are always solved.
+pub fn certify_from(pool: &Pool, request: &Request, acceptable_loss: f64) -> Option<FromPool> {
+    if request.rounds != RoundModel::Independent || request.bracket {
+        return None;
+    }
+    let evidence = evidence(request);
+    let Evidence::Region(region) = &evidence else { return None };
+    let scenario = request.scenario();
+    let spot = Spot::new(scenario, region, request.start);
+    if pool.contradicts(&spot) {
+        return None;
+    }
+    let mut draft = Draft::new(request, Some(&evidence));
+    let (mut kept, mut loss) = (Vec::new(), 0f64);
+    let mut best = |subject, power| {
+        let best = pool.best(subject, &spot, power).filter(|best| best.loss <= acceptable_loss)?;
+        let bound = best.kept.witness().bound(evidence.place(), scenario.leakage(), scenario.leakage_holds()).ok()?;
+        loss = loss.max(best.loss);
+        kept.push(Arc::clone(&best.kept));
+        Some((best.kept, bound))
+    };
+    for target in scenario.targets() {
+        let (guess, bound) = best(Subject::Guess(*target), None)?;
+        if proves_contradiction(guess.witness(), &bound, evidence.place()) {
+            return None;
+        }
+        draft.add(request, *target, guess.level(), guess.witness(), &bound, Some(Origin::Kept));
+        if request.power_start.is_some() && bound.rounded_up() < 1.0 {
+            let PowerTerms { power, .. } = power_terms(request, *target);
+            let (of_power, bound) = best(Subject::Power(*target), Some(power))?;
+            let added = draft.add_power(request, *target, &evidence, of_power.level(), of_power.witness(), &bound, Some(Origin::Kept));
+            if !added {
+                return None;
+            }
+        }
+    }
+    Some(FromPool { certificate: draft.conclude().certificate, kept, loss })
+}
+
+/// Where a request's witnesses were made, and at which levels, as the pool wants to know it.
+pub fn keepable(request: &Request, certification: &Certification) -> Vec<(Witness, MadeFor)> {
+    let Evidence::Region(region) = evidence(request) else { return Vec::new() };
+    let scenario = request.scenario();
+    let certificate = &certification.certificate;
+    let level_of = |digest: &str| {
+        let of_target = |target: &TargetCertificate| {
+            let guess = target.level.filter(|_| target.witness.as_deref() == Some(digest));
+            guess.or_else(|| target.power.as_ref().filter(|power| power.witness == digest).map(|power| power.level))
+        };
+        let named = certificate.targets.iter().find_map(of_target);
+        // The certificate of a contradiction does not say its level.
+        named.map_or_else(|| Level::ALL.to_vec(), |level| vec![level])
+    };
+    let made = |witness: &Witness| {
+        let level = level_of(&witness.digest()).into_iter().find(|level| witness.is_of_level(*level))?;
+        let (leakage, leakage_holds) = (scenario.leakage().to_vec(), scenario.leakage_holds());
+        Some((witness.clone(), MadeFor { region: region.clone(), leakage, leakage_holds, asked: request.start, level }))
+    };
+    certification.witnesses.iter().filter_map(made).collect()
 }
 
 /// Certifies a block of rounds with memory under a commitment. No solve is involved: bits follow from counts and factors.
@@ -248,18 +325,28 @@ impl Draft {
         Self { certificate, witnesses: Vec::new() }
     }
 
-    fn keep(&mut self, witness: &CheckedWitness) -> String {
-        if self.witnesses.iter().all(|kept| kept != witness.witness()) {
+    fn keep(&mut self, witness: &CheckedWitness, origin: Option<Origin>) -> String {
+        // A kept one is in the pool.
+        if origin != Some(Origin::Kept) && self.witnesses.iter().all(|kept| kept != witness.witness()) {
             self.witnesses.push(witness.witness().clone());
         }
         witness.digest().to_owned()
     }
 
-    pub(crate) fn add(&mut self, request: &Request, target: Setting, level: Level, witness: &CheckedWitness, bound: &CheckedBound) {
-        let digest = self.keep(witness);
+    pub(crate) fn add(
+        &mut self,
+        request: &Request,
+        target: Setting,
+        level: Level,
+        witness: &CheckedWitness,
+        bound: &CheckedBound,
+        origin: Option<Origin>,
+    ) {
+        let digest = self.keep(witness, origin);
         let mut entry = TargetCertificate::without_bound(target, request.rounds_at(target));
         entry.level = Some(level);
         entry.witness = Some(digest);
+        entry.origin = origin;
         entry.rounding_cost = Some(witness.rounding_cost());
         entry.fill(bound.rounded_up(), request);
         self.certificate.targets.push(entry);
@@ -300,7 +387,7 @@ impl Draft {
     }
 
     /// Adds a power entropy to the target that was added last. One that exceeds what the data allow anyway proves that there is no model, and
-    /// is no entropy: it is left out.
+    /// is no entropy: it is left out. Answers whether it was added.
     pub(crate) fn add_power(
         &mut self,
         request: &Request,
@@ -309,7 +396,8 @@ impl Draft {
         level: Level,
         witness: &CheckedWitness,
         bound: &CheckedBound,
-    ) {
+        origin: Option<Origin>,
+    ) -> bool {
         let PowerTerms { power, failure } = power_terms(request, target);
         let entropy_per_round = entropy_in_bits(bound.exact());
         let intervals: Vec<[f64; 2]> = match evidence {
@@ -319,14 +407,15 @@ impl Draft {
         };
         let largest = largest_power_entropy(&intervals, power) * std::f64::consts::LOG2_E;
         if entropy_per_round > largest {
-            return;
+            return false;
         }
-        let digest = self.keep(witness);
-        let Some(entry) = self.certificate.targets.last_mut() else { return };
+        let digest = self.keep(witness, origin);
+        let Some(entry) = self.certificate.targets.last_mut() else { return false };
         let rounds = entry.rounds.unwrap_or(0);
         let min_entropy = failure.map(|failure| block_min_entropy(bound.exact(), rounds, power, failure));
         let rounding_cost = witness.rounding_cost();
-        entry.power = Some(PowerCertificate { power, entropy_per_round, failure, min_entropy, level, witness: digest, rounding_cost });
+        entry.power =
+            Some(PowerCertificate { power, entropy_per_round, failure, min_entropy, level, witness: digest, origin, rounding_cost });
         if let (Some(known), Some(found), Some(publication), Some(hashing)) =
             (entry.min_entropy, min_entropy, entry.publication_cost, entry.hashing_cost)
         {
@@ -334,6 +423,7 @@ impl Draft {
             entry.min_entropy = Some(better);
             entry.certified_bits = extractable(better, &[publication, hashing]);
         }
+        true
     }
 
     pub(crate) fn add_unverified(&mut self, request: &Request, target: Setting) {
@@ -377,9 +467,9 @@ impl Draft {
         self.certificate.verdict = Verdict::Refused;
         self.certificate.reason = Some(Reason::OutsideModel);
         self.certificate.outside_model = Some(OutsideModel {
-            witness: self.keep(contradiction),
+            witness: self.keep(contradiction, None),
             smallest_uniform_leakage: least_leakage.map(|(least, _)| round_down(least)),
-            smallest_uniform_leakage_witness: least_leakage.map(|(_, witness)| self.keep(witness)),
+            smallest_uniform_leakage_witness: least_leakage.map(|(_, witness)| self.keep(witness, None)),
         });
         Certification { certificate: self.certificate, witnesses: self.witnesses }
     }
@@ -400,6 +490,7 @@ impl TargetCertificate {
             certified_bits: 0,
             level: None,
             witness: None,
+            origin: None,
             rounding_cost: None,
             power: None,
             bracket: None,

@@ -65,6 +65,8 @@ pub mod entropy;
 pub mod exact;
 pub mod fault;
 #[cfg(feature = "service")]
+pub mod freshness;
+#[cfg(feature = "service")]
 pub mod http;
 pub mod leakage;
 #[cfg(feature = "service")]

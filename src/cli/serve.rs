@@ -78,7 +78,9 @@ impl Serve {
         let key = ledger.seal.verifier().to_string();
         let solvers = Solvers::start(self.solvers.into(), self.queue.into(), Arc::new(certify)).context("no threads to solve on")?;
         let service = Service::new(ledger, solvers, Arc::new(SystemClock));
+        let recalled = service.recall_witnesses().await?;
         eprintln!("listening on http://{}", listener.local_addr()?);
+        tracing::info!(recalled, "kept witnesses were checked, and are in use");
         tracing::info!(%key, "checkpoints of the ledger are signed with this key");
         tracing::warn!("the service has no tokens: whoever can reach the loopback address can use it");
         server::run(listener, service, stop_signal()).await?;

@@ -12,7 +12,7 @@ mod negotiation;
 pub mod openapi;
 pub mod problem;
 mod rigs;
-mod router;
+pub mod router;
 pub mod server;
 mod wire;
 mod yields;

@@ -40,12 +40,18 @@ pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
 }
 
 /// The whole interface, with an answer for whatever is not part of it.
-pub(super) fn router(service: Arc<Service>) -> Router {
+pub fn router(service: Arc<Service>) -> Router {
+    router_beside(service, Router::new())
+}
+
+/// The same with further routes beside it, in the same layers: the bench compares with those.
+pub fn router_beside(service: Arc<Service>, beside: Router) -> Router {
     let (router, _) = routes().split_for_parts();
     router
         .fallback(async |uri: Uri| Problem::not_found(format!("There is nothing at {}.", uri.path())))
         .method_not_allowed_fallback(async || Problem::new(StatusCode::METHOD_NOT_ALLOWED, "`Allow` lists the methods there are here."))
         .with_state(service)
+        .merge(beside)
         .layer(middleware::from_fn(intake::take_in))
         .layer(CatchPanicLayer::custom(panicked))
         .layer(TraceLayer::new_for_http().make_span_with(span).on_failure(()))

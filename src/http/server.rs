@@ -29,7 +29,14 @@ const ACCEPT_PAUSE: Duration = Duration::from_millis(100);
 /// # Errors
 /// None at present: connections that fail are their clients' loss.
 pub async fn run(listener: TcpListener, service: Arc<Service>, shutdown: impl Future<Output = ()>) -> io::Result<()> {
-    let app = router(Arc::clone(&service));
+    serve(listener, router(Arc::clone(&service)), service, shutdown).await
+}
+
+/// As [`run`], with a router that was made already.
+///
+/// # Errors
+/// As [`run`].
+pub async fn serve(listener: TcpListener, app: Router, service: Arc<Service>, shutdown: impl Future<Output = ()>) -> io::Result<()> {
     let places = Arc::new(Semaphore::new(MAX_CONNECTIONS));
     let stop = watch::Sender::new(false);
     tokio::select! {
@@ -49,7 +56,7 @@ async fn accept(listener: &TcpListener, app: &Router, places: &Arc<Semaphore>, s
     while let Ok(place) = Arc::clone(places).acquire_owned().await {
         match listener.accept().await {
             Ok((stream, _)) => {
-                let connection = serve(stream, app.clone(), stop.subscribe());
+                let connection = converse(stream, app.clone(), stop.subscribe());
                 tokio::spawn(async move {
                     connection.await;
                     drop(place);
@@ -63,7 +70,7 @@ async fn accept(listener: &TcpListener, app: &Router, places: &Arc<Semaphore>, s
     }
 }
 
-async fn serve(stream: TcpStream, app: Router, mut stop: watch::Receiver<bool>) {
+async fn converse(stream: TcpStream, app: Router, mut stop: watch::Receiver<bool>) {
     // Answers are written whole: waiting to fill a packet would only delay them.
     let _ = stream.set_nodelay(true);
     let mut builder = http1::Builder::new();

@@ -10,6 +10,7 @@ mod connections;
 mod documents;
 mod examples;
 mod health;
+mod kept;
 mod leakage;
 mod ledger;
 mod openapi;
