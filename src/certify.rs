@@ -116,6 +116,7 @@ pub(crate) fn certify_counted(
 }
 
 /// What is known of the behaviour.
+#[derive(Debug, Clone, PartialEq)]
 pub(crate) enum Evidence {
     Point(Table<f64>),
     Region(Table<[f64; 2]>),
@@ -143,7 +144,7 @@ pub(crate) fn evidence(request: &Request) -> Evidence {
 }
 
 /// The power of a target's power entropy and its share of the estimation failure; `None` if none is asked for.
-fn power_terms(request: &Request, target: Setting) -> Option<(u32, f64)> {
+pub(crate) fn power_terms(request: &Request, target: Setting) -> Option<(u32, f64)> {
     let rounds =
         request.rounds_at(target).filter(|_| request.rounds == RoundModel::Independent && request.entropy == EntropyChoice::Power)?;
     let failure = (request.failure.estimation * 0.5 / request.scenario().targets().len() as f64).next_down();

@@ -1,6 +1,7 @@
 //! The service: takes batches in, has them solved, keeps what came out. Knows no HTTP.
 
 mod commitments;
+mod forecasts;
 mod quality;
 mod solvers;
 mod turns;
@@ -16,6 +17,7 @@ use uuid::{NoContext, Uuid};
 use self::turns::Turns;
 pub use self::{
     commitments::{Listed, OrderError},
+    forecasts::ForecastError,
     solvers::{Certifier, SolveError, Solvers},
 };
 use crate::{

@@ -3,6 +3,7 @@
 mod certify;
 mod demo;
 mod document;
+mod forecast;
 mod leakage;
 mod openapi;
 mod serve;
@@ -28,6 +29,7 @@ enum Command {
     Certify(certify::Certify),
     Verify(verify::Verify),
     Leakage(leakage::Leakage),
+    Forecast(forecast::Forecast),
     Demo(demo::Demo),
     Openapi(openapi::Openapi),
 }
@@ -39,6 +41,7 @@ pub fn run() -> ExitCode {
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
         Command::Leakage(command) => command.run(),
+        Command::Forecast(command) => command.run(),
         Command::Demo(command) => command.run(),
         Command::Openapi(command) => command.run(),
     };

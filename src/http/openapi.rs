@@ -26,6 +26,7 @@ use crate::scenario::LeakageDocument;
         (name = "batches", description = "What rigs post."),
         (name = "certifications", description = "What was certified, and what was refused."),
         (name = "leakage", description = "What leaves the carrier, from what was measured."),
+        (name = "forecasts", description = "What would be certified."),
         (name = "health", description = "For whoever watches over the process."),
     ),
 )]

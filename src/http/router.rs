@@ -13,7 +13,7 @@ use tower_http::{catch_panic::CatchPanicLayer, trace::TraceLayer};
 use utoipa::OpenApi;
 use utoipa_axum::{router::OpenApiRouter, routes};
 
-use super::{batches, certifications, commitments, health, intake, leakage, openapi, problem::Problem, rigs, yields};
+use super::{batches, certifications, commitments, forecasts, health, intake, leakage, openapi, problem::Problem, rigs, yields};
 use crate::service::Service;
 
 pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
@@ -28,6 +28,7 @@ pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
         .routes(routes!(certifications::get))
         .routes(routes!(certifications::witness))
         .routes(routes!(leakage::post))
+        .routes(routes!(forecasts::post))
         .routes(routes!(openapi::get))
         .routes(routes!(health::live))
         .routes(routes!(health::ready))

@@ -9,6 +9,7 @@ mod commitments;
 mod connections;
 mod documents;
 mod examples;
+mod forecasts;
 mod health;
 mod leakage;
 mod ledger;

@@ -2,6 +2,7 @@
 
 mod accounts;
 mod coverage;
+mod forecasts;
 mod models;
 mod monotone;
 mod relabelling;
