@@ -18,7 +18,10 @@ use crate::{
     },
     request::{Data, EntropyChoice, Request, RoundModel},
     scenario::{LeakageDocument, Scenario, Setting},
-    witness::check::{CheckedBound, CheckedWitness},
+    witness::{
+        check::{CheckedBound, CheckedWitness},
+        witness::Witness,
+    },
 };
 
 /// The power at which an entropy is as good as its limit of many rounds, the Shannon entropy: `β = 2^-16`, which gives away some 10⁻⁵ bit.
@@ -132,7 +135,7 @@ impl<'a> Forecaster<'a> {
 
     /// What would be certified under each of the setups.
     pub fn points(&mut self, kind: Kind, setups: &[Setup], effort: Effort, told: &mut dyn FnMut(Progress)) -> Vec<Point> {
-        let mut points: Vec<Point> = setups.iter().map(Point::nothing).collect();
+        let mut points: Vec<Point> = setups.iter().map(|setup| Point::nothing(kind, setup)).collect();
         let cases: Vec<(usize, Case)> =
             setups.iter().enumerate().filter_map(|(i, setup)| Some((i, Case::new(self.request, kind, setup)?))).collect();
         let spots: Vec<Vec<Spot>> = self.spots(cases.iter().map(|(_, case)| case), |_, _| 0);
@@ -226,7 +229,7 @@ impl<'a> Forecaster<'a> {
         }
         let certification = draft.conclude();
         let certificate = certification.certificate;
-        point.witnesses.extend(certification.witnesses.iter().map(crate::witness::witness::Witness::digest));
+        point.witnesses.extend(certification.witnesses.iter().map(Witness::digest));
         (point.verdict, point.reason) = (certificate.verdict, certificate.reason);
         let targets = self.request.scenario.targets().iter();
         match case.request.rounds {
@@ -317,7 +320,7 @@ fn per(bits: u64, rounds: u64) -> f64 {
 
 impl Point {
     /// No bits, as where there are too few rounds for every setting to be used.
-    fn nothing(setup: &Setup) -> Self {
+    fn nothing(kind: Kind, setup: &Setup) -> Self {
         let uniform = setup.leakage.iter().all(|value| Some(value) == setup.leakage.first());
         let leakage = match setup.leakage.first() {
             Some(value) if uniform => LeakageDocument::Uniform(*value),
@@ -326,7 +329,7 @@ impl Point {
         Self {
             leakage,
             visibility: setup.visibility,
-            total_rounds: setup.rounds,
+            total_rounds: setup.rounds.filter(|_| kind.rounds != RoundModel::PlugIn),
             verdict: Verdict::Refused,
             reason: Some(Reason::ZeroBound),
             bits_per_target_round: 0.0,

@@ -37,8 +37,8 @@ pub use self::{
 };
 use crate::{
     relaxation::level::Level,
-    request::Failure,
-    scenario::{Scenario, ScenarioDocument},
+    request::{Failure, RoundModel},
+    scenario::Scenario,
 };
 
 /// What a forecast says of itself.
@@ -85,7 +85,7 @@ pub struct Sharing {
 #[serde(deny_unknown_fields)]
 pub struct Forecast {
     pub note: String,
-    #[cfg_attr(feature = "service", schema(value_type = ScenarioDocument))]
+    #[cfg_attr(feature = "service", schema(value_type = crate::scenario::ScenarioDocument))]
     pub scenario: Scenario,
     pub setting_distribution: Vec<Vec<f64>>,
     pub failure: Failure,
@@ -116,7 +116,7 @@ pub fn forecast(request: &ForecastRequest, mut told: impl FnMut(Progress)) -> Fo
                 thresholds.push(forecaster.threshold(request, *kind, quantity, tolerance, &mut told));
             }
         }
-        if let Some(wanted) = request.wanted_bits.filter(|_| kind.rounds != crate::request::RoundModel::PlugIn) {
+        if let Some(wanted) = request.wanted_bits.filter(|_| kind.rounds != RoundModel::PlugIn) {
             rounds_needed.push(forecaster.rounds_needed(request, *kind, wanted, &mut told));
         }
     }

@@ -17,8 +17,9 @@ use super::{
 };
 use crate::{
     certificate::{Reason, Verdict},
+    relaxation::level::Level,
     request::{EntropyChoice, RoundModel},
-    scenario::LeakageReading,
+    scenario::{LeakageDocument, LeakageReading},
 };
 
 /// Why there is no picture.
@@ -243,7 +244,6 @@ fn draw_legend(forecast: &Forecast, area: &Canvas) -> Drawn {
 }
 
 fn level_name(forecast: &Forecast) -> &'static str {
-    use crate::relaxation::level::Level;
     match forecast.level {
         Level::Lean => "lean",
         Level::Standard => "standard",
@@ -291,7 +291,6 @@ impl Kind {
 impl Point {
     /// The value of a quantity here; `None` for a leakage that differs from preparation to preparation, and for no number of rounds.
     pub fn value(&self, quantity: Swept) -> Option<f64> {
-        use crate::scenario::LeakageDocument;
         match (quantity, &self.leakage) {
             (Swept::Leakage, LeakageDocument::Uniform(value)) => Some(*value),
             (Swept::Leakage, LeakageDocument::PerPreparation(_)) => None,

@@ -32,7 +32,10 @@ use crate::{
     request::EntropyChoice,
     scenario::{LeakageDocument, LeakageReading, Scenario, Setting},
     solver::Limits,
-    witness::check::{CheckedBound, CheckedWitness, proves_contradiction},
+    witness::{
+        check::{CheckedBound, CheckedWitness, proves_contradiction},
+        witness::Claim,
+    },
 };
 
 /// Ends of intervals and leakages that differ by less are the same; they went through floating-point arithmetic.
@@ -188,8 +191,8 @@ impl Shared {
         for (number, found) in self.witnesses.iter().enumerate().skip(seen.witnesses) {
             // One that was made for a larger power holds for a smaller one, the power entropy falling with the power.
             let power = match &found.witness.witness().claim {
-                crate::witness::witness::Claim::Power { power, .. } => *power,
-                _ => u32::MAX,
+                Claim::Power { power, .. } => *power,
+                Claim::Guess { .. } | Claim::Score { .. } | Claim::Contradiction => u32::MAX,
             };
             if power < spot.power {
                 continue;

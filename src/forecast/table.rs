@@ -77,7 +77,8 @@ pub fn table(forecast: &Forecast) -> String {
         lines.push(String::new());
     }
     for threshold in &forecast.thresholds {
-        let kind = words(forecast, threshold.kind, forecast.curves.first().and_then(|curve| curve.points.first()));
+        let curve = forecast.curves.iter().find(|curve| curve.kind == threshold.kind);
+        let kind = words(forecast, threshold.kind, curve.and_then(|curve| curve.points.first()));
         let certifies =
             threshold.certifies_at.map_or_else(|| "certifies nowhere".to_owned(), |value| format!("certifies at {}", plain(value)));
         let not =

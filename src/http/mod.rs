@@ -8,6 +8,7 @@ mod forecasts;
 mod health;
 mod intake;
 mod leakage;
+mod ledger;
 mod negotiation;
 pub mod openapi;
 pub mod problem;
