@@ -200,6 +200,7 @@ pub(crate) fn certify_counted(
 }
 
 /// What is known of the behaviour.
+#[derive(Debug, Clone, PartialEq)]
 pub(crate) enum Evidence {
     Point(Table<f64>),
     Region(Table<[f64; 2]>),
@@ -248,14 +249,14 @@ pub(crate) fn evidence(request: &Request) -> Evidence {
 const SMALL_POWER: u32 = 1 << 10;
 
 /// Which power entropy is asked for.
-struct PowerTerms {
+pub(crate) struct PowerTerms {
     /// `β` in units of `2^-30`.
-    power: u32,
+    pub(crate) power: u32,
     /// The target's share of the estimation failure; `None` if no bits are to come from it.
-    failure: Option<f64>,
+    pub(crate) failure: Option<f64>,
 }
 
-fn power_terms(request: &Request, target: Setting) -> PowerTerms {
+pub(crate) fn power_terms(request: &Request, target: Setting) -> PowerTerms {
     let share = |failure: f64| (failure / request.scenario.targets().len() as f64).next_down();
     match (request.rounds, request.entropy, request.rounds_at(target)) {
         (RoundModel::Independent, EntropyChoice::Auto | EntropyChoice::Power, Some(rounds)) => {

@@ -24,6 +24,7 @@
 //! - [`attack`] looks for explicit models from below: what is between an attack and a bound is what the bound may give away.
 //! - [`entropy`] turns a bound into whole bits, [`certify`] draws up the [`certificate`], and [`verify`] confirms one without a
 //!   solver; a [`bundle`] is what is needed for that.
+//! - [`forecast`] draws up the same accounts for behaviours that are expected, over leakage, visibility or rounds.
 //! - With the feature `service`, on by default: profiles of rigs, an append-only ledger in SQLite, and HTTP.
 //!
 //! From counts to bits, and the same figures confirmed without a solver:
@@ -64,6 +65,7 @@ pub mod counts;
 pub mod entropy;
 pub mod exact;
 pub mod fault;
+pub mod forecast;
 #[cfg(feature = "service")]
 pub mod freshness;
 #[cfg(feature = "service")]

@@ -1,6 +1,7 @@
 //! The service: takes batches in, has them solved, keeps what came out. Knows no HTTP.
 
 mod commitments;
+mod forecasts;
 mod kept;
 mod newest;
 mod quality;
@@ -18,6 +19,7 @@ use uuid::{NoContext, Uuid};
 
 pub use self::{
     commitments::{Listed, OrderError},
+    forecasts::ForecastError,
     solvers::{Certifier, SolveError, Solvers},
     tree::Exported,
 };

@@ -6,6 +6,7 @@ mod certify;
 mod demo;
 mod document;
 mod export;
+mod forecast;
 mod leakage;
 mod openapi;
 mod serve;
@@ -32,6 +33,7 @@ enum Command {
     Verify(verify::Verify),
     Attack(attack::Attack),
     Leakage(leakage::Leakage),
+    Forecast(forecast::Forecast),
     Export(export::Export),
     Backup(backup::Backup),
     Demo(demo::Demo),
@@ -46,6 +48,7 @@ pub fn run() -> ExitCode {
         Command::Verify(command) => command.run(),
         Command::Attack(command) => command.run(),
         Command::Leakage(command) => command.run(),
+        Command::Forecast(command) => command.run(),
         Command::Export(command) => command.run(),
         Command::Backup(command) => command.run(),
         Command::Demo(command) => command.run(),

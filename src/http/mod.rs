@@ -4,6 +4,7 @@ mod batches;
 mod certifications;
 mod commitments;
 mod condition;
+mod forecasts;
 mod health;
 mod intake;
 mod leakage;

@@ -13,7 +13,7 @@ use tower_http::{catch_panic::CatchPanicLayer, trace::TraceLayer};
 use utoipa::OpenApi;
 use utoipa_axum::{router::OpenApiRouter, routes};
 
-use super::{batches, certifications, commitments, health, intake, leakage, ledger, openapi, problem::Problem, rigs, yields};
+use super::{batches, certifications, commitments, forecasts, health, intake, leakage, ledger, openapi, problem::Problem, rigs, yields};
 use crate::service::Service;
 
 pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
@@ -34,6 +34,7 @@ pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
         .routes(routes!(ledger::inclusion))
         .routes(routes!(ledger::consistency))
         .routes(routes!(leakage::post))
+        .routes(routes!(forecasts::post))
         .routes(routes!(openapi::get))
         .routes(routes!(health::live))
         .routes(routes!(health::ready))

@@ -9,6 +9,7 @@ mod commitments;
 mod connections;
 mod documents;
 mod examples;
+mod forecasts;
 mod health;
 mod kept;
 mod leakage;

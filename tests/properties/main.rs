@@ -2,6 +2,7 @@
 
 mod accounts;
 mod coverage;
+mod forecasts;
 mod kept;
 mod models;
 mod monotone;
