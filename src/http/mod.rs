@@ -1,5 +1,6 @@
 //! The service over HTTP: extract, one call to the service, respond. Knows no SQL.
 
+pub mod access;
 mod batches;
 mod certifications;
 mod commitments;
@@ -7,6 +8,8 @@ mod condition;
 mod health;
 mod intake;
 mod leakage;
+pub mod limits;
+mod measurements;
 mod negotiation;
 pub mod openapi;
 pub mod problem;

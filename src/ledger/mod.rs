@@ -5,6 +5,7 @@
 
 pub mod history;
 pub mod rows;
+mod tokens;
 pub mod writer;
 
 use std::{
@@ -65,6 +66,7 @@ impl From<sqlx::Error> for LedgerError {
 pub struct Ledger {
     pub history: History,
     pub writer: Writer,
+    path: PathBuf,
 }
 
 impl Ledger {
@@ -86,7 +88,15 @@ impl Ledger {
         check_settings(&mut connection).await?;
         // The writer's connection exists first: a reader cannot create the files that WAL mode needs.
         let pool = SqlitePoolOptions::new().max_connections(READERS).connect_with(options.read_only(true)).await.map_err(cannot_open)?;
-        Ok(Self { history: History::new(pool), writer: Writer::start(connection) })
+        Ok(Self { history: History::new(pool), writer: Writer::start(connection), path: path.to_owned() })
+    }
+
+    /// Bytes of the database file and of its write-ahead log; a file that cannot be looked at counts zero.
+    pub fn sizes(&self) -> (u64, u64) {
+        let size = |path: &Path| std::fs::metadata(path).map_or(0, |data| data.len());
+        let mut log = self.path.clone().into_os_string();
+        log.push("-wal");
+        (size(&self.path), size(Path::new(&log)))
     }
 
     /// Writes what was handed in, then closes all connections.

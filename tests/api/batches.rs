@@ -165,7 +165,7 @@ fn two_servers_on_one_file_certify_the_same_batch_once() {
         stand_in(request)
     });
     // Neither server knows of what the other is working on: only the ledger can tell.
-    let other = Running::on(&running.database, Solving { certifier, threads: 1, queue: 1 });
+    let other = Running::on(&running.database, Solving { certifier, threads: 1, queue: 1, ..Solving::default() });
     let threads: Vec<_> = [running.client(), other.client()]
         .map(|client| std::thread::spawn(move || client.post_batch("bench", "k", &batch(1000)).expect(201)))
         .into_iter()
@@ -224,7 +224,7 @@ fn gated(threads: usize, queue: usize) -> (Running, Arc<Gate>) {
         at_gate.pass();
         stand_in(request)
     });
-    let running = Running::solving(Solving { certifier, threads, queue });
+    let running = Running::solving(Solving { certifier, threads, queue, ..Solving::default() });
     running.client().put_rig("bench", &profile(), &[]).expect(201);
     (running, gate)
 }
