@@ -4,7 +4,7 @@ use std::sync::Arc;
 
 use sqlx::SqliteConnection;
 
-use super::{LedgerError, history::History};
+use super::{LedgerError, history::History, source::TOKEN, tree};
 use crate::token::{Change, Keyring};
 
 impl History {
@@ -39,8 +39,9 @@ pub(super) async fn write_token_change(connection: &mut SqliteConnection, change
         .bind(change.kind())
         .bind(change.recorded_at().microseconds())
         .bind(document)
-        .execute(connection)
+        .execute(&mut *connection)
         .await?;
+    tree::log(connection, &TOKEN, &format!("{}/{}", change.token(), change.kind())).await?;
     Ok(())
 }
 

@@ -129,6 +129,27 @@ fn changes_of_tokens_are_written_once() {
     }
 }
 
+/// Each change is a leaf of the ledger's tree, with the digest of what the table has.
+#[test]
+fn changes_of_tokens_are_in_the_tree() {
+    let running = Running::new();
+    let (token, _) = create(&running, Role::Operator, &[], None);
+    revoke(&running, token);
+    let (leaves, documents): (Vec<(String, String)>, Vec<String>) = query(&running.database, async |mut connection| {
+        let sql = "SELECT subject, entry FROM tree_leaves WHERE kind = 'token' ORDER BY leaf";
+        let leaves = sqlx::query_as(sql).fetch_all(&mut connection).await.unwrap();
+        let sql = "SELECT document FROM token_changes ORDER BY change";
+        (leaves, sqlx::query_scalar(sql).fetch_all(&mut connection).await.unwrap())
+    });
+    let subjects: Vec<&str> = leaves.iter().map(|(subject, _)| subject.as_str()).collect();
+    assert_eq!(subjects, [format!("{token}/created"), format!("{token}/revoked")]);
+    for ((_, entry), document) in leaves.iter().zip(documents) {
+        let leaf: Value = serde_json::from_str(entry).unwrap();
+        let digest = hex::encode(<sha2::Sha256 as sha2::Digest>::digest(&document));
+        assert_eq!((&leaf["body"]["document_sha256"], &leaf["body"]["token"]), (&digest.into(), &token.to_string().into()), "{entry}");
+    }
+}
+
 /// Neither the log at its most talkative nor the database has a token.
 #[test]
 fn no_token_is_in_the_log_or_in_the_database() {

@@ -3,8 +3,8 @@
 use std::{
     collections::BTreeMap,
     sync::{
-        Mutex,
-        atomic::{AtomicBool, AtomicU64, Ordering},
+        Arc, Mutex,
+        atomic::{AtomicU64, Ordering},
     },
     time::{Duration, Instant},
 };
@@ -41,34 +41,29 @@ impl Flood {
         for i in 0..RECORDS {
             assert_eq!(client.post("small", &i.to_string(), &small_batch(i)), 201);
         }
-        let quiet = times(&process, Duration::from_secs(3), &AtomicBool::new(false));
-        let (over, sent) = (AtomicBool::new(false), AtomicU64::new(0));
-        let statuses = Mutex::new(BTreeMap::<u16, u64>::new());
-        let busy = std::thread::scope(|scope| {
-            for _ in 0..self.posters {
-                scope.spawn(|| {
-                    let client = process.client();
-                    while !over.load(Ordering::Relaxed) {
-                        let i = sent.fetch_add(1, Ordering::Relaxed);
-                        let status = client.post("large", &i.to_string(), &large_batch(i % 3000));
-                        *statuses.lock().unwrap().entry(status).or_default() += 1;
-                        if status == 503 {
-                            std::thread::sleep(Duration::from_millis(100));
-                        }
+        let quiet = times(&process, Duration::from_secs(3));
+        let statuses = Arc::new(Mutex::new(BTreeMap::<u16, u64>::new()));
+        let sent = Arc::new(AtomicU64::new(0));
+        for _ in 0..self.posters {
+            let (client, statuses, sent) = (process.client(), Arc::clone(&statuses), Arc::clone(&sent));
+            // Ends with the server: what still waits then is not waited for.
+            std::thread::spawn(move || {
+                loop {
+                    let i = sent.fetch_add(1, Ordering::Relaxed);
+                    let Some(status) = client.try_post("large", &i.to_string(), &large_batch(i % 3000)) else { return };
+                    *statuses.lock().unwrap().entry(status).or_default() += 1;
+                    if status == 503 {
+                        std::thread::sleep(Duration::from_millis(100));
                     }
-                });
-            }
-            // The flood has to be there before it is measured against.
-            std::thread::sleep(Duration::from_secs(2));
-            let busy = times(&process, Duration::from_secs(self.seconds), &over);
-            over.store(true, Ordering::Relaxed);
-            let counted = statuses.lock().unwrap().clone();
-            println!("answers to posts during {} s, by status: {counted:?}", self.seconds);
-            assert!(counted.get(&503).is_some_and(|number| *number > 0), "no flood: the queue was never full");
-            // What still waits is not waited for.
-            drop(process);
-            busy
-        });
+                }
+            });
+        }
+        // The flood has to be there before it is measured against.
+        std::thread::sleep(Duration::from_secs(2));
+        let busy = times(&process, Duration::from_secs(self.seconds));
+        let counted = statuses.lock().unwrap().clone();
+        println!("answers to posts in {} s, by status: {counted:?}", self.seconds + 2);
+        assert!(counted.get(&503).is_some_and(|number| *number > 0), "no flood: the queue was never full");
         println!("{:<32} {:>8} {:>9} {:>9} {:>9}   {:>9}", "milliseconds", "requests", "median", "p99", "most", "p99 quiet");
         let mut well = true;
         for (path, found) in &busy {
@@ -83,11 +78,11 @@ impl Flood {
 }
 
 /// How long each watched path takes to answer, in milliseconds.
-fn times(process: &Process, duration: Duration, over: &AtomicBool) -> BTreeMap<&'static str, Vec<f64>> {
+fn times(process: &Process, duration: Duration) -> BTreeMap<&'static str, Vec<f64>> {
     let client = process.client();
     let begun = Instant::now();
     let mut found = BTreeMap::<&str, Vec<f64>>::new();
-    while begun.elapsed() < duration && !over.load(Ordering::Relaxed) {
+    while begun.elapsed() < duration {
         for path in WATCHED {
             let (status, _, took) = client.get(path);
             assert_eq!(status, 200, "{path}");

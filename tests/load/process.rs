@@ -62,6 +62,11 @@ pub struct Client {
 impl Client {
     /// Status, body and how long it took.
     pub fn call(&self, method: &str, path: &str, key: &str, body: &[u8]) -> (u16, Vec<u8>, Duration) {
+        self.try_call(method, path, key, body).expect("an answer")
+    }
+
+    /// As [`Self::call`]; `None` if the server has gone.
+    fn try_call(&self, method: &str, path: &str, key: &str, body: &[u8]) -> Option<(u16, Vec<u8>, Duration)> {
         let begun = Instant::now();
         let mut request = Request::builder().method(method).uri(format!("{}{path}", self.base));
         if !body.is_empty() {
@@ -71,9 +76,9 @@ impl Client {
             [] => self.agent.run(request.body(()).unwrap()),
             body => self.agent.run(request.body(body.to_vec()).unwrap()),
         };
-        let mut answer = answer.unwrap();
-        let body = answer.body_mut().read_to_vec().unwrap();
-        (answer.status().as_u16(), body, begun.elapsed())
+        let mut answer = answer.ok()?;
+        let body = answer.body_mut().read_to_vec().ok()?;
+        Some((answer.status().as_u16(), body, begun.elapsed()))
     }
 
     pub fn get(&self, path: &str) -> (u16, Vec<u8>, Duration) {
@@ -82,6 +87,11 @@ impl Client {
 
     pub fn post(&self, rig: &str, key: &str, batch: &Value) -> u16 {
         self.call("POST", &format!("/v1/rigs/{rig}/batches"), key, batch.to_string().as_bytes()).0
+    }
+
+    /// As [`Self::post`]; `None` if the server has gone.
+    pub fn try_post(&self, rig: &str, key: &str, batch: &Value) -> Option<u16> {
+        self.try_call("POST", &format!("/v1/rigs/{rig}/batches"), key, batch.to_string().as_bytes()).map(|(status, ..)| status)
     }
 
     pub fn put(&self, rig: &str, profile: &Value) {

@@ -39,9 +39,9 @@ impl Soak {
         process.client().put("bench", &small_profile());
         let (over, requests) = (AtomicBool::new(false), AtomicU64::new(0));
         let samples = std::thread::scope(|scope| {
-            for user in [post, read, err] {
-                scope.spawn(|| user(&process, &over, &requests));
-            }
+            scope.spawn(|| post(&process, &over, &requests));
+            scope.spawn(|| read(&process, &over, &requests));
+            scope.spawn(|| err(&process, &over, &requests));
             let begun = Instant::now();
             let mut samples = vec![];
             while begun.elapsed() < Duration::from_secs(self.seconds) {
