@@ -1,8 +1,10 @@
 //! The command line: one file a command.
 
+mod backup;
 mod certify;
 mod demo;
 mod document;
+mod export;
 mod health;
 mod leakage;
 mod openapi;
@@ -34,6 +36,8 @@ enum Command {
     Certify(certify::Certify),
     Verify(verify::Verify),
     Leakage(leakage::Leakage),
+    Export(export::Export),
+    Backup(backup::Backup),
     Demo(demo::Demo),
     Openapi(openapi::Openapi),
 }
@@ -47,6 +51,8 @@ pub fn run() -> ExitCode {
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
         Command::Leakage(command) => command.run(),
+        Command::Export(command) => command.run(),
+        Command::Backup(command) => command.run(),
         Command::Demo(command) => command.run(),
         Command::Openapi(command) => command.run(),
     };

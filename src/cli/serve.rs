@@ -82,16 +82,18 @@ async fn serve(settings: &Settings) -> anyhow::Result<()> {
     if !loopback && !settings.database.exists() {
         bail!(open_to_the_world(settings));
     }
-    let ledger = Ledger::open(&settings.database).await?;
+    let ledger = Ledger::open_at(&settings.place()).await?;
     let open = ledger.history.keyring().await?.is_empty();
     if open && !loopback {
         ledger.close().await;
         bail!(open_to_the_world(settings));
     }
     let listener = TcpListener::bind(settings.listen).await.with_context(|| format!("cannot listen on {}", settings.listen))?;
+    let key = ledger.seal.verifier().to_string();
     let solvers = Solvers::start(settings.solvers.into(), settings.queue.into(), Arc::new(certify)).context("no threads to solve on")?;
     let service = Service::new(ledger, solvers, Arc::new(SystemClock));
     eprintln!("listening on http://{}", listener.local_addr()?);
+    tracing::info!(%key, "checkpoints of the ledger are signed with this key");
     if open {
         tracing::warn!(
             "no token was ever created: whoever can reach the loopback address can use the service; `bitassay token create` closes it"

@@ -8,7 +8,7 @@ use std::{
 };
 
 use anyhow::{Context, ensure};
-use bitassay::http::limits::Limits;
+use bitassay::{http::limits::Limits, ledger::Place};
 use clap::{Args, ValueEnum};
 use serde::{Deserialize, Serialize};
 
@@ -35,6 +35,19 @@ pub struct Given {
     /// The database; created if it does not exist [default: bitassay.sqlite]
     #[arg(long, value_name = "FILE", env = "BITASSAY_DATABASE")]
     database: Option<PathBuf>,
+
+    /// The key that checkpoints of the ledger are signed with; made if it does not exist. Without it, the database's name and `.key`
+    ///
+    /// The last checkpoint that was signed stands in a second file beside it, with `.checkpoint` added to the name. Keep both out of what a restore of the
+    /// database brings back: they are how the service knows that it was taken back in time.
+    #[arg(long, value_name = "FILE", env = "BITASSAY_LEDGER_KEY")]
+    ledger_key: Option<PathBuf>,
+
+    /// Seconds between two audits of the whole ledger [default: 3600]
+    ///
+    /// New entries are gone through within seconds, and all of them at the start.
+    #[arg(long, value_name = "SECONDS", env = "BITASSAY_AUDIT_INTERVAL")]
+    audit_interval: Option<u32>,
 
     /// Batches that are solved at the same time, 1 to 256 [default: 2]
     #[arg(long, value_name = "N", env = "BITASSAY_SOLVERS")]
@@ -83,6 +96,8 @@ pub struct Given {
 pub struct Settings {
     pub listen: SocketAddr,
     pub database: PathBuf,
+    ledger_key: Option<PathBuf>,
+    audit_interval: u32,
     pub solvers: u16,
     pub queue: u16,
     connections: u32,
@@ -102,6 +117,8 @@ impl Default for Settings {
         Self {
             listen: SocketAddr::from(([127, 0, 0, 1], 8080)),
             database: "bitassay.sqlite".into(),
+            ledger_key: None,
+            audit_interval: 3600,
             solvers: 2,
             queue: 64,
             connections: u32::try_from(connections).unwrap_or(u32::MAX),
@@ -131,7 +148,8 @@ impl Settings {
     }
 
     fn check(&self) -> anyhow::Result<()> {
-        let numbers: [(&str, u32, std::ops::RangeInclusive<u32>); 6] = [
+        let numbers: [(&str, u32, std::ops::RangeInclusive<u32>); 7] = [
+            ("audit-interval", self.audit_interval, 1..=u32::MAX),
             ("solvers", self.solvers.into(), 1..=256),
             ("queue", self.queue.into(), 1..=10_000),
             ("connections", self.connections, 1..=100_000),
@@ -143,6 +161,13 @@ impl Settings {
             ensure!(range.contains(&number), "{name} is from {} to {}, is {number}", range.start(), range.end());
         }
         Ok(())
+    }
+
+    /// Where the ledger is kept.
+    pub fn place(&self) -> Place {
+        let place = Place::of(&self.database);
+        let key = self.ledger_key.clone().unwrap_or_else(|| place.key.clone());
+        Place { key, audit_interval: Duration::from_secs(self.audit_interval.into()), ..place }
     }
 
     pub fn limits(&self) -> Limits {

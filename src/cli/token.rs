@@ -5,7 +5,7 @@ use std::{io::Write, path::PathBuf, process::ExitCode};
 use anyhow::{Context, bail, ensure};
 use bitassay::{
     clock::{Clock, Stamp, SystemClock},
-    ledger::Ledger,
+    ledger::tokens::Tokens,
     profile::RigName,
     token::{self, Change, Key, Keyring, Role, Secret},
 };
@@ -135,27 +135,27 @@ impl Token {
             };
             let creates = matches!(self, Self::Create(_));
             ensure!(creates || path.exists(), "there is no database {}", path.display());
-            let ledger = Ledger::open(path).await?;
-            let done = match &self {
-                Self::Create(create) => create.run(&ledger).await,
-                Self::List(_) => list(&ledger.history.keyring().await?),
-                Self::Revoke(Revoke { token, .. }) => revoke(&ledger, *token).await,
-            };
-            ledger.close().await;
-            done.map(|()| ExitCode::SUCCESS)
+            let mut tokens = Tokens::open(path).await?;
+            match &self {
+                Self::Create(create) => create.run(&mut tokens).await?,
+                Self::List(_) => list(&tokens.keyring().await?)?,
+                Self::Revoke(Revoke { token, .. }) => revoke(&mut tokens, *token).await?,
+            }
+            tokens.close().await?;
+            Ok(ExitCode::SUCCESS)
         })
     }
 }
 
 impl Create {
-    async fn run(&self, ledger: &Ledger) -> anyhow::Result<()> {
+    async fn run(&self, tokens: &mut Tokens) -> anyhow::Result<()> {
         let role = Role::from(self.role);
         ensure!((role == Role::Rig) != self.rigs.is_empty(), "a rig's token names its rigs with --rig, and no other token does");
         let mut rigs = self.rigs.iter().cloned().map(RigName::try_from).collect::<Result<Vec<_>, _>>()?;
         rigs.sort();
         rigs.dedup();
         for rig in &rigs {
-            if ledger.history.profile(rig, None).await?.is_none() {
+            if !tokens.knows(rig).await? {
                 eprintln!("there is no rig {rig} yet");
             }
         }
@@ -165,7 +165,7 @@ impl Create {
         let secret = Secret::generate().context("no random numbers")?;
         let (token, fingerprint, label) = (Uuid::now_v7(), secret.fingerprint(), self.label.clone());
         let created = token::Token { token, fingerprint, role, rigs, label, expires_at, recorded_at: now };
-        ledger.writer.keep_token_change(Change::Created(created)).await?;
+        tokens.keep(&Change::Created(created)).await?;
         // Only now, when it is kept: what is printed can be used.
         writeln!(std::io::stdout(), "{}", secret.reveal())?;
         eprintln!("created {token}; it is shown this once");
@@ -180,14 +180,14 @@ fn list(ring: &Keyring) -> anyhow::Result<()> {
     Ok(())
 }
 
-async fn revoke(ledger: &Ledger, token: Uuid) -> anyhow::Result<()> {
-    let ring = ledger.history.keyring().await?;
+async fn revoke(tokens: &mut Tokens, token: Uuid) -> anyhow::Result<()> {
+    let ring = tokens.keyring().await?;
     let Some(key) = ring.keys().iter().find(|key| key.token.token == token) else { bail!("there is no token {token}") };
     if let Some(time) = key.revoked_at {
         eprintln!("{token} was revoked already, at {time}");
         return Ok(());
     }
-    ledger.writer.keep_token_change(Change::Revoked { token, recorded_at: SystemClock.now() }).await?;
+    tokens.keep(&Change::Revoked { token, recorded_at: SystemClock.now() }).await?;
     eprintln!("revoked {token}");
     Ok(())
 }

@@ -8,6 +8,7 @@ mod condition;
 mod health;
 mod intake;
 mod leakage;
+mod ledger;
 pub mod limits;
 mod measurements;
 mod negotiation;

@@ -20,7 +20,7 @@ use utoipa_axum::{router::OpenApiRouter, routes};
 
 use super::{
     access::{self, Gate, Rules},
-    batches, certifications, commitments, health, intake, leakage,
+    batches, certifications, commitments, health, intake, leakage, ledger,
     limits::Limits,
     measurements, openapi,
     problem::Problem,
@@ -42,6 +42,12 @@ pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
         .routes(routes!(certifications::list))
         .routes(routes!(certifications::get))
         .routes(routes!(certifications::witness))
+        .routes(routes!(certifications::bundle))
+        .routes(routes!(ledger::checkpoint))
+        .routes(routes!(ledger::key))
+        .routes(routes!(ledger::entry))
+        .routes(routes!(ledger::inclusion))
+        .routes(routes!(ledger::consistency))
         .routes(routes!(leakage::post))
         .routes(routes!(openapi::get))
         .routes(routes!(health::live))

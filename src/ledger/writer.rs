@@ -13,8 +13,8 @@ use super::{
     LedgerError,
     history::answered_within,
     rows::{Answered, Entry, word},
+    seal::Fault,
     source::{CERTIFICATION, COMMITMENT, PROFILE},
-    tokens::write_token_change,
     tree,
 };
 use crate::{
@@ -22,7 +22,6 @@ use crate::{
     committed::Committed,
     metrics::group_sizes,
     profile::{Profile, RigName},
-    token::Change,
 };
 
 /// Most items in one transaction, and most that wait for the next.
@@ -80,13 +79,11 @@ pub struct Settled {
 type ProfileAnswer = Result<(Kept, u64), WriteError>;
 type EntryAnswer = Result<Settled, WriteError>;
 type CommitmentAnswer = Result<(), LedgerError>;
-type TokenAnswer = Result<(), LedgerError>;
 
 enum Item {
     Profile { rig: RigName, profile: Box<Profile>, expectation: Expectation, recorded_at: Stamp, answer: oneshot::Sender<ProfileAnswer> },
     Entry { entry: Box<Entry>, answer: oneshot::Sender<EntryAnswer> },
     Commitment { committed: Box<Committed>, witnesses: Vec<(String, String)>, answer: oneshot::Sender<CommitmentAnswer> },
-    Token { change: Box<Change>, answer: oneshot::Sender<TokenAnswer> },
 }
 
 /// An item's outcome, kept back until the transaction is committed.
@@ -94,7 +91,6 @@ enum Outcome {
     Profile(oneshot::Sender<ProfileAnswer>, ProfileAnswer),
     Entry(oneshot::Sender<EntryAnswer>, EntryAnswer),
     Commitment(oneshot::Sender<CommitmentAnswer>, CommitmentAnswer),
-    Token(oneshot::Sender<TokenAnswer>, TokenAnswer),
 }
 
 impl Outcome {
@@ -104,7 +100,6 @@ impl Outcome {
             Self::Profile(answer, outcome) => drop(answer.send(outcome)),
             Self::Entry(answer, outcome) => drop(answer.send(outcome)),
             Self::Commitment(answer, outcome) => drop(answer.send(outcome)),
-            Self::Token(answer, outcome) => drop(answer.send(outcome)),
         }
     }
 
@@ -113,8 +108,7 @@ impl Outcome {
         match self {
             Self::Profile(_, Err(WriteError::Ledger(error)))
             | Self::Entry(_, Err(WriteError::Ledger(error)))
-            | Self::Commitment(_, Err(error))
-            | Self::Token(_, Err(error)) => Some(error),
+            | Self::Commitment(_, Err(error)) => Some(error),
             _ => None,
         }
     }
@@ -124,7 +118,6 @@ impl Outcome {
             Self::Profile(answer, _) => Self::Profile(answer, Err(error.clone().into())),
             Self::Entry(answer, _) => Self::Entry(answer, Err(error.clone().into())),
             Self::Commitment(answer, _) => Self::Commitment(answer, Err(error.clone())),
-            Self::Token(answer, _) => Self::Token(answer, Err(error.clone())),
         }
     }
 }
@@ -135,7 +128,6 @@ impl Item {
             Self::Profile { answer, .. } => Outcome::Profile(answer, Err(error.clone().into())),
             Self::Entry { answer, .. } => Outcome::Entry(answer, Err(error.clone().into())),
             Self::Commitment { answer, .. } => Outcome::Commitment(answer, Err(error.clone())),
-            Self::Token { answer, .. } => Outcome::Token(answer, Err(error.clone())),
         }
     }
 
@@ -149,7 +141,6 @@ impl Item {
             Self::Commitment { committed, witnesses, answer } => {
                 Outcome::Commitment(answer, write_commitment(connection, &committed, &witnesses).await)
             }
-            Self::Token { change, answer } => Outcome::Token(answer, write_token_change(connection, &change).await),
         }
     }
 }
@@ -165,10 +156,10 @@ pub struct Writer {
 }
 
 impl Writer {
-    pub(super) fn start(connection: SqliteConnection) -> Self {
+    pub(super) fn start(connection: SqliteConnection, fault: Fault) -> Self {
         let (inbox, items) = mpsc::channel(GROUP);
         let group_sizes = group_sizes();
-        let task = tokio::spawn(run(connection, items, group_sizes.clone()));
+        let task = tokio::spawn(run(connection, items, fault, group_sizes.clone()));
         Self { inbox: Mutex::new(Some(inbox)), task: Mutex::new(Some(task)), group_sizes }
     }
 
@@ -216,16 +207,6 @@ impl Writer {
         outcome.await.map_err(|_| LedgerError::Closed)?
     }
 
-    /// Keeps a change of a token; durable when answered.
-    ///
-    /// # Errors
-    /// The database's, which also refuses what contradicts the changes before.
-    pub async fn keep_token_change(&self, change: Change) -> TokenAnswer {
-        let (answer, outcome) = oneshot::channel();
-        self.sender()?.send(Item::Token { change: Box::new(change), answer }).await.map_err(|_| LedgerError::Closed)?;
-        outcome.await.map_err(|_| LedgerError::Closed)?
-    }
-
     /// Takes no more items, writes those that were taken, and closes the connection.
     pub(super) async fn close(&self) {
         drop(self.inbox.lock().unwrap_or_else(|poisoned| poisoned.into_inner()).take());
@@ -238,10 +219,15 @@ impl Writer {
     }
 }
 
-async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>, group_sizes: Histogram) {
+async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>, fault: Fault, group_sizes: Histogram) {
     let mut group = Vec::with_capacity(GROUP);
     while items.recv_many(&mut group, GROUP).await > 0 {
         group_sizes.observe(group.len() as f64);
+        if let Some(detail) = fault.get() {
+            let error = LedgerError::Fault { detail: detail.to_owned() };
+            group.drain(..).for_each(|item| item.failed(&error).tell());
+            continue;
+        }
         for outcome in commit(&mut connection, group.drain(..)).await {
             outcome.tell();
         }

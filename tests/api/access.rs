@@ -8,7 +8,7 @@ use std::collections::BTreeMap;
 use bitassay::{
     clock::{Clock, Stamp, SystemClock},
     http::openapi::document,
-    ledger::Ledger,
+    ledger::tokens::Tokens,
     profile::RigName,
     token::{Change, Role, Secret, Token},
 };
@@ -23,7 +23,12 @@ use crate::{
 /// Operation, and the roles that may use it, from the service's description; `public` needs no token.
 const TABLE: &[(&str, &str)] = &[
     ("get_certification", "rig operator auditor"),
+    ("get_checkpoint", "operator auditor"),
     ("get_commitment", "operator auditor"),
+    ("get_consistency_proof", "operator auditor"),
+    ("get_inclusion_proof", "operator auditor"),
+    ("get_ledger_entry", "operator auditor"),
+    ("get_ledger_key", "operator auditor"),
     ("get_openapi", "public"),
     ("get_rig", "rig operator auditor"),
     ("get_witness", "rig operator auditor"),
@@ -63,9 +68,9 @@ pub fn revoke(running: &Running, token: Uuid) {
 fn change(running: &Running, change: Change) {
     let runtime = tokio::runtime::Runtime::new().unwrap();
     runtime.block_on(async {
-        let ledger = Ledger::open(&running.database).await.unwrap();
-        ledger.writer.keep_token_change(change).await.unwrap();
-        ledger.close().await;
+        let mut tokens = Tokens::open(&running.database).await.unwrap();
+        tokens.keep(&change).await.unwrap();
+        tokens.close().await.unwrap();
     });
 }
 
