@@ -104,6 +104,7 @@ pub struct ExportedBundle {
 /// Keep the answer as it is: `bitassay verify FILE --key KEY` reads it. The record's place in the ledger is the `index` of `ledger.entry`.
 #[utoipa::path(
     get, path = "/v1/certifications/{id}/bundle", tag = "certifications", operation_id = "get_bundle",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     params(("id" = String, Path, description = "Identifier of the certification.")),
     responses(
         (status = 200, description = "The bundle.", body = ExportedBundle),

@@ -22,6 +22,7 @@ use crate::{
 
 /// Operation, and the roles that may use it, from the service's description; `public` needs no token.
 const TABLE: &[(&str, &str)] = &[
+    ("get_bundle", "rig operator auditor"),
     ("get_certification", "rig operator auditor"),
     ("get_checkpoint", "operator auditor"),
     ("get_commitment", "operator auditor"),
