@@ -74,6 +74,8 @@ pub mod leakage;
 #[cfg(feature = "service")]
 pub mod ledger;
 #[cfg(feature = "service")]
+pub mod metrics;
+#[cfg(feature = "service")]
 pub mod profile;
 #[cfg(feature = "service")]
 pub mod record;
@@ -91,5 +93,7 @@ pub mod solver;
 pub mod statistics;
 #[cfg(feature = "service")]
 pub mod submission;
+#[cfg(feature = "service")]
+pub mod token;
 pub mod verify;
 pub mod witness;

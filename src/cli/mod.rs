@@ -7,9 +7,12 @@ mod demo;
 mod document;
 mod export;
 mod forecast;
+mod health;
 mod leakage;
 mod openapi;
 mod serve;
+mod settings;
+mod token;
 mod verify;
 
 use std::process::ExitCode;
@@ -29,6 +32,9 @@ pub struct CommandLine {
 #[derive(Subcommand)]
 enum Command {
     Serve(serve::Serve),
+    #[command(subcommand)]
+    Token(token::Token),
+    Health(health::Health),
     Certify(certify::Certify),
     Verify(verify::Verify),
     Attack(attack::Attack),
@@ -44,6 +50,8 @@ enum Command {
 pub fn run() -> ExitCode {
     let outcome = match CommandLine::parse().command {
         Command::Serve(command) => command.run(),
+        Command::Token(command) => command.run(),
+        Command::Health(command) => command.run(),
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
         Command::Attack(command) => command.run(),
