@@ -22,7 +22,7 @@ use super::{
 };
 use crate::relaxation::program::{Program, Row};
 
-/// The solver stops where neither a residual nor the sum of what complementarity leaves exceeds this.
+/// The solver stops where neither a residual, nor the sum of what complementarity leaves, nor what residuals cost exceeds this.
 const TOLERANCE: f64 = 1e-9;
 /// More than this is no candidate.
 const USEFUL: f64 = 1e-6;
@@ -110,7 +110,7 @@ impl<'a> Iteration<'a> {
             let residuals = self.residuals();
             let infeasible = residuals.largest();
             let complementarity = self.gap() * self.degree;
-            let missing = infeasible.max(complementarity);
+            let missing = infeasible.max(complementarity).max(self.proved_too_much(&residuals));
             if best.as_ref().is_none_or(|(least, _)| missing < *least) {
                 best = Some((missing, self.point.clone()));
                 stalled = 0;
@@ -141,6 +141,15 @@ impl<'a> Iteration<'a> {
     fn gap(&self) -> f64 {
         let Point { s, u, slack, z, .. } = &self.point;
         (inner_all(slack, z) + dot(s, u)) / self.degree
+    }
+
+    /// By how much the multipliers miss the optimum because the variables miss their constraints, at most: residuals times multipliers. Where the
+    /// constraints have no interior, multipliers grow without bound, and small residuals are no comfort.
+    fn proved_too_much(&self, residuals: &Residuals) -> f64 {
+        let Point { y, u, z, .. } = &self.point;
+        let weighted = |multipliers: &[f64], residuals: &[f64]| multipliers.iter().zip(residuals).map(|(m, r)| (m * r).abs()).sum::<f64>();
+        let blocks = z.iter().zip(&residuals.blocks).map(|(z, residual)| weighted(z.as_slice(), residual.as_slice())).sum::<f64>();
+        weighted(y, &residuals.equalities) + weighted(u, &residuals.inequalities) + blocks
     }
 
     fn residuals(&self) -> Residuals {

@@ -42,6 +42,7 @@ const TABLE: &[(&str, &str)] = &[
     ("post_batch", "rig"),
     ("post_commitment", "operator"),
     ("post_leakage", "rig operator auditor"),
+    ("post_forecast", "rig operator auditor"),
     ("put_rig", "operator"),
     ("readyz", "public"),
 ];
