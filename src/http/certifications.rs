@@ -140,10 +140,10 @@ pub struct HistoryQuery {
     #[param(value_type = Option<Verdict>)]
     verdict: Option<Verdict>,
     /// Only those recorded at this time or later, RFC 3339.
-    #[param(value_type = Option<String>)]
+    #[param(value_type = Option<String>, format = DateTime)]
     since: Option<Stamp>,
     /// Only those recorded before this time, RFC 3339.
-    #[param(value_type = Option<String>)]
+    #[param(value_type = Option<String>, format = DateTime)]
     until: Option<Stamp>,
     /// Where the page begins: the `next` of the page before.
     #[param(value_type = Option<String>)]

@@ -33,8 +33,8 @@ const CURSOR: &str = "rigs:";
     security(("token" = ["operator"])),
     params(
         ("rig" = String, Path, description = "Name of the rig: `[a-z0-9][a-z0-9-]{0,62}`."),
-        ("If-Match" = Option<String>, Header, description = "Entity tag of the version that a change starts from; needed for a change."),
-        ("If-None-Match" = Option<String>, Header, description = "`*`: create only."),
+        ("If-Match" = Option<String>, Header, pattern = r#"^(\*|"[0-9]{1,18}"(, ?"[0-9]{1,18}")*)$"#, description = "Entity tag of the version that a change starts from; needed for a change."),
+        ("If-None-Match" = Option<String>, Header, pattern = r"^\*$", description = "`*`: create only."),
     ),
     request_body(content = ProfileDocument, content_type = "application/json"),
     responses(
