@@ -4,6 +4,7 @@ use serde::{Deserialize, Serialize};
 
 use crate::{
     counts::Table,
+    leakage::budget::BudgetAccount,
     relaxation::level::{Level, LevelChoice},
     request::{EntropyChoice, LostRounds, RoundModel},
     scenario::{Scenario, Setting},
@@ -43,8 +44,15 @@ pub enum Reason {
 pub struct FailureTotal {
     pub estimation: f64,
     pub hashing: f64,
+    /// That the leakage is larger than its budget says; left out where it is zero, as for a leakage that is stated.
+    #[serde(default, skip_serializing_if = "is_zero")]
+    pub leakage: f64,
     /// Sum of the above, rounded up.
     pub total: f64,
+}
+
+fn is_zero(value: &f64) -> bool {
+    *value == 0.0
 }
 
 /// The bound of one target setting.
@@ -154,6 +162,9 @@ pub struct Certificate {
     pub reason: Option<Reason>,
     #[cfg_attr(feature = "service", schema(value_type = crate::scenario::ScenarioDocument))]
     pub scenario: Scenario,
+    /// The budget that the leakage comes from, if it is not stated.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub leakage_budget: Option<BudgetAccount>,
     /// Counts as certified, after lost rounds were folded in if that was asked for.
     #[cfg_attr(feature = "service", schema(value_type = Option<Vec<Vec<Vec<u64>>>>))]
     pub counts: Option<Table<u64>>,

@@ -13,9 +13,10 @@ use crate::{
     },
     exact::round_down,
     fault::Fault,
+    leakage::budget::Budget,
     relaxation::level::{Level, LevelChoice},
     request::{Data, EntropyChoice, Failure, LostRounds, LostTreatment, Request, RoundModel},
-    scenario::{LeakageReading, Setting},
+    scenario::{LeakageReading, Scenario, Setting},
     solver::Limits,
     statistics::region::{frequencies, region},
     witness::{
@@ -167,11 +168,12 @@ impl Draft {
             None | Some(Evidence::Point(_)) => None,
             Some(Evidence::Region(table)) => Some(table.clone()),
         };
-        let failure = (request.rounds != RoundModel::PlugIn).then(|| FailureTotal::new(request.failure));
+        let failure = (request.rounds != RoundModel::PlugIn).then(|| FailureTotal::new(request.failure, &request.scenario));
         let certificate = Certificate {
             verdict: Verdict::Refused,
             reason: None,
             scenario: request.scenario.clone(),
+            leakage_budget: request.scenario.leakage_budget().map(Budget::account),
             counts: counts.map(|counts| counts.table().clone()),
             counts_digest: counts.map(|counts| counts.digest()),
             behaviour,
@@ -329,9 +331,13 @@ impl TargetCertificate {
 }
 
 impl FailureTotal {
-    pub(crate) fn new(failure: Failure) -> Self {
+    /// What is accepted, and what the scenario's leakage adds.
+    pub(crate) fn new(failure: Failure, scenario: &Scenario) -> Self {
         let Failure { estimation, hashing } = failure;
-        Self { estimation, hashing, total: (estimation + hashing).next_up() }
+        let leakage = scenario.leakage_budget().map_or(0.0, Budget::failure);
+        let accepted = (estimation + hashing).next_up();
+        let total = if leakage > 0.0 { (accepted + leakage).next_up() } else { accepted };
+        Self { estimation, hashing, leakage, total }
     }
 }
 
@@ -371,6 +377,7 @@ fn assumptions(request: &Request) -> Vec<String> {
             "The commitment was recorded before the first round of the block was played.".to_owned(),
         ]),
     }
+    assumptions.extend(scenario.leakage_budget().map(Budget::sentences).unwrap_or_default());
     if request.lost_rounds.as_ref().is_some_and(|lost| lost.treatment == LostTreatment::FairSampling) {
         assumptions.push(
             "Fair sampling: whether a round is lost does not depend on the settings or on what its outcome would have been.".to_owned(),

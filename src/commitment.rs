@@ -195,7 +195,7 @@ pub fn commit(plan: &Plan) -> Result<(Commitment, Vec<Witness>), CommitError> {
         scenario: plan.scenario.clone(),
         rounds: plan.rounds,
         setting_distribution: plan.distribution.clone(),
-        failure: FailureTotal::new(plan.failure),
+        failure: FailureTotal::new(plan.failure, &plan.scenario),
         expected_behaviour: plan.expected.table().clone(),
         power,
         targets: targets.collect(),

@@ -1,5 +1,6 @@
 //! The service: takes batches in, has them solved, keeps what came out. Knows no HTTP.
 
+mod budgets;
 mod commitments;
 mod quality;
 mod solvers;
@@ -15,6 +16,7 @@ use uuid::{NoContext, Uuid};
 
 use self::turns::Turns;
 pub use self::{
+    budgets::ProfileError,
     commitments::{Listed, OrderError},
     solvers::{Certifier, SolveError, Solvers},
 };
@@ -141,7 +143,11 @@ impl Service {
             RoundModel::Memory => Some(self.standing(&profile).await?.ok_or(SubmitError::Uncommitted)?),
             RoundModel::PlugIn | RoundModel::Independent => None,
         };
-        let batch = posted.read(&profile.profile, committed.as_ref())?;
+        let mut legible = posted.read(profile.profile.scenario().geometry())?;
+        if let Some(leakage) = legible.leakage() {
+            self.fetch_budget(leakage).await?.map_err(BatchFault::Impossible)?;
+        }
+        let batch = legible.under(&profile.profile, committed.as_ref())?;
         self.keep(profile, committed, batch, submission).await
     }
 

@@ -14,7 +14,7 @@ use crate::{
     batch::BatchFault,
     fault::Fault,
     ledger::{LedgerError, writer::WriteError},
-    service::{Check, OrderError, SolveError, SubmitError},
+    service::{Check, OrderError, ProfileError, SolveError, SubmitError},
 };
 
 /// Media type of every error.
@@ -194,6 +194,15 @@ impl From<LedgerError> for Problem {
         match error {
             LedgerError::Closed => Self::new(StatusCode::SERVICE_UNAVAILABLE, "The service is shutting down.").retry_after(5),
             error => Self::internal(&error),
+        }
+    }
+}
+
+impl From<ProfileError> for Problem {
+    fn from(error: ProfileError) -> Self {
+        match error {
+            ProfileError::Document(fault) => Self::body(StatusCode::UNPROCESSABLE_ENTITY, fault),
+            ProfileError::Ledger(error) => error.into(),
         }
     }
 }

@@ -61,6 +61,19 @@ impl<S: Send + Sync> FromRequestParts<S> for CommitmentPath {
     }
 }
 
+/// The `{digest}` of a budget's path, as it stands there.
+pub struct BudgetPath(pub String);
+
+impl<S: Send + Sync> FromRequestParts<S> for BudgetPath {
+    type Rejection = Problem;
+
+    async fn from_request_parts(parts: &mut Parts, state: &S) -> Result<Self, Problem> {
+        let Path(text) =
+            Path::<String>::from_request_parts(parts, state).await.map_err(|error| Problem::parameter("digest", error.body_text()))?;
+        Ok(Self(text))
+    }
+}
+
 /// The path's identifier, in the one way that it is written.
 async fn identifier<S: Send + Sync>(parts: &mut Parts, state: &S) -> Option<Uuid> {
     let Path(text) = Path::<String>::from_request_parts(parts, state).await.ok()?;

@@ -7,7 +7,7 @@ use uuid::Uuid;
 
 use super::{
     LedgerError,
-    rows::{Answered, NumberedCommitment, ProfileVersion, Read, Recorded, Tally, word},
+    rows::{Answered, KeptBudget, NumberedCommitment, ProfileVersion, Read, Recorded, Tally, word},
 };
 use crate::{certificate::Verdict, clock::Stamp, committed::Committed, profile::RigName, record::Summary, submission::IdempotencyKey};
 
@@ -182,6 +182,28 @@ impl History {
                    ORDER BY w.digest";
         let witnesses = sqlx::query_as(sql).bind(clamped(number)).fetch_all(&self.pool).await?;
         Ok(Some((committed, witnesses)))
+    }
+
+    /// The leakage budget of a digest.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn budget(&self, digest: &str) -> Result<Option<KeptBudget>, LedgerError> {
+        let sql = "SELECT budget, recorded_at, document FROM leakage_budgets WHERE digest = ?";
+        let row = sqlx::query(sql).bind(digest).fetch_optional(&self.pool).await?;
+        row.map(|row| KeptBudget::read(&row)).transpose()
+    }
+
+    /// Leakage budgets, newest first, those before the number `before`.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn budgets(&self, before: Option<u64>, limit: u32) -> Result<Page<KeptBudget>, LedgerError> {
+        let sql = "SELECT budget, recorded_at, document FROM leakage_budgets WHERE budget < ? ORDER BY budget DESC LIMIT ?";
+        let before = clamped(before.unwrap_or(u64::MAX));
+        let rows = sqlx::query(sql).bind(before).bind(i64::from(limit) + 1).fetch_all(&self.pool).await?;
+        let items = rows.iter().map(KeptBudget::read).collect::<Result<_, _>>()?;
+        Ok(Page::of(items, limit))
     }
 
     /// The answer that a submission was given.
