@@ -82,6 +82,13 @@ impl TryFrom<CommitmentDocument> for Plan {
     }
 }
 
+impl Plan {
+    /// The level that the choice comes to.
+    pub(crate) fn level(&self) -> Level {
+        self.level
+    }
+}
+
 /// The witness that stands for one target.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 #[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
@@ -163,7 +170,7 @@ pub fn commit(plan: &Plan) -> Result<(Commitment, Vec<Witness>), CommitError> {
     let mut failure = CommitError::Nothing;
     for half_steps in 0..CURVE_POINTS {
         let power = power_near(largest_power(plan) * 0.5f64.powf(f64::from(half_steps) / 2.0));
-        match expectation(plan, power, &first) {
+        match expectation(plan, power, &checked(&first)) {
             Ok((bits, factors)) => {
                 curve.push(CurvePoint { power, expected_bits: bits });
                 if best.as_ref().is_none_or(|(most, ..)| bits > *most) {
@@ -176,7 +183,7 @@ pub fn commit(plan: &Plan) -> Result<(Commitment, Vec<Witness>), CommitError> {
     let Some((mut expected_bits, power, mut factors)) = best.filter(|(bits, ..)| *bits > 0.0) else { return Err(failure) };
     let mut found = first;
     let second = witnesses(plan, power, &mut covers)?;
-    if let Ok((bits, better)) = expectation(plan, power, &second)
+    if let Ok((bits, better)) = expectation(plan, power, &checked(&second))
         && bits > expected_bits
     {
         (expected_bits, factors, found) = (bits, better, second);
@@ -211,10 +218,19 @@ pub fn commit(plan: &Plan) -> Result<(Commitment, Vec<Witness>), CommitError> {
     Ok((commitment, found.into_iter().map(|found| found.witness.witness().clone()).collect()))
 }
 
+/// Expected bits of a plan with given witnesses, at the best power up to theirs; zero if nothing is expected.
+pub(crate) fn expected_of(plan: &Plan, power: u32, witnesses: &[&CheckedWitness]) -> f64 {
+    let powers = (0..CURVE_POINTS).map(|half_steps| power_near(largest_power(plan) * 0.5f64.powf(f64::from(half_steps) / 2.0)).min(power));
+    powers.filter_map(|power| expectation(plan, power, witnesses).ok()).map(|(bits, _)| bits).fold(0.0, f64::max)
+}
+
+fn checked(found: &[Found]) -> Vec<&CheckedWitness> {
+    found.iter().map(|found| &found.witness).collect()
+}
+
 /// Expected bits at a power, and the factors they come from.
-fn expectation(plan: &Plan, power: u32, found: &[Found]) -> Result<(f64, Table<f64>), CommitError> {
-    let checked: Vec<&CheckedWitness> = found.iter().map(|found| &found.witness).collect();
-    let factors = plan_factors(&plan.scenario, &plan.distribution, plan.expected.table(), power, &checked)?;
+fn expectation(plan: &Plan, power: u32, witnesses: &[&CheckedWitness]) -> Result<(f64, Table<f64>), CommitError> {
+    let factors = plan_factors(&plan.scenario, &plan.distribution, plan.expected.table(), power, witnesses)?;
     Ok((expected_bits(plan, &factors, power), factors))
 }
 

@@ -10,7 +10,7 @@
 use serde::{Deserialize, Serialize};
 
 use crate::{
-    bound::{Found, power_entropy},
+    bound::{Answer, Found, guessing_probability, power_entropy},
     commitment::{CommitmentDocument, Plan, expected_of, setting_cost},
     counts::{Counts, Table},
     entropy::{
@@ -114,6 +114,7 @@ impl Comparison {
     /// # Errors
     /// Rounds that are too few or too many, a share that is none, or targets that no witness is found for.
     pub fn table(&self, rounds: &[u64], draws: &[Draw], mut progress: impl FnMut(usize, usize)) -> Result<Vec<Line>, Fault> {
+        self.check_model()?;
         let sets = self.sets(rounds, &mut progress)?;
         let mut lines = Vec::new();
         for n in rounds {
@@ -122,6 +123,18 @@ impl Comparison {
             }
         }
         Ok(lines)
+    }
+
+    /// Bounds say nothing about a behaviour that no model has.
+    fn check_model(&self) -> Result<(), Fault> {
+        let Some(target) = self.scenario.targets().first() else { return Ok(()) };
+        let place = Place::Behaviour(&self.document.expected_behaviour);
+        match guessing_probability(&self.scenario, *target, place, self.level, Limits::default()) {
+            Answer::Outside(_) => {
+                Err(Fault::new("/expected_behaviour", "cannot come from a carrier of the declared dimension with the declared leakage"))
+            }
+            Answer::Bounded(_) | Answer::Unverified => Ok(()),
+        }
     }
 
     fn sets(&self, rounds: &[u64], progress: &mut impl FnMut(usize, usize)) -> Result<Vec<Set>, Fault> {

@@ -139,14 +139,14 @@ impl Service {
             let same = answered.body_digest == submission.body_digest;
             return if same { Ok(Settled { answered, replayed: true }) } else { Err(SubmitError::KeyReused) };
         }
-        let committed = match profile.profile.rounds() {
-            RoundModel::Memory => Some(self.standing(&profile).await?.ok_or(SubmitError::Uncommitted)?),
-            RoundModel::PlugIn | RoundModel::Independent => None,
-        };
         let mut legible = posted.read(profile.profile.scenario().geometry())?;
         if let Some(leakage) = legible.leakage() {
             self.fetch_budget(leakage).await?.map_err(BatchFault::Impossible)?;
         }
+        let committed = match profile.profile.rounds() {
+            RoundModel::Memory => Some(self.commitment_for(&profile, legible.started_at()).await?.ok_or(SubmitError::Uncommitted)?),
+            RoundModel::PlugIn | RoundModel::Independent => None,
+        };
         let batch = legible.under(&profile.profile, committed.as_ref())?;
         self.keep(profile, committed, batch, submission).await
     }
@@ -158,7 +158,7 @@ impl Service {
         batch: Batch,
         submission: Submission,
     ) -> Result<Settled, SubmitError> {
-        let (Certification { certificate, witnesses }, timings) = match batch.task {
+        let (Certification { mut certificate, witnesses }, timings) = match batch.task {
             Task::Solve(request) => {
                 let done = self.solvers.certify(*request).await?;
                 (done.outcome, Timings { queued_seconds: done.queued.as_secs_f64(), solved_seconds: done.solved.as_secs_f64() })
@@ -168,6 +168,10 @@ impl Service {
         let declared = profile.profile.setting_distribution();
         let distribution = committed.as_ref().map(|committed| &committed.commitment.setting_distribution[..]).or(declared);
         let concerns = quality::concerns(&self.ledger, &profile.rig, distribution, &certificate).await?;
+        let refuse_on = profile.profile.refuse_on().to_vec();
+        if let Some(objection) = quality::objection(&refuse_on, &concerns, &certificate) {
+            certificate.refuse(objection);
+        }
         let recorded_at = self.clock.now();
         let record = Record {
             id: new_id(recorded_at),
@@ -180,6 +184,7 @@ impl Service {
             commitment: committed.map(|committed| committed.id),
             certificate,
             concerns,
+            refuse_on,
             timings,
         };
         let entry = Entry::new(&record, &witnesses, submission)?;

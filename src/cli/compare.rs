@@ -55,7 +55,8 @@ impl Compare {
         let named = || self.file.display().to_string();
         let text = document::read(&self.file)?;
         let comparison = parse_object::<ComparisonDocument>(&text).and_then(Comparison::try_from).with_context(named)?;
-        let draws: Vec<Draw> = std::iter::once(Draw::Uniform).chain(self.target_share.iter().map(|share| Draw::TargetShare(*share))).collect();
+        let draws: Vec<Draw> =
+            std::iter::once(Draw::Uniform).chain(self.target_share.iter().map(|share| Draw::TargetShare(*share))).collect();
         let shown = std::io::stderr().is_terminal();
         let progress = |done: usize, all: usize| {
             if shown {
@@ -78,7 +79,10 @@ impl Compare {
 
 fn print(lines: &[Line]) -> std::io::Result<()> {
     let mut out = std::io::stdout().lock();
-    writeln!(out, "| rounds | target share | settings cost | independent: per target round | net per round | memory: per target round | net per round |")?;
+    writeln!(
+        out,
+        "| rounds | target share | settings cost | independent: per target round | net per round | memory: per target round | net per round |"
+    )?;
     writeln!(out, "|---|---|---|---|---|---|---|")?;
     for Line { rounds, target_share, setting_cost_per_round, independent, memory } in lines {
         let figures = |figures: &Figures| format!("{:.3} | {:+.4}", figures.bits_per_target_round, figures.net_bits_per_round);

@@ -1,6 +1,7 @@
 //! The command line: one file a command.
 
 mod certify;
+mod compare;
 mod demo;
 mod document;
 mod leakage;
@@ -28,6 +29,7 @@ enum Command {
     Certify(certify::Certify),
     Verify(verify::Verify),
     Leakage(leakage::Leakage),
+    Compare(compare::Compare),
     Demo(demo::Demo),
     Openapi(openapi::Openapi),
 }
@@ -39,6 +41,7 @@ pub fn run() -> ExitCode {
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
         Command::Leakage(command) => command.run(),
+        Command::Compare(command) => command.run(),
         Command::Demo(command) => command.run(),
         Command::Openapi(command) => command.run(),
     };

@@ -14,7 +14,7 @@ use utoipa::{IntoParams, ToSchema};
 use super::{
     negotiation::{Offer, TakesJson, TakesTable},
     problem::{Problem, ProblemDocument},
-    wire::{CertificationPath, FromParameters, Parameters, Query, cursor, json, link_next, no_certification, page},
+    wire::{CertificationPath, FromParameters, Parameters, Query, by_digest, cursor, json, link_next, no_certification, page},
 };
 use crate::{
     certificate::Verdict,
@@ -80,10 +80,8 @@ pub async fn witness(
     State(service): State<Arc<Service>>,
 ) -> Result<Response<Body>, Problem> {
     let Evidence { commitment, witnesses } = service.evidence(id).await?.ok_or_else(no_certification)?;
-    // The documents are texts that were kept as they are, so that their digests still hold.
     let commitment = commitment.map_or_else(String::new, |document| format!("\"commitment\":{document},"));
-    let members: Vec<String> = witnesses.into_iter().map(|(digest, document)| format!("\"{digest}\":{document}")).collect();
-    Ok(json(StatusCode::OK, format!("{{\"certification\":\"{id}\",{commitment}\"witnesses\":{{{}}}}}", members.join(","))))
+    Ok(json(StatusCode::OK, format!("{{\"certification\":\"{id}\",{commitment}\"witnesses\":{}}}", by_digest(witnesses))))
 }
 
 #[derive(IntoParams)]

@@ -23,6 +23,7 @@ pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
         .routes(routes!(batches::post))
         .routes(routes!(commitments::list, commitments::post))
         .routes(routes!(commitments::get))
+        .routes(routes!(commitments::witness))
         .routes(routes!(yields::get))
         .routes(routes!(certifications::list))
         .routes(routes!(certifications::get))

@@ -279,6 +279,12 @@ pub fn page(items: impl Iterator<Item = String>, next: Option<&str>) -> String {
     format!("{{\"items\":[{}],\"next\":{next}}}", items.join(","))
 }
 
+/// Documents by their digests, as an object; each is a text that goes in as it was kept, so that its digest still holds.
+pub fn by_digest(documents: Vec<(String, String)>) -> String {
+    let members: Vec<String> = documents.into_iter().map(|(digest, document)| format!("\"{digest}\":{document}")).collect();
+    format!("{{{}}}", members.join(","))
+}
+
 /// The header that leads to the next page, for clients that follow links.
 pub fn link_next(target: &str) -> [(HeaderName, String); 1] {
     [(header::LINK, format!("<{target}>; rel=\"next\""))]

@@ -157,6 +157,26 @@ impl History {
         row.map(|row| Committed::read(&row)).transpose()
     }
 
+    /// The newest commitment of a rig that was made under a version of its profile and recorded at a time or before.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn commitment_at(&self, rig: &RigName, profile_version: u64, time: Stamp) -> Result<Option<Committed>, LedgerError> {
+        let sql = "SELECT * FROM commitments WHERE rig = ? AND profile_version = ? AND recorded_at <= ? ORDER BY commitment DESC LIMIT 1";
+        let query = sqlx::query(sql).bind(rig.as_str()).bind(clamped(profile_version)).bind(time.microseconds());
+        query.fetch_optional(&self.pool).await?.map(|row| Committed::read(&row)).transpose()
+    }
+
+    /// Digest and document of each witness of a commitment.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn commitment_witnesses(&self, id: Uuid) -> Result<Vec<(String, String)>, LedgerError> {
+        let sql = "SELECT w.digest, w.document FROM commitments JOIN commitment_witnesses USING (commitment) \
+                   JOIN witnesses w ON w.digest = commitment_witnesses.digest WHERE id = ? ORDER BY w.digest";
+        Ok(sqlx::query_as(sql).bind(id.to_string()).fetch_all(&self.pool).await?)
+    }
+
     /// A rig's commitments, newest first, those before the number `before`.
     ///
     /// # Errors

@@ -12,6 +12,7 @@ mod examples;
 mod health;
 mod leakage;
 mod ledger;
+mod objections;
 mod openapi;
 mod rigs;
 mod server;
