@@ -5,6 +5,8 @@
 
 pub mod history;
 pub mod rows;
+pub mod source;
+pub mod tree;
 pub mod writer;
 
 use std::{
@@ -50,6 +52,8 @@ pub enum LedgerError {
     Unreadable { what: &'static str, source: Arc<serde_json::Error> },
     #[error("a stored {what} is out of range")]
     OutOfRange { what: &'static str },
+    #[error("a {kind} that was written cannot be found to be logged")]
+    Unlogged { kind: &'static str },
     #[error("the ledger is closed")]
     Closed,
 }
@@ -84,6 +88,12 @@ impl Ledger {
         check_sqlite(&mut connection).await?;
         MIGRATIONS.run(&mut connection).await.map_err(|source| LedgerError::Migrate { source: Arc::new(source) })?;
         check_settings(&mut connection).await?;
+        let mut transaction = connection.begin_with("BEGIN IMMEDIATE").await?;
+        let older = tree::log_older_rows(&mut transaction).await?;
+        transaction.commit().await?;
+        if older > 0 {
+            tracing::info!(entries = older, "rows that are older than the tree were logged in it");
+        }
         // The writer's connection exists first: a reader cannot create the files that WAL mode needs.
         let pool = SqlitePoolOptions::new().max_connections(READERS).connect_with(options.read_only(true)).await.map_err(cannot_open)?;
         Ok(Self { history: History::new(pool), writer: Writer::start(connection) })

@@ -12,6 +12,8 @@ use super::{
     LedgerError,
     history::answered_within,
     rows::{Answered, Entry, word},
+    source::{CERTIFICATION, COMMITMENT, PROFILE},
+    tree,
 };
 use crate::{
     clock::Stamp,
@@ -322,8 +324,9 @@ async fn write_profile(
         .bind(version)
         .bind(recorded_at.microseconds())
         .bind(text)
-        .execute(connection)
+        .execute(&mut *connection)
         .await?;
+    tree::log(connection, &PROFILE, &format!("{rig}/{version}")).await?;
     let kept = if version == 1 { Kept::Created } else { Kept::Updated };
     Ok((kept, u64::try_from(version).map_err(|_| LedgerError::OutOfRange { what: "version" })?))
 }
@@ -354,8 +357,9 @@ async fn write_entry(connection: &mut SqliteConnection, entry: Entry) -> EntryAn
         .bind(&submission.body_digest)
         .bind(number)
         .bind(&entry.refusal)
-        .execute(connection)
+        .execute(&mut *connection)
         .await?;
+    tree::log(connection, &CERTIFICATION, &entry.id.to_string()).await?;
     let Entry { id, record, refusal, submission, .. } = entry;
     Ok(Settled { answered: Answered { id, body_digest: submission.body_digest, record, refusal }, replayed: false })
 }
@@ -399,6 +403,7 @@ async fn write_commitment(connection: &mut SqliteConnection, committed: &Committ
         let sql = "INSERT INTO commitment_witnesses (commitment, digest) VALUES (?, ?)";
         sqlx::query(sql).bind(number).bind(digest).execute(&mut *connection).await?;
     }
+    tree::log(connection, &COMMITMENT, &committed.id.to_string()).await?;
     Ok(())
 }
 
