@@ -57,8 +57,15 @@ pub const CERTIFICATION: Source = Source {
     rows: "SELECT id, recorded_at FROM certifications ORDER BY entry",
 };
 
+/// Leakage budgets; the subject is the digest.
+pub const BUDGET: Source = Source {
+    kind: "leakage-budget",
+    row: "SELECT digest AS subject, recorded_at, budget AS number, digest, document AS document_sha256 FROM leakage_budgets WHERE digest = ?1",
+    rows: "SELECT digest, recorded_at FROM leakage_budgets ORDER BY budget",
+};
+
 /// Every table that is logged.
-pub const SOURCES: [Source; 3] = [PROFILE, COMMITMENT, CERTIFICATION];
+pub const SOURCES: [Source; 4] = [BUDGET, PROFILE, COMMITMENT, CERTIFICATION];
 
 /// What is to be logged about one row.
 #[derive(Debug, Clone, PartialEq)]

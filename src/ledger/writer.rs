@@ -12,7 +12,7 @@ use super::{
     LedgerError,
     history::answered_within,
     rows::{Answered, Entry, word},
-    source::{CERTIFICATION, COMMITMENT, PROFILE},
+    source::{BUDGET, CERTIFICATION, COMMITMENT, PROFILE},
     tree,
 };
 use crate::{
@@ -411,8 +411,12 @@ async fn write_budget(connection: &mut SqliteConnection, digest: &str, document:
     let sql = "INSERT INTO leakage_budgets (budget, digest, recorded_at, document) \
                SELECT (SELECT COALESCE(MAX(budget), -1) + 1 FROM leakage_budgets), ?1, ?2, ?3 \
                WHERE NOT EXISTS (SELECT 1 FROM leakage_budgets WHERE digest = ?1)";
-    let written = sqlx::query(sql).bind(digest).bind(recorded_at.microseconds()).bind(document).execute(connection).await?;
-    Ok(written.rows_affected() > 0)
+    let written = sqlx::query(sql).bind(digest).bind(recorded_at.microseconds()).bind(document).execute(&mut *connection).await?;
+    let new = written.rows_affected() > 0;
+    if new {
+        tree::log(connection, &BUDGET, digest).await?;
+    }
+    Ok(new)
 }
 
 fn signed(number: u64, what: &'static str) -> Result<i64, LedgerError> {

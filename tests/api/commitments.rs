@@ -192,11 +192,11 @@ fn a_newer_commitment_stands_for_later_batches() {
     let between = client.post_batch("bench", "between", &batch(ROUNDS, &before)).expect(201);
     assert_eq!((&between.json()["commitment"], &between.json()["block"]["commitment"]), (&first["id"], &first["digest"]));
     assert_eq!(bundle(&client, &between).verify(), Ok(()));
-    assert_eq!(client.post_batch("bench", "too many", &batch(2 * ROUNDS, &before)).expect(422).json()["pointer"], "/counts");
-    assert_eq!(client.post_batch("bench", "too few", &batch(ROUNDS, &second["recorded_at"])).expect(422).json()["pointer"], "/counts");
+    assert_eq!(client.post_batch("bench", "too-many", &batch(2 * ROUNDS, &before)).expect(422).json()["pointer"], "/counts");
+    assert_eq!(client.post_batch("bench", "too-few", &batch(ROUNDS, &second["recorded_at"])).expect(422).json()["pointer"], "/counts");
     let first_moment: Stamp = first["recorded_at"].as_str().unwrap().parse().unwrap();
     let too_early = json!(Stamp::from_microseconds(first_moment.microseconds() - 1).unwrap());
-    let refused = client.post_batch("bench", "too early", &batch(2 * ROUNDS, &too_early)).expect(422);
+    let refused = client.post_batch("bench", "too-early", &batch(2 * ROUNDS, &too_early)).expect(422);
     assert_eq!(refused.json()["reason"], "uncommitted");
     let record = client.post_batch("bench", "second", &batch(2 * ROUNDS, &second["recorded_at"])).expect(201).json();
     assert_eq!(record["commitment"], second["id"]);

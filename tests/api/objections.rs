@@ -70,7 +70,7 @@ fn first_discrepancy(bundle: &Bundle) -> String {
 fn settings_that_are_not_drawn_as_declared() {
     let (_running, client) = with_rigs(json!(["setting-imbalance"]));
     client.post_batch("strict", "good", &good()).expect(201);
-    let (refused, taken) = refused(&client, "setting-imbalance", &batch(json!([[[78_000, 22_000]], [[23_000, 78_000]]])));
+    let (refused, taken) = refused(&client, "setting-imbalance", &batch(json!([[[78_000, 22_000]], [[26_000, 78_000]]])));
     assert_eq!(taken.record["verdict"], "certified");
     let forged = beautified(&refused, &taken);
     assert!(first_discrepancy(&forged).starts_with("/verdict"), "{}", first_discrepancy(&forged));
@@ -92,8 +92,8 @@ fn outcomes_that_drifted() {
     let (refused, taken) = refused(&client, "outcome-drift", &drifted);
     assert!(first_discrepancy(&beautified(&refused, &taken)).starts_with("/verdict"));
     // What was refused is not what the next batch is compared with.
-    client.post_batch("strict", "drifted again", &drifted).expect(422);
-    client.post_batch("strict", "good again", &good()).expect(201);
+    client.post_batch("strict", "drifted-again", &drifted).expect(422);
+    client.post_batch("strict", "good-again", &good()).expect(201);
 }
 
 #[test]
