@@ -55,6 +55,22 @@ pub struct Bundle {
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub commitment: Option<Commitment>,
     pub witnesses: Witnesses,
+    /// Where the record stands in a ledger.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub ledger: Option<Standing>,
+}
+
+/// Where an entry stands: its leaf, and the proof that it is in the tree of a checkpoint.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[serde(deny_unknown_fields)]
+pub struct Standing {
+    /// The entry as a line of JSON, the bytes that are hashed; `index` is its place in the tree.
+    pub entry: String,
+    /// Hashes beside the way from the leaf to the root, in hexadecimal.
+    pub proof: Vec<String>,
+    /// A signed note.
+    pub checkpoint: String,
 }
 
 /// The witnesses of a certification as the service hands them out.
@@ -83,7 +99,7 @@ impl Bundle {
     /// The first deviation from the shape of either.
     pub fn join(record: &[u8], witnesses: &[u8]) -> Result<Self, Fault> {
         let handed_out: HandedOut = parse(witnesses)?;
-        Ok(Self { record: parse(record)?, commitment: handed_out.commitment, witnesses: handed_out.witnesses })
+        Ok(Self { record: parse(record)?, commitment: handed_out.commitment, witnesses: handed_out.witnesses, ledger: None })
     }
 
     /// The certificate within the record.

@@ -4,6 +4,7 @@ mod budgets;
 mod commitments;
 mod quality;
 mod solvers;
+mod tree;
 mod turns;
 
 use std::sync::{
@@ -19,6 +20,7 @@ pub use self::{
     budgets::ProfileError,
     commitments::{Listed, OrderError},
     solvers::{Certifier, SolveError, Solvers},
+    tree::Exported,
 };
 use crate::{
     batch::{Batch, BatchFault, Posted, Task},
@@ -248,6 +250,7 @@ impl Service {
             Check { name: "accepting", fault: unless(self.accepting.load(Ordering::Relaxed), "the service is shutting down") },
             Check { name: "database", fault: self.ledger.history.check().await.err().map(|error| error.to_string()) },
             Check { name: "writer", fault: unless(self.ledger.writer.is_open(), "the ledger is closed") },
+            Check { name: "ledger", fault: self.ledger.seal.fault().map(str::to_owned) },
             Check { name: "solvers", fault: self.solvers.fault() },
         ]
     }

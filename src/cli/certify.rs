@@ -44,7 +44,7 @@ impl Certify {
         record.insert("timings".into(), json!({ "solved_seconds": begun.elapsed().as_secs_f64() }));
         if self.bundle {
             let witnesses = certification.witnesses.into_iter().map(|witness| (witness.digest(), witness)).collect();
-            document::print(&Bundle { record, commitment: None, witnesses })?;
+            document::print(&Bundle { record, commitment: None, witnesses, ledger: None })?;
         } else {
             document::print(&record)?;
         }

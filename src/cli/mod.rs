@@ -1,9 +1,11 @@
 //! The command line: one file a command.
 
+mod backup;
 mod certify;
 mod compare;
 mod demo;
 mod document;
+mod export;
 mod leakage;
 mod openapi;
 mod serve;
@@ -30,6 +32,8 @@ enum Command {
     Verify(verify::Verify),
     Leakage(leakage::Leakage),
     Compare(compare::Compare),
+    Export(export::Export),
+    Backup(backup::Backup),
     Demo(demo::Demo),
     Openapi(openapi::Openapi),
 }
@@ -42,6 +46,8 @@ pub fn run() -> ExitCode {
         Command::Verify(command) => command.run(),
         Command::Leakage(command) => command.run(),
         Command::Compare(command) => command.run(),
+        Command::Export(command) => command.run(),
+        Command::Backup(command) => command.run(),
         Command::Demo(command) => command.run(),
         Command::Openapi(command) => command.run(),
     };

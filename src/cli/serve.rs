@@ -1,13 +1,13 @@
 //! `bitassay serve`
 
-use std::{io::IsTerminal, net::SocketAddr, path::PathBuf, process::ExitCode, sync::Arc};
+use std::{io::IsTerminal, net::SocketAddr, path::PathBuf, process::ExitCode, sync::Arc, time::Duration};
 
 use anyhow::{Context, bail};
 use bitassay::{
     certify::certify,
     clock::SystemClock,
     http::server,
-    ledger::Ledger,
+    ledger::{Ledger, Place},
     service::{Service, Solvers},
 };
 use clap::Args;
@@ -33,6 +33,19 @@ pub struct Serve {
     #[arg(long, value_name = "FILE", default_value = "bitassay.sqlite")]
     database: PathBuf,
 
+    /// The key that checkpoints of the ledger are signed with; made if it does not exist [default: DATABASE.key]
+    ///
+    /// The last checkpoint that was signed stands in a second file beside it, with `.checkpoint` added to the name. Keep both out of what a restore of the
+    /// database brings back: they are how the service knows that it was taken back in time.
+    #[arg(long, value_name = "FILE")]
+    ledger_key: Option<PathBuf>,
+
+    /// Seconds between two audits of the whole ledger
+    ///
+    /// New entries are gone through within seconds, and all of them at the start.
+    #[arg(long, value_name = "SECONDS", default_value_t = 3600, value_parser = clap::value_parser!(u32).range(1..))]
+    audit_interval: u32,
+
     /// Batches that are solved at the same time
     #[arg(long, value_name = "N", default_value_t = 2, value_parser = clap::value_parser!(u16).range(1..=256))]
     solvers: u16,
@@ -56,10 +69,17 @@ impl Serve {
 
     async fn serve(self) -> anyhow::Result<()> {
         let listener = TcpListener::bind(self.listen).await.with_context(|| format!("cannot listen on {}", self.listen))?;
-        let ledger = Ledger::open(&self.database).await?;
+        let mut place = Place::of(&self.database);
+        if let Some(key) = self.ledger_key {
+            place.key = key;
+        }
+        place.audit_interval = Duration::from_secs(self.audit_interval.into());
+        let ledger = Ledger::open_at(&place).await?;
+        let key = ledger.seal.verifier().to_string();
         let solvers = Solvers::start(self.solvers.into(), self.queue.into(), Arc::new(certify)).context("no threads to solve on")?;
         let service = Service::new(ledger, solvers, Arc::new(SystemClock));
         eprintln!("listening on http://{}", listener.local_addr()?);
+        tracing::info!(%key, "checkpoints of the ledger are signed with this key");
         tracing::warn!("the service has no tokens: whoever can reach the loopback address can use it");
         server::run(listener, service, stop_signal()).await?;
         Ok(())

@@ -17,6 +17,7 @@ use super::{
     wire::{CertificationPath, FromParameters, Parameters, Query, by_digest, cursor, json, link_next, no_certification, page},
 };
 use crate::{
+    bundle::Standing,
     certificate::Verdict,
     clock::Stamp,
     commitment::Commitment,
@@ -26,7 +27,7 @@ use crate::{
     },
     profile::RigName,
     record::{Record, Summary},
-    service::{Evidence, Service},
+    service::{Evidence, Exported, Service},
     witness::witness::Witness,
 };
 
@@ -79,9 +80,49 @@ pub async fn witness(
     TakesJson: TakesJson,
     State(service): State<Arc<Service>>,
 ) -> Result<Response<Body>, Problem> {
-    let Evidence { commitment, witnesses } = service.evidence(id).await?.ok_or_else(no_certification)?;
+    let evidence = service.evidence(id).await?.ok_or_else(no_certification)?;
+    Ok(json(StatusCode::OK, format!("{{\"certification\":\"{id}\",{}}}", members(evidence))))
+}
+
+/// What `verify` reads: a record, what it rests on, and where it stands in the ledger.
+#[derive(Serialize, ToSchema)]
+pub struct ExportedBundle {
+    record: Record,
+    /// Rounds with memory only: the commitment that the certification rests on.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    commitment: Option<Commitment>,
+    #[schema(value_type = std::collections::BTreeMap<String, Object>)]
+    witnesses: std::collections::BTreeMap<String, Witness>,
+    ledger: Standing,
+}
+
+/// A record with everything that is needed to check it offline: its witnesses, and the proof that it is in the signed ledger.
+///
+/// Keep the answer as it is: `bitassay verify FILE --key KEY` reads it. The record's place in the ledger is the `index` of `ledger.entry`.
+#[utoipa::path(
+    get, path = "/v1/certifications/{id}/bundle", tag = "certifications", operation_id = "get_bundle",
+    params(("id" = String, Path, description = "Identifier of the certification.")),
+    responses(
+        (status = 200, description = "The bundle.", body = ExportedBundle),
+        (status = 404, description = "No such certification.", body = ProblemDocument, content_type = "application/problem+json"),
+        (status = 503, description = "The ledger is not in order, or is still being gone through.", body = ProblemDocument, content_type = "application/problem+json"),
+    )
+)]
+pub async fn bundle(
+    CertificationPath(id): CertificationPath,
+    Query(()): Query<()>,
+    TakesJson: TakesJson,
+    State(service): State<Arc<Service>>,
+) -> Result<Response<Body>, Problem> {
+    let Exported { record, evidence, standing } = service.exported(id).await?.ok_or_else(no_certification)?;
+    let standing = serde_json::to_string(&standing).map_err(|error| Problem::internal(&error))?;
+    Ok(json(StatusCode::OK, format!("{{\"record\":{record},{},\"ledger\":{standing}}}", members(evidence))))
+}
+
+/// The documents are texts that were kept as they are, so that their digests still hold.
+fn members(Evidence { commitment, witnesses }: Evidence) -> String {
     let commitment = commitment.map_or_else(String::new, |document| format!("\"commitment\":{document},"));
-    Ok(json(StatusCode::OK, format!("{{\"certification\":\"{id}\",{commitment}\"witnesses\":{}}}", by_digest(witnesses))))
+    format!("{commitment}\"witnesses\":{}", by_digest(witnesses))
 }
 
 #[derive(IntoParams)]

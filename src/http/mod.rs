@@ -7,6 +7,7 @@ mod condition;
 mod health;
 mod intake;
 mod leakage;
+mod ledger;
 mod negotiation;
 pub mod openapi;
 pub mod problem;

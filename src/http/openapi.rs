@@ -25,6 +25,7 @@ use crate::scenario::LeakageDocument;
         (name = "commitments", description = "What is fixed ahead of the data of rounds with memory."),
         (name = "batches", description = "What rigs post."),
         (name = "certifications", description = "What was certified, and what was refused."),
+        (name = "ledger", description = "The Merkle tree over everything that is recorded, for auditors."),
         (name = "leakage", description = "What leaves the carrier, from what was measured."),
         (name = "health", description = "For whoever watches over the process."),
     ),

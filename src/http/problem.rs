@@ -13,7 +13,7 @@ use uuid::Uuid;
 use crate::{
     batch::BatchFault,
     fault::Fault,
-    ledger::{LedgerError, writer::WriteError},
+    ledger::{LedgerError, seal::SealError, writer::WriteError},
     service::{Check, OrderError, ProfileError, SolveError, SubmitError},
 };
 
@@ -167,6 +167,11 @@ impl Problem {
         problem
     }
 
+    fn ledger_fault(detail: &str) -> Self {
+        let detail = format!("The ledger is not in order, and nothing is signed or recorded until it is: {detail}.");
+        Self::new(StatusCode::SERVICE_UNAVAILABLE, detail).named("urn:bitassay:problem:ledger-fault", "The ledger is not in order")
+    }
+
     /// Something failed that the client can do nothing about. The log has the causes under the name that the client is given.
     pub fn internal(error: &(dyn std::error::Error + 'static)) -> Self {
         let instance = format!("urn:uuid:{}", Uuid::now_v7());
@@ -193,7 +198,39 @@ impl From<LedgerError> for Problem {
     fn from(error: LedgerError) -> Self {
         match error {
             LedgerError::Closed => Self::new(StatusCode::SERVICE_UNAVAILABLE, "The service is shutting down.").retry_after(5),
-            error => Self::internal(&error),
+            LedgerError::Fault { detail } => Self::ledger_fault(&detail),
+            error => match error.obstacle() {
+                Some(obstacle) => {
+                    tracing::error!(error = &error as &dyn std::error::Error, obstacle, "the ledger could not be used");
+                    let detail = format!(
+                        "The ledger cannot be used at present: {obstacle}. Nothing was recorded; send the same again later, under the same key."
+                    );
+                    Self::new(StatusCode::SERVICE_UNAVAILABLE, detail)
+                        .named("urn:bitassay:problem:storage", "The ledger cannot be used at present")
+                        .retry_after(10)
+                }
+                None => Self::internal(&error),
+            },
+        }
+    }
+}
+
+impl From<SealError> for Problem {
+    fn from(error: SealError) -> Self {
+        match error {
+            SealError::Fault(detail) => Self::ledger_fault(&detail),
+            SealError::Behind { checked, entries } => {
+                let detail = format!("The ledger is gone through before anything is signed: {checked} of {entries} entries so far.");
+                Self::new(StatusCode::SERVICE_UNAVAILABLE, detail).retry_after(10)
+            }
+            SealError::Ledger(error) => error.into(),
+            SealError::Key(error) => {
+                tracing::error!(error = &error as &dyn std::error::Error, "a checkpoint was not signed");
+                let detail = "The checkpoint cannot be kept beside the key, and is therefore not signed. The log says why.";
+                Self::new(StatusCode::SERVICE_UNAVAILABLE, detail)
+                    .named("urn:bitassay:problem:storage", "The ledger cannot be used at present")
+                    .retry_after(10)
+            }
         }
     }
 }

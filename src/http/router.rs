@@ -13,7 +13,7 @@ use tower_http::{catch_panic::CatchPanicLayer, trace::TraceLayer};
 use utoipa::OpenApi;
 use utoipa_axum::{router::OpenApiRouter, routes};
 
-use super::{batches, certifications, commitments, health, intake, leakage, openapi, problem::Problem, rigs, yields};
+use super::{batches, certifications, commitments, health, intake, leakage, ledger, openapi, problem::Problem, rigs, yields};
 use crate::service::Service;
 
 pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
@@ -28,6 +28,12 @@ pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
         .routes(routes!(certifications::list))
         .routes(routes!(certifications::get))
         .routes(routes!(certifications::witness))
+        .routes(routes!(certifications::bundle))
+        .routes(routes!(ledger::checkpoint))
+        .routes(routes!(ledger::key))
+        .routes(routes!(ledger::entry))
+        .routes(routes!(ledger::inclusion))
+        .routes(routes!(ledger::consistency))
         .routes(routes!(leakage::list, leakage::post))
         .routes(routes!(leakage::get))
         .routes(routes!(openapi::get))

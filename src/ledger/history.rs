@@ -53,7 +53,7 @@ impl<T> Page<T> {
 /// The readers' end of the ledger.
 #[derive(Debug, Clone)]
 pub struct History {
-    pool: SqlitePool,
+    pub(super) pool: SqlitePool,
 }
 
 const ANSWERED: &str = "SELECT c.id, s.body_digest, c.record, s.refusal FROM submissions s JOIN certifications c USING (entry) \

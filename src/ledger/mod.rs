@@ -3,8 +3,15 @@
 //! One task writes ([`writer`]), in groups that share a commit, and answers only after it; readers ([`history`]) have
 //! connections of their own that cannot write. What was answered is on disk.
 
+pub mod audit;
+pub mod backup;
+pub mod checkpoint;
+pub mod export;
 pub mod history;
+pub mod key;
+pub mod proofs;
 pub mod rows;
+pub mod seal;
 pub mod source;
 pub mod tree;
 pub mod writer;
@@ -15,13 +22,22 @@ use std::{
     time::Duration,
 };
 
+use tokio::task::JoinHandle;
+
 use sqlx::{
     ConnectOptions, Connection, SqliteConnection,
     migrate::MigrateError,
     sqlite::{SqliteConnectOptions, SqliteJournalMode, SqlitePoolOptions, SqliteSynchronous},
 };
 
-use self::{history::History, writer::Writer};
+use self::{
+    history::History,
+    key::{Key, KeyError},
+    seal::{Fault, Seal},
+    source::Draft,
+    writer::Writer,
+};
+use crate::clock::{Clock, Stamp, SystemClock};
 
 /// Oldest SQLite that is trusted with the ledger, as (major, minor, patch): earlier ones can, rarely, corrupt a database in
 /// WAL mode when connections checkpoint at the same time.
@@ -54,6 +70,10 @@ pub enum LedgerError {
     OutOfRange { what: &'static str },
     #[error("a {kind} that was written cannot be found to be logged")]
     Unlogged { kind: &'static str },
+    #[error("the ledger is not in order, so that nothing is recorded: {detail}")]
+    Fault { detail: String },
+    #[error(transparent)]
+    Key(#[from] KeyError),
     #[error("the ledger is closed")]
     Closed,
 }
@@ -64,11 +84,47 @@ impl From<sqlx::Error> for LedgerError {
     }
 }
 
+impl LedgerError {
+    /// What keeps the database from being written, if that is what is wrong and it may pass.
+    pub fn obstacle(&self) -> Option<&'static str> {
+        let Self::Database { source } = self else { return None };
+        let code: u32 = source.as_database_error()?.code()?.parse().ok()?;
+        // SQLite's primary result codes: the last byte.
+        match code & 0xff {
+            5 | 6 => Some("another process holds the database"),
+            8 => Some("the database is read-only"),
+            10 => Some("the disk failed"),
+            13 => Some("the disk is full"),
+            14 => Some("the database's files cannot be opened"),
+            _ => None,
+        }
+    }
+}
+
+/// Where a ledger is kept, and what is done about it unasked.
+#[derive(Debug, Clone)]
+pub struct Place {
+    pub database: PathBuf,
+    /// File of the signing key.
+    pub key: PathBuf,
+    /// How often everything is gone through again.
+    pub audit_interval: Duration,
+}
+
+impl Place {
+    /// A database with its key beside it.
+    pub fn of(database: &Path) -> Self {
+        Self { database: database.to_owned(), key: Key::beside(database), audit_interval: Duration::from_secs(3600) }
+    }
+}
+
 /// An open ledger.
 #[derive(Debug)]
 pub struct Ledger {
     pub history: History,
     pub writer: Writer,
+    pub seal: Arc<Seal>,
+    audits: JoinHandle<()>,
 }
 
 impl Ledger {
@@ -77,6 +133,15 @@ impl Ledger {
     /// # Errors
     /// A file that cannot be opened or migrated, an old SQLite, or a setting that did not take.
     pub async fn open(path: &Path) -> Result<Self, LedgerError> {
+        Self::open_at(&Place::of(path)).await
+    }
+
+    /// As [`Self::open`], with the key in another place.
+    ///
+    /// # Errors
+    /// As [`Self::open`], or a key that cannot be used.
+    pub async fn open_at(place: &Place) -> Result<Self, LedgerError> {
+        let path = &place.database;
         let cannot_open = |source| LedgerError::Open { path: path.to_owned(), source: Arc::new(source) };
         let options = SqliteConnectOptions::new()
             .filename(path)
@@ -88,23 +153,71 @@ impl Ledger {
         check_sqlite(&mut connection).await?;
         MIGRATIONS.run(&mut connection).await.map_err(|source| LedgerError::Migrate { source: Arc::new(source) })?;
         check_settings(&mut connection).await?;
-        let mut transaction = connection.begin_with("BEGIN IMMEDIATE").await?;
-        let older = tree::log_older_rows(&mut transaction).await?;
-        transaction.commit().await?;
-        if older > 0 {
-            tracing::info!(entries = older, "rows that are older than the tree were logged in it");
-        }
+        let key = Key::open(&place.key)?;
+        let fault = Fault::default();
+        prepare(&mut connection, &key, &fault, SystemClock.now()).await?;
         // The writer's connection exists first: a reader cannot create the files that WAL mode needs.
         let pool = SqlitePoolOptions::new().max_connections(READERS).connect_with(options.read_only(true)).await.map_err(cannot_open)?;
-        Ok(Self { history: History::new(pool), writer: Writer::start(connection) })
+        let seal = Seal::new(pool.clone(), key, fault.clone());
+        let audits = seal.watch(place.audit_interval);
+        Ok(Self { history: History::new(pool), writer: Writer::start(connection, fault), seal, audits })
     }
 
     /// Writes what was handed in, then closes all connections.
     pub async fn close(&self) {
+        self.audits.abort();
+        self.seal.close().await;
         // The writer last: a connection that cannot write cannot fold the write-ahead log into the file when it leaves.
         self.history.close().await;
         self.writer.close().await;
     }
+}
+
+/// Brings the tree up to date, unless the ledger is not an extension of what was signed: logs rows that are older than the tree, and the key
+/// if it is another one than before.
+async fn prepare(connection: &mut SqliteConnection, key: &Key, fault: &Fault, now: Stamp) -> Result<(), LedgerError> {
+    let mut transaction = connection.begin_with("BEGIN IMMEDIATE").await?;
+    match audit::check_signed(&mut transaction, key.last()).await {
+        Ok(()) => {}
+        Err(audit::AuditError::Fault(detail)) => {
+            fault.set(&detail);
+            return Ok(());
+        }
+        Err(audit::AuditError::Ledger(error)) => return Err(error),
+    }
+    let older = tree::log_older_rows(&mut transaction).await?;
+    if older > 0 {
+        tracing::info!(entries = older, "rows that are older than the tree were logged in it");
+    }
+    let sql = "SELECT entry ->> '$.body.key' FROM tree_leaves WHERE kind = 'key' ORDER BY leaf DESC LIMIT 1";
+    let known: Option<String> = sqlx::query_scalar(sql).fetch_optional(&mut *transaction).await?;
+    let current = key.verifier().to_string();
+    if known.as_ref() != Some(&current) {
+        let number: i64 =
+            sqlx::query_scalar("SELECT COUNT(*) + 1 FROM tree_leaves WHERE kind = 'key'").fetch_one(&mut *transaction).await?;
+        if let Some(known) = &known {
+            tracing::warn!(%known, %current, "the ledger continues under another key");
+        }
+        let body = [("key".to_owned(), current.into()), ("replaces".to_owned(), known.into())];
+        let subject = number.to_string();
+        let draft = Draft { kind: "key", subject, recorded_at: now, body: body.into_iter().collect(), texts: vec![] };
+        tree::append(&mut transaction, &draft).await?;
+    }
+    transaction.commit().await?;
+    Ok(())
+}
+
+/// A connection to a ledger that a service may be using, which writes nothing.
+///
+/// # Errors
+/// A file that cannot be opened, or has another layout.
+pub async fn open_beside(database: &Path) -> Result<SqliteConnection, LedgerError> {
+    let cannot_open = |source| LedgerError::Open { path: database.to_owned(), source: Arc::new(source) };
+    // Not read-only for SQLite, which would be unable to create the files that WAL mode needs.
+    let options = SqliteConnectOptions::new().filename(database).busy_timeout(BUSY_TIMEOUT);
+    let mut connection = options.connect().await.map_err(cannot_open)?;
+    sqlx::query("SELECT 1 FROM tree_leaves LIMIT 1").fetch_optional(&mut connection).await.map_err(cannot_open)?;
+    Ok(connection)
 }
 
 async fn check_sqlite(connection: &mut SqliteConnection) -> Result<(), LedgerError> {

@@ -13,7 +13,7 @@ use std::sync::Arc;
 
 use serde_json::{Map, Value};
 use sha2::{Digest, Sha256};
-use sqlx::{Column, Row, SqliteConnection, TypeInfo, ValueRef, sqlite::SqliteRow};
+use sqlx::{AssertSqlSafe, Column, Row, SqliteConnection, TypeInfo, ValueRef, sqlite::SqliteRow};
 
 use super::LedgerError;
 use crate::clock::Stamp;
@@ -34,7 +34,7 @@ pub const PROFILE: Source = Source {
     kind: "profile",
     row: "SELECT rig || '/' || version AS subject, recorded_at, rig, version, profile AS profile_sha256 FROM rig_profiles \
           WHERE rig = substr(?1, 1, instr(?1, '/') - 1) AND version = CAST(substr(?1, instr(?1, '/') + 1) AS INTEGER)",
-    rows: "SELECT rig || '/' || version, recorded_at FROM rig_profiles ORDER BY rowid",
+    rows: "SELECT rig || '/' || version AS subject, recorded_at FROM rig_profiles ORDER BY rowid",
 };
 
 /// Commitments; the subject is the identifier.
@@ -43,7 +43,7 @@ pub const COMMITMENT: Source = Source {
     row: "SELECT id AS subject, recorded_at, commitment AS number, rig, profile_version, level, digest, document AS document_sha256, \
           (SELECT json_group_array(digest) FROM (SELECT digest FROM commitment_witnesses w WHERE w.commitment = m.commitment ORDER BY digest)) \
           AS witnesses_list FROM commitments m WHERE id = ?1",
-    rows: "SELECT id, recorded_at FROM commitments ORDER BY commitment",
+    rows: "SELECT id AS subject, recorded_at FROM commitments ORDER BY commitment",
 };
 
 /// Certifications and refusals; the subject is the identifier.
@@ -54,7 +54,7 @@ pub const CERTIFICATION: Source = Source {
           (SELECT m.id FROM certification_commitments JOIN commitments m USING (commitment) WHERE entry = c.entry) AS commitment, \
           (SELECT json_group_array(digest) FROM (SELECT digest FROM certification_witnesses WHERE entry = c.entry ORDER BY digest)) \
           AS witnesses_list FROM certifications c LEFT JOIN submissions s ON s.entry = c.entry WHERE c.id = ?1",
-    rows: "SELECT id, recorded_at FROM certifications ORDER BY entry",
+    rows: "SELECT id AS subject, recorded_at FROM certifications ORDER BY entry",
 };
 
 /// Leakage budgets; the subject is the digest.
@@ -88,6 +88,13 @@ impl Source {
     pub(super) async fn draft(&self, connection: &mut SqliteConnection, subject: &str) -> Result<Option<Draft>, LedgerError> {
         let row = sqlx::query(self.row).bind(subject).fetch_optional(connection).await?;
         row.map(|row| read(self.kind, &row)).transpose()
+    }
+
+    /// The subject of a row that is not logged.
+    pub(super) async fn unlogged(&self, connection: &mut SqliteConnection) -> Result<Option<String>, LedgerError> {
+        let sql =
+            format!("SELECT subject FROM ({}) WHERE subject NOT IN (SELECT subject FROM tree_leaves WHERE kind = ?) LIMIT 1", self.rows);
+        Ok(sqlx::query_scalar(AssertSqlSafe(sql)).bind(self.kind).fetch_optional(connection).await?)
     }
 
     /// Subjects and times of all rows, in microseconds, in the order in which they were written.

@@ -12,6 +12,7 @@ use super::{
     LedgerError,
     history::answered_within,
     rows::{Answered, Entry, word},
+    seal::Fault,
     source::{BUDGET, CERTIFICATION, COMMITMENT, PROFILE},
     tree,
 };
@@ -161,9 +162,9 @@ pub struct Writer {
 }
 
 impl Writer {
-    pub(super) fn start(connection: SqliteConnection) -> Self {
+    pub(super) fn start(connection: SqliteConnection, fault: Fault) -> Self {
         let (inbox, items) = mpsc::channel(GROUP);
-        Self { inbox: Mutex::new(Some(inbox)), task: Mutex::new(Some(tokio::spawn(run(connection, items)))) }
+        Self { inbox: Mutex::new(Some(inbox)), task: Mutex::new(Some(tokio::spawn(run(connection, items, fault)))) }
     }
 
     /// Whether the writer takes items.
@@ -232,9 +233,14 @@ impl Writer {
     }
 }
 
-async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>) {
+async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>, fault: Fault) {
     let mut group = Vec::with_capacity(GROUP);
     while items.recv_many(&mut group, GROUP).await > 0 {
+        if let Some(detail) = fault.get() {
+            let error = LedgerError::Fault { detail: detail.to_owned() };
+            group.drain(..).for_each(|item| item.failed(&error).tell());
+            continue;
+        }
         for outcome in commit(&mut connection, group.drain(..)).await {
             outcome.tell();
         }
