@@ -199,6 +199,10 @@ impl From<LedgerError> for Problem {
         match error {
             LedgerError::Closed => Self::new(StatusCode::SERVICE_UNAVAILABLE, "The service is shutting down.").retry_after(5),
             LedgerError::Fault { detail } => Self::ledger_fault(&detail),
+            error if error.is_damage() => {
+                tracing::error!(error = &error as &dyn std::error::Error, "the database is damaged");
+                Self::ledger_fault("the database is damaged")
+            }
             error => match error.obstacle() {
                 Some(obstacle) => {
                     tracing::error!(error = &error as &dyn std::error::Error, obstacle, "the ledger could not be used");

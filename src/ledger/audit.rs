@@ -28,7 +28,10 @@ impl From<LedgerError> for AuditError {
     fn from(error: LedgerError) -> Self {
         // What cannot be read because of what it holds is a fault. Everything else may pass.
         match &error {
-            LedgerError::Database { source } if is_corrupt(source) => Self::Fault(format!("the database cannot be read: {source}")),
+            LedgerError::Database { source } if error.is_damage() => Self::Fault(format!("the database cannot be read: {source}")),
+            LedgerError::Database { source } if matches!(**source, sqlx::Error::ColumnDecode { .. } | sqlx::Error::Decode(_)) => {
+                Self::Fault(format!("the database cannot be read: {source}"))
+            }
             LedgerError::Unreadable { .. } | LedgerError::OutOfRange { .. } => Self::Fault(error.to_string()),
             _ => Self::Ledger(error),
         }
@@ -39,12 +42,6 @@ impl From<sqlx::Error> for AuditError {
     fn from(source: sqlx::Error) -> Self {
         LedgerError::from(source).into()
     }
-}
-
-fn is_corrupt(error: &sqlx::Error) -> bool {
-    // SQLITE_CORRUPT and SQLITE_NOTADB; a code's last byte says which kind it is.
-    let code = error.as_database_error().and_then(|error| error.code()?.parse::<u32>().ok());
-    code.is_some_and(|code| [11, 26].contains(&(code & 0xff))) || matches!(error, sqlx::Error::ColumnDecode { .. } | sqlx::Error::Decode(_))
 }
 
 /// How far the ledger was gone through, from its first entry.

@@ -85,12 +85,21 @@ impl From<sqlx::Error> for LedgerError {
 }
 
 impl LedgerError {
-    /// What keeps the database from being written, if that is what is wrong and it may pass.
-    pub fn obstacle(&self) -> Option<&'static str> {
+    /// SQLite's primary result code, the last byte of the one that it gives.
+    fn code(&self) -> Option<u32> {
         let Self::Database { source } = self else { return None };
         let code: u32 = source.as_database_error()?.code()?.parse().ok()?;
-        // SQLite's primary result codes: the last byte.
-        match code & 0xff {
+        Some(code & 0xff)
+    }
+
+    /// Whether the file does not hold what a database holds.
+    pub fn is_damage(&self) -> bool {
+        matches!(self.code(), Some(11 | 26))
+    }
+
+    /// What keeps the database from being written, if that is what is wrong and it may pass.
+    pub fn obstacle(&self) -> Option<&'static str> {
+        match self.code()? {
             5 | 6 => Some("another process holds the database"),
             8 => Some("the database is read-only"),
             10 => Some("the disk failed"),

@@ -224,7 +224,7 @@ mod tests {
     use crate::solver::pseudorandom::Numbers;
 
     fn solved(program: &Program) -> Candidate {
-        super::super::solve(program, Limits::default())
+        super::solve(program, Limits::default())
     }
 
     fn term(row: usize, column: usize, variable: usize, coefficient: f64) -> Term {

@@ -49,7 +49,8 @@ impl Client {
         self.try_call(method, path, headers, body).expect("an answer")
     }
 
-    fn try_call(&self, method: &str, path: &str, headers: &[(&str, &str)], body: Option<&[u8]>) -> Option<Reply> {
+    /// As [`Self::call`]; `None` if the server has gone.
+    pub fn try_call(&self, method: &str, path: &str, headers: &[(&str, &str)], body: Option<&[u8]>) -> Option<Reply> {
         let mut request = Request::builder().method(method).uri(format!("{}{path}", self.base));
         for (name, value) in headers {
             request = request.header(*name, *value);

@@ -9,5 +9,5 @@ fn a_running_server_is_live_and_ready() {
     assert_eq!(client.get("/livez").expect(200).json()["status"], "live");
     let ready = client.get("/readyz").expect(200).json();
     let names: Vec<&str> = ready["checks"].as_array().unwrap().iter().map(|check| check["name"].as_str().unwrap()).collect();
-    assert_eq!(names, ["accepting", "database", "writer", "solvers"]);
+    assert_eq!(names, ["accepting", "database", "writer", "ledger", "solvers"]);
 }

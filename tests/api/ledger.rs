@@ -5,8 +5,11 @@ use bitassay::{
     clock::Stamp,
     ledger::{
         Ledger,
+        checkpoint::Verifier,
         history::Filter,
+        proofs::includes,
         rows::Entry,
+        tree::{Hash, leaf_hash},
         writer::{Expectation, WriteError},
     },
     profile::{Profile, RigName},
@@ -137,7 +140,7 @@ async fn an_item_that_fails_takes_no_other_with_it() {
     let now = Stamp::from_microseconds(0).unwrap();
     ledger.writer.keep_profile(rig.clone(), profile, Expectation::Unstated, now).await.unwrap();
 
-    let witness = format!("sha256:{}", "0".repeat(64));
+    let witness = "sha256:44136fa355b3678a1146ad16f7e8649e94fb4fc21fe77e8310c060f61caaff8a".to_owned(); // of `{}`
     // All of these wait before the writer has its turn: they share a transaction. The second fails at its witness, after its
     // certification was inserted.
     let (first, second, third, again, reused) = tokio::join!(
@@ -165,4 +168,61 @@ async fn an_item_that_fails_takes_no_other_with_it() {
 
     ledger.close().await;
     assert!(matches!(ledger.writer.keep_entry(entry("d", &witness)).await, Err(WriteError::Ledger(_))));
+}
+
+#[test]
+fn the_tree_is_asked_for_entries_and_proofs() {
+    let (running, client) = with_rig();
+    client.post_batch("bench", "a", &batch(1000)).expect(201);
+    client.post_batch("bench", "b", &batch(999)).expect(422);
+    let key: Verifier = client.get("/v1/ledger/key").expect(200).text().trim().parse().unwrap();
+    let note = client.get("/v1/ledger/checkpoint").expect(200);
+    assert_eq!(note.header("content-type"), Some("text/plain; charset=utf-8"));
+    let checkpoint = key.confirm(note.text()).unwrap();
+    // The key, the profile, two batches.
+    assert_eq!(checkpoint.size, 4);
+    // Asked again, with nothing new: the same bytes.
+    assert_eq!(client.get("/v1/ledger/checkpoint").expect(200).body, note.body);
+    for index in 0..4 {
+        let line = client.get(&format!("/v1/ledger/entries/{index}")).expect(200).text().to_owned();
+        let proof = client.get(&format!("/v1/ledger/proofs/inclusion?index={index}&size=4")).expect(200).json();
+        assert_eq!(
+            (&proof["root"], &proof["leaf"]),
+            (&hex::encode(checkpoint.root).into(), &hex::encode(leaf_hash(line.as_bytes())).into())
+        );
+        let hashes: Vec<Hash> = proof["proof"].as_array().unwrap().iter().map(|hash| hex_hash(hash.as_str().unwrap())).collect();
+        assert!(includes(4, &checkpoint.root, index, &line, &hashes));
+    }
+    for (path, status, culprit) in [
+        ("entries/4", 404, ""),
+        ("entries/01", 404, ""),
+        ("entries/-1", 404, ""),
+        ("proofs/inclusion?index=0", 400, "size"),
+        ("proofs/inclusion?index=x&size=4", 400, "index"),
+        ("proofs/inclusion?index=0&size=4&more=1", 400, "more"),
+        ("proofs/inclusion?index=4&size=4", 422, "index"),
+        ("proofs/inclusion?index=0&size=0", 422, "index"),
+        ("proofs/inclusion?index=0&size=5", 422, "size"),
+        ("proofs/inclusion?index=0&size=18446744073709551615", 422, "size"),
+        ("proofs/consistency?from=0&to=4", 422, "from"),
+        ("proofs/consistency?from=4&to=3", 422, "from"),
+        ("proofs/consistency?from=3&to=5", 422, "to"),
+        ("proofs/consistency?from=3", 400, "to"),
+    ] {
+        let problem = client.get(&format!("/v1/ledger/{path}")).expect(status).json();
+        assert_eq!(problem["errors"][0]["parameter"].as_str().unwrap_or(""), culprit, "{path}: {problem}");
+    }
+    for (sql, words) in [
+        ("UPDATE tree_leaves SET entry = '{}'", "write-once"),
+        ("DELETE FROM tree_leaves", "write-once"),
+        ("INSERT OR REPLACE INTO tree_leaves SELECT leaf, kind, 'x', entry, nodes FROM tree_leaves", "next leaf"),
+        ("INSERT OR REPLACE INTO tree_leaves SELECT 4, kind, subject, entry, nodes FROM tree_leaves WHERE leaf = 2", "each subject once"),
+    ] {
+        let refused = refusal(&running, sql).unwrap_or_else(|| panic!("not refused: {sql}"));
+        assert!(refused.contains(words), "{sql}: {refused}");
+    }
+}
+
+fn hex_hash(text: &str) -> Hash {
+    hex::decode(text).unwrap().try_into().unwrap()
 }
