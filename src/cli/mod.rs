@@ -6,9 +6,12 @@ mod compare;
 mod demo;
 mod document;
 mod export;
+mod health;
 mod leakage;
 mod openapi;
 mod serve;
+mod settings;
+mod token;
 mod verify;
 
 use std::process::ExitCode;
@@ -28,6 +31,9 @@ pub struct CommandLine {
 #[derive(Subcommand)]
 enum Command {
     Serve(serve::Serve),
+    #[command(subcommand)]
+    Token(token::Token),
+    Health(health::Health),
     Certify(certify::Certify),
     Verify(verify::Verify),
     Leakage(leakage::Leakage),
@@ -42,6 +48,8 @@ enum Command {
 pub fn run() -> ExitCode {
     let outcome = match CommandLine::parse().command {
         Command::Serve(command) => command.run(),
+        Command::Token(command) => command.run(),
+        Command::Health(command) => command.run(),
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
         Command::Leakage(command) => command.run(),

@@ -86,6 +86,7 @@ fn text(committed: &Committed, current: Option<bool>) -> Result<String, Problem>
 /// they are.
 #[utoipa::path(
     post, path = "/v1/rigs/{rig}/commitments", tag = "commitments", operation_id = "post_commitment",
+    security(("token" = ["operator"])),
     params(("rig" = String, Path, description = "Name of the rig.")),
     request_body(content = CommitmentOrder, content_type = "application/json"),
     responses(
@@ -112,6 +113,7 @@ pub async fn post(
 /// One commitment, as it was first answered.
 #[utoipa::path(
     get, path = "/v1/commitments/{id}", tag = "commitments", operation_id = "get_commitment",
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
     params(("id" = String, Path, description = "Identifier of the commitment.")),
     responses(
         (status = 200, description = "The commitment.", body = Answer),
@@ -142,6 +144,7 @@ pub struct CommitmentWitnesses {
 /// A commitment and its witnesses, enough to check it offline, before there is any data.
 #[utoipa::path(
     get, path = "/v1/commitments/{id}/witness", tag = "commitments", operation_id = "get_commitment_witness",
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
     params(("id" = String, Path, description = "Identifier of the commitment.")),
     responses(
         (status = 200, description = "The commitment, and its witnesses by digest.", body = CommitmentWitnesses),
@@ -179,6 +182,7 @@ impl FromParameters for CommitmentsQuery {
 /// A rig's commitments, newest first; `current` marks the one for batches that begin now.
 #[utoipa::path(
     get, path = "/v1/rigs/{rig}/commitments", tag = "commitments", operation_id = "list_commitments",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     params(("rig" = String, Path, description = "Name of the rig."), CommitmentsQuery),
     responses(
         (status = 200, description = "One page.", body = CommitmentPage, headers(("Link" = String))),

@@ -32,6 +32,7 @@ const CURSOR: &str = "leakage:";
 /// A profile's or a batch's `leakage` may name the budget by that digest. Keeping the same budget again changes nothing.
 #[utoipa::path(
     post, path = "/v1/leakage", tag = "leakage", operation_id = "post_leakage",
+    security(("token" = ["rig"]), ("token" = ["operator"])),
     request_body(
         description = "`carrier_dimension` and `contributions`, each with a `source`: coherent, thermal, g2, coincidence, heralded, vacuum, overlap or \
                        side-mode, and what was measured of it.",
@@ -63,6 +64,7 @@ pub async fn post(
 /// One budget, byte for byte as its digest is of it: what was measured, without the figures that follow from it.
 #[utoipa::path(
     get, path = "/v1/leakage/{digest}", tag = "leakage", operation_id = "get_leakage",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     params(("digest" = String, Path, description = "`sha256:` digest of the budget.")),
     responses(
         (status = 200, description = "The budget document; posted again, it is answered with its figures.", body = Object),
@@ -117,6 +119,7 @@ impl FromParameters for BudgetsQuery {
 /// Budgets that are kept, newest first, with their figures.
 #[utoipa::path(
     get, path = "/v1/leakage", tag = "leakage", operation_id = "list_leakage", params(BudgetsQuery),
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
     responses((status = 200, description = "One page.", body = BudgetPage, headers(("Link" = String))))
 )]
 pub async fn list(

@@ -61,11 +61,19 @@ pub const CERTIFICATION: Source = Source {
 pub const BUDGET: Source = Source {
     kind: "leakage-budget",
     row: "SELECT digest AS subject, recorded_at, budget AS number, digest, document AS document_sha256 FROM leakage_budgets WHERE digest = ?1",
-    rows: "SELECT digest, recorded_at FROM leakage_budgets ORDER BY budget",
+    rows: "SELECT digest AS subject, recorded_at FROM leakage_budgets ORDER BY budget",
+};
+
+/// Changes of tokens; the subject is `token/change`.
+pub const TOKEN: Source = Source {
+    kind: "token",
+    row: "SELECT token || '/' || kind AS subject, recorded_at, change AS number, token, kind AS change, document AS document_sha256 \
+          FROM token_changes WHERE token = substr(?1, 1, instr(?1, '/') - 1) AND kind = substr(?1, instr(?1, '/') + 1)",
+    rows: "SELECT token || '/' || kind AS subject, recorded_at FROM token_changes ORDER BY change",
 };
 
 /// Every table that is logged.
-pub const SOURCES: [Source; 4] = [BUDGET, PROFILE, COMMITMENT, CERTIFICATION];
+pub const SOURCES: [Source; 5] = [BUDGET, PROFILE, COMMITMENT, CERTIFICATION, TOKEN];
 
 /// What is to be logged about one row.
 #[derive(Debug, Clone, PartialEq)]
