@@ -210,10 +210,6 @@ pub(crate) fn expected_of(plan: &Plan, power: u32, witnesses: &[&CheckedWitness]
     powers.filter_map(|power| expectation(plan, power, witnesses).ok()).map(|(bits, _)| bits).fold(0.0, f64::max)
 }
 
-fn checked(found: &[Found]) -> Vec<&CheckedWitness> {
-    found.iter().map(|found| &found.witness).collect()
-}
-
 /// Expected bits at a power, and the factors they come from; one witness for each target.
 fn expectation(plan: &Plan, power: u32, witnesses: &[&CheckedWitness]) -> Result<(f64, Table<f64>), CommitError> {
     let factors = plan_factors(&plan.scenario, &plan.distribution, plan.expected.table(), power, witnesses)?;

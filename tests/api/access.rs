@@ -44,7 +44,6 @@ const TABLE: &[(&str, &str)] = &[
     ("metrics", "public"),
     ("post_batch", "rig"),
     ("post_commitment", "operator"),
-    ("post_leakage", "rig operator auditor"),
     ("post_forecast", "rig operator auditor"),
     ("post_leakage", "rig operator"),
     ("put_rig", "operator"),

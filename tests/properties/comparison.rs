@@ -44,6 +44,8 @@ fn the_table_shows_what_both_models_give() {
             level,
             entropy: EntropyChoice::Power,
             lost_rounds: None,
+            scores: None,
+            bracket: false,
         };
         let certified = certify(&Request::try_from(request).unwrap()).certificate.certified_bits;
         let ratio = line.independent.bits as f64 / certified as f64;

@@ -108,13 +108,15 @@ fn three_outcomes_are_certified_and_verified() {
         level: LevelChoice::Lean,
         entropy: EntropyChoice::Guessing,
         lost_rounds: None,
+        scores: None,
+        bracket: false,
     };
     let guessing = certify(&Request::try_from(document.clone()).unwrap()).certificate;
     document.entropy = EntropyChoice::Power;
     let certified = certify(&Request::try_from(document).unwrap());
     let power = certified.certificate.targets[0].power.as_ref().unwrap();
     println!("{} bits, {} from the guessing probability", certified.certificate.certified_bits, guessing.certified_bits);
-    assert!(power.min_entropy > 0.0 && certified.certificate.certified_bits > guessing.certified_bits);
+    assert!(power.min_entropy.is_some_and(|bits| bits > 0.0) && certified.certificate.certified_bits > guessing.certified_bits);
     // No outcome has more entropy than its distribution.
     let shannon: f64 = [0.7f64, 0.2, 0.1].iter().map(|p| -p * p.log2()).sum();
     assert!(power.entropy_per_round < shannon);
