@@ -49,12 +49,6 @@ pub enum Answer {
     Unverified,
 }
 
-/// A solve that did not end within the solver's tolerances is good enough all the same if rounding its witness costs no more than this
-/// in guessing probability; the bound is what the exact check says in any case.
-const GOOD_ENOUGH: f64 = 2e-6;
-/// The same for power entropies, in nats.
-const GOOD_ENOUGH_POWER: f64 = 2e-5;
-
 /// Upper bound on the guessing probability of a target of the scenario, for every model whose behaviour lies in the place.
 ///
 /// Starts at `level` and falls to coarser ones where a solve does not end well; the least of the bounds that were checked is
@@ -82,7 +76,7 @@ pub fn guessing_probability(scenario: &Scenario, target: Setting, place: Place, 
         }
         let improves = |found: &Found| best.as_ref().is_none_or(|best| found.bound.exact() < best.bound.exact());
         best = found.filter(improves).or(best);
-        if best.as_ref().is_some_and(|best| status == Status::Solved || best.witness.rounding_cost() <= GOOD_ENOUGH) {
+        if best.is_some() && status == Status::Solved {
             break;
         }
     }
@@ -164,7 +158,7 @@ fn attempt(geometry: Geometry, question: &Question, place: Place, level: Level, 
         Attempt { status: candidate.status, found, facets }
     };
     let first = solve_structured(&posed.program, limits).map(examined);
-    if let Some(first) = first.as_ref().filter(|first| first.is_good(&question.claim)) {
+    if let Some(first) = first.as_ref().filter(|first| first.is_good()) {
         return first.clone();
     }
     let second = examined(solve_generally(&posed.program, limits));
@@ -176,9 +170,8 @@ fn attempt(geometry: Geometry, question: &Question, place: Place, level: Level, 
 
 impl Attempt {
     /// Whether another solver is not worth asking.
-    fn is_good(&self, claim: &Claim) -> bool {
-        let enough = if matches!(claim, Claim::Power { .. }) { GOOD_ENOUGH_POWER } else { GOOD_ENOUGH };
-        self.found.as_ref().is_some_and(|found| self.status == Status::Solved || found.witness.rounding_cost() <= enough)
+    fn is_good(&self) -> bool {
+        self.status == Status::Solved && self.found.is_some()
     }
 
     fn value(&self) -> Option<&BigRational> {
