@@ -11,7 +11,7 @@ use crate::{
     scenario::{Geometry, Setting},
 };
 
-/// Largest defect of a matrix (a state's norm, a measurement's completeness and positivity, a carrier's being a projector of rank d) with which
+/// Largest defect of a matrix (a state's norm, a measurement's completeness and positivity, a carrier's being a projector of rank d at most) with which
 /// it is still taken for what it should be.
 pub const TOLERANCE: f64 = 1e-9;
 /// What floating-point sums and eigenvalues of matrices of this size may be wrong by.
@@ -30,7 +30,7 @@ pub enum ModelFault {
     State { part: usize, x: usize },
     #[error("measurement {y} of part {part} is not complete, or not positive")]
     Measurement { part: usize, y: usize },
-    #[error("the carrier of part {0} is not a projector of the carrier dimension")]
+    #[error("the carrier of part {0} is not a projector of at most the carrier dimension")]
     Carrier(usize),
 }
 
@@ -89,8 +89,9 @@ pub fn attained(model: &Model, geometry: Geometry, target: Setting, objective: O
         let weight = part.weight / total;
         let carrier = &part.carrier;
         let rank = carrier.trace().re;
-        let wanted = f64::from(carrier_dimension).min(side as f64);
-        let skew = (carrier * carrier - carrier).norm().max((carrier - carrier.adjoint()).norm()).max((rank - wanted).abs());
+        // A smaller carrier may be enlarged, which only lowers the leakage.
+        let excess = rank - f64::from(carrier_dimension);
+        let skew = (carrier * carrier - carrier).norm().max((carrier - carrier.adjoint()).norm()).max(excess);
         if !(skew <= TOLERANCE) {
             return Err(ModelFault::Carrier(number));
         }

@@ -55,7 +55,7 @@ impl Space {
         let mut best: Option<(f64, Column)> = None;
         let mut before = f64::NEG_INFINITY;
         for _ in 0..steps {
-            let turned = self.turn_carrier(&mut strategy, prices);
+            self.turn_carrier(&mut strategy, prices);
             self.improve_states(&mut strategy, prices, &slope);
             self.improve_measurements(&mut strategy, prices, &slope);
             let column = self.column(strategy.clone());
@@ -64,7 +64,7 @@ impl Space {
             if best.as_ref().is_none_or(|(most, _)| gain > *most) {
                 best = Some((gain, column));
             }
-            if !turned && gain - before < STEP || gain - before < STEP && gain.is_finite() && before.is_finite() {
+            if gain - before < STEP {
                 break;
             }
             before = gain;
@@ -199,10 +199,10 @@ impl Space {
     }
 
     /// Turns the whole strategy so that the best carrier for its states, the top-d eigenspace of `Σ_x μ_x ρ_x`, is spanned by the first axes.
-    fn turn_carrier(&self, strategy: &mut Strategy, prices: &Prices) -> bool {
+    fn turn_carrier(&self, strategy: &mut Strategy, prices: &Prices) {
         let free = self.confinement.iter().all(|confinement| *confinement == Confinement::Free);
         if !free || self.carrier_dimension >= self.dimension {
-            return false;
+            return;
         }
         let mut weighted = Matrix::zeros(self.dimension, self.dimension);
         for (state, multiplier) in strategy.states.iter().zip(&prices.leakage) {
@@ -219,7 +219,6 @@ impl Space {
         for element in strategy.measurements.iter_mut().flatten() {
             *element = &back * &*element * &turn;
         }
-        true
     }
 }
 

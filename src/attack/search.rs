@@ -222,14 +222,15 @@ impl Search {
             self.columns.push(column);
         }
         let centre = hint.unwrap_or_else(|| self.free());
-        let mut kept: Option<Prices> = None;
+        let (mut kept, mut last): (Option<Prices>, Option<Prices>) = (None, None);
         for round in 0..self.effort.rounds {
             let Some(Priced { prices, leans, value }) = self.constraints.prices(&self.columns, &centre, self.reach) else {
-                return (round, None, false);
+                return (round, last, false);
             };
             if !leans && value >= self.space.objective.largest() - FULL {
                 return (round, Some(prices), true);
             }
+            last = Some(prices.clone());
             // Prices of an early round swing widely; between them and those before lie better ones.
             let middle = kept.as_ref().map_or_else(|| prices.clone(), |kept| kept.mixed_with(&prices, KEPT));
             let mut found = self.improved(&middle, &prices);

@@ -112,3 +112,15 @@ fn power_entropy_of_the_noisy_code() {
     assert!(attack.residual < 1e-10);
     assert!(bound <= reached && reached < 0.4905 && reached - bound < 0.02);
 }
+
+/// With a dimension for every preparation the outcomes can be written into the carrier: the adversary knows them all. A carrier larger than that
+/// is no different.
+#[test]
+fn large_carriers_give_everything_away() {
+    for (dimension, leakage) in [(4, 0.0), (5, 0.01)] {
+        let behaviour = code(2, 0.99);
+        let (scenario, place) = (scenario(4, 2, 2, dimension, leakage), Place::Behaviour(&behaviour));
+        let found = attack(&scenario, TARGET, place, Objective::Guess, Hints::default(), Effort::default()).unwrap();
+        assert!(found.residual < 1e-10 && found.guessing_probability() > 1.0 - 1e-6, "{}", found.guessing_probability());
+    }
+}
