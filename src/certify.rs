@@ -44,9 +44,9 @@ pub fn certify(request: &Request) -> Certification {
             }
             Answer::Bounded(found) => {
                 draft.add(request, *target, found.level, &found.witness, &found.bound);
-                if let Some((power, _)) = power_terms(request, *target).filter(|_| found.bound.rounded_up() < 1.0)
-                    && let Some(found) =
-                        power_entropy(request.scenario(), *target, evidence.place(), power, request.start, Limits::default())
+                let PowerTerms { power, .. } = power_terms(request, *target);
+                if let Some(level) = request.power_start.filter(|_| found.bound.rounded_up() < 1.0)
+                    && let Some(found) = power_entropy(request.scenario(), *target, evidence.place(), power, level, Limits::default())
                 {
                     draft.add_power(request, *target, &evidence, found.level, &found.witness, &found.bound);
                 }
@@ -96,7 +96,8 @@ pub(crate) fn certify_counted(
         failure: Failure { estimation, hashing },
         level,
         start: Level::Lean,
-        entropy: EntropyChoice::Guessing,
+        power_start: None,
+        entropy: EntropyChoice::Power,
         lost_rounds,
     };
     let mut certificate = Draft::new(&request, None).certificate;
@@ -139,19 +140,44 @@ pub(crate) fn evidence(request: &Request) -> Evidence {
         (Data::Scores(scores), _) => Evidence::Scores(scores.clone()),
         (Data::Counts(counts), RoundModel::PlugIn) => Evidence::Point(frequencies(counts)),
         (Data::Counts(counts), RoundModel::Independent | RoundModel::Memory) => {
-            // A power entropy takes the other half.
-            let share = if request.entropy == EntropyChoice::Power { 0.5 } else { 1.0 };
-            Evidence::Region(region(counts, request.failure.estimation * share))
+            Evidence::Region(region(counts, request.failure.estimation - power_failure(request)))
         }
     }
 }
 
-/// The power of a target's power entropy and its share of the estimation failure; `None` if none is asked for.
-fn power_terms(request: &Request, target: Setting) -> Option<(u32, f64)> {
-    let rounds =
-        request.rounds_at(target).filter(|_| request.rounds == RoundModel::Independent && request.entropy == EntropyChoice::Power)?;
-    let failure = (request.failure.estimation * 0.5 / request.scenario().targets().len() as f64).next_down();
-    Some((power_for(rounds, failure), failure))
+/// The power of a diagnostic, at which a power entropy is the Shannon entropy up to a millionth.
+const SMALL_POWER: u32 = 1 << 10;
+
+/// Which power entropy is asked for.
+struct PowerTerms {
+    /// `β` in units of `2^-30`.
+    power: u32,
+    /// The target's share of the estimation failure; `None` if no bits are to come from it.
+    failure: Option<f64>,
+}
+
+fn power_terms(request: &Request, target: Setting) -> PowerTerms {
+    let share = |failure: f64| (failure / request.scenario.targets().len() as f64).next_down();
+    match (request.rounds, request.entropy, request.rounds_at(target)) {
+        (RoundModel::Independent, EntropyChoice::Auto | EntropyChoice::Power, Some(rounds)) => {
+            let failure = share(power_failure(request));
+            PowerTerms { power: power_for(rounds, failure), failure: Some(failure) }
+        }
+        (RoundModel::Independent, EntropyChoice::Guessing, Some(rounds)) => {
+            PowerTerms { power: power_for(rounds, share(request.failure.estimation)), failure: None }
+        }
+        (RoundModel::PlugIn | RoundModel::Memory, _, _) | (RoundModel::Independent, _, None) => {
+            PowerTerms { power: SMALL_POWER, failure: None }
+        }
+    }
+}
+
+/// What power entropies take of the estimation failure, all targets together.
+fn power_failure(request: &Request) -> f64 {
+    match request.entropy {
+        EntropyChoice::Guessing => 0.0,
+        EntropyChoice::Auto | EntropyChoice::Power => 0.5 * request.failure.estimation,
+    }
 }
 
 /// A certificate in the making.
@@ -228,20 +254,27 @@ impl Draft {
         witness: &CheckedWitness,
         bound: &CheckedBound,
     ) {
-        let (Some((power, failure)), Evidence::Region(region)) = (power_terms(request, target), evidence) else { return };
+        let PowerTerms { power, failure } = power_terms(request, target);
         let entropy_per_round = entropy_in_bits(bound.exact());
-        let largest = largest_power_entropy(&region[target.x][target.y], power) * std::f64::consts::LOG2_E;
+        let intervals: Vec<[f64; 2]> = match evidence {
+            Evidence::Region(region) => region[target.x][target.y].clone(),
+            Evidence::Point(table) => table[target.x][target.y].iter().map(|p| [*p, *p]).collect(),
+            Evidence::Scores(_) => vec![[0.0, 1.0]; request.scenario.geometry().outcomes],
+        };
+        let largest = largest_power_entropy(&intervals, power) * std::f64::consts::LOG2_E;
         if entropy_per_round > largest {
             return;
         }
         let digest = self.keep(witness);
         let Some(entry) = self.certificate.targets.last_mut() else { return };
         let rounds = entry.rounds.unwrap_or(0);
-        let min_entropy = block_min_entropy(bound.exact(), rounds, power, failure);
+        let min_entropy = failure.map(|failure| block_min_entropy(bound.exact(), rounds, power, failure));
         let rounding_cost = witness.rounding_cost();
         entry.power = Some(PowerCertificate { power, entropy_per_round, failure, min_entropy, level, witness: digest, rounding_cost });
-        if let (Some(known), Some(publication), Some(hashing)) = (entry.min_entropy, entry.publication_cost, entry.hashing_cost) {
-            let better = known.max(min_entropy);
+        if let (Some(known), Some(found), Some(publication), Some(hashing)) =
+            (entry.min_entropy, min_entropy, entry.publication_cost, entry.hashing_cost)
+        {
+            let better = known.max(found);
             entry.min_entropy = Some(better);
             entry.certified_bits = extractable(better, &[publication, hashing]);
         }

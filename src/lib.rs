@@ -67,6 +67,8 @@ pub mod leakage;
 #[cfg(feature = "service")]
 pub mod ledger;
 #[cfg(feature = "service")]
+pub mod metrics;
+#[cfg(feature = "service")]
 pub mod profile;
 #[cfg(feature = "service")]
 pub mod record;
@@ -84,5 +86,7 @@ pub mod solver;
 pub mod statistics;
 #[cfg(feature = "service")]
 pub mod submission;
+#[cfg(feature = "service")]
+pub mod token;
 pub mod verify;
 pub mod witness;

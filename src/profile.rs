@@ -100,7 +100,7 @@ impl TryFrom<ProfileDocument> for Profile {
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
         // Too large for every level is said now, and not when a batch comes in.
-        choose(level, &scenario, entropy.groups(&scenario))?;
+        choose(level, &scenario, scenario.geometry().outcomes)?;
         if let Some(distribution) = &setting_distribution {
             check_distribution(distribution, scenario.geometry(), NORMALISATION_SLACK)
                 .map_err(|fault| fault.under("/setting_distribution"))?;
@@ -177,7 +177,7 @@ mod tests {
         let document: ProfileDocument = parse(PROFILE.as_bytes()).unwrap();
         let profile = Profile::try_from(document).unwrap();
         let text = serde_json::to_string(&profile).unwrap();
-        assert!(text.contains(r#""failure":{"estimation":1e-10,"hashing":1e-10},"level":"auto","entropy":"guessing""#), "{text}");
+        assert!(text.contains(r#""failure":{"estimation":1e-10,"hashing":1e-10},"level":"auto","entropy":"auto""#), "{text}");
         assert_eq!(serde_json::from_str::<Profile>(&text).unwrap(), profile);
     }
 

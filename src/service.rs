@@ -1,5 +1,6 @@
 //! The service: takes batches in, has them solved, keeps what came out. Knows no HTTP.
 
+mod access;
 mod commitments;
 mod quality;
 mod solvers;
@@ -16,6 +17,7 @@ use uuid::{NoContext, Uuid};
 
 use self::turns::Turns;
 pub use self::{
+    access::{AccessError, Caller, Scope},
     commitments::{Listed, OrderError},
     solvers::{Certifier, SolveError, Solvers},
     tree::Exported,
@@ -31,6 +33,7 @@ use crate::{
         rows::{Entry, ProfileVersion, Recorded},
         writer::{Expectation, Kept, Settled, WriteError},
     },
+    metrics::Metrics,
     profile::{Profile, RigName},
     record::{Record, Timings},
     request::RoundModel,
@@ -82,6 +85,8 @@ pub struct Service {
     solvers: Solvers,
     clock: Arc<dyn Clock>,
     turns: Arc<Turns>,
+    keys: access::Keys,
+    metrics: Metrics,
     accepting: AtomicBool,
     /// Batches and commitments that are being worked on, whether or not their posters still wait.
     active: watch::Sender<usize>,
@@ -90,7 +95,22 @@ pub struct Service {
 impl Service {
     pub fn new(ledger: Ledger, solvers: Solvers, clock: Arc<dyn Clock>) -> Arc<Self> {
         let turns = Arc::new(Turns::default());
-        Arc::new(Self { ledger, solvers, clock, turns, accepting: AtomicBool::new(true), active: watch::Sender::new(0) })
+        let metrics = Metrics::new(ledger.writer.group_sizes.clone());
+        let keys = access::Keys::default();
+        Arc::new(Self { ledger, solvers, clock, turns, keys, metrics, accepting: AtomicBool::new(true), active: watch::Sender::new(0) })
+    }
+
+    /// What is counted and measured here.
+    pub fn metrics(&self) -> &Metrics {
+        &self.metrics
+    }
+
+    /// Everything that is counted and measured, as text.
+    ///
+    /// # Errors
+    /// The encoder's.
+    pub fn measurements(&self) -> Result<String, std::fmt::Error> {
+        self.metrics.text(self.solvers.waiting(), self.ledger.sizes())
     }
 
     /// Keeps a profile; see [`crate::ledger::writer::Writer::keep_profile`].
@@ -157,6 +177,7 @@ impl Service {
         let (Certification { certificate, witnesses }, timings) = match batch.task {
             Task::Solve(request) => {
                 let done = self.solvers.certify(*request).await?;
+                self.metrics.solved(done.queued, done.solved);
                 (done.outcome, Timings { queued_seconds: done.queued.as_secs_f64(), solved_seconds: done.solved.as_secs_f64() })
             }
             Task::Done(certificate) => (Certification { certificate: *certificate, witnesses: vec![] }, Timings::default()),
@@ -179,12 +200,16 @@ impl Service {
             timings,
         };
         let entry = Entry::new(&record, &witnesses, submission)?;
-        self.ledger.writer.keep_entry(entry).await.map_err(|error| match error {
+        let settled = self.ledger.writer.keep_entry(entry).await.map_err(|error| match error {
             WriteError::KeyReused => SubmitError::KeyReused,
             WriteError::Ledger(error) => SubmitError::Ledger(error),
             // An entry states no expectation.
             WriteError::ExpectationMissing { .. } | WriteError::ExpectationFailed { .. } => SubmitError::Ledger(LedgerError::Closed),
-        })
+        })?;
+        if !settled.replayed {
+            self.metrics.recorded(&record);
+        }
+        Ok(settled)
     }
 
     /// The text of a record.

@@ -12,7 +12,7 @@ use crate::{
     certify::{Draft, Evidence, certify_counted, evidence},
     commitment::{Commitment, CommitmentFault},
     fault::Fault,
-    relaxation::{level::Level, parity::split, word::Algebra},
+    relaxation::{level::Level, word::Algebra},
     request::{Failure, Request, RequestDocument, RoundModel},
     witness::{
         check::{CheckError, CheckedWitness, check, proves_contradiction},
@@ -188,7 +188,7 @@ fn find(witnesses: &BTreeMap<String, &Witness>, digest: &str, pointer: &str) -> 
 /// Whether a witness has the monomials of a level.
 fn is_of_level(witness: &Witness, level: Level) -> bool {
     let algebra = Algebra::new(witness.geometry, &witness.exact);
-    let bases = split(&level.monomials(&algebra), &algebra);
+    let bases = level.bases(&algebra);
     bases.len() == witness.bases.len()
         && bases.iter().zip(&witness.bases).all(|(basis, span)| basis.parity == span.parity && basis.monomials == span.monomials)
 }

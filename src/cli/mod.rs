@@ -5,9 +5,12 @@ mod certify;
 mod demo;
 mod document;
 mod export;
+mod health;
 mod leakage;
 mod openapi;
 mod serve;
+mod settings;
+mod token;
 mod verify;
 
 use std::process::ExitCode;
@@ -27,6 +30,9 @@ pub struct CommandLine {
 #[derive(Subcommand)]
 enum Command {
     Serve(serve::Serve),
+    #[command(subcommand)]
+    Token(token::Token),
+    Health(health::Health),
     Certify(certify::Certify),
     Verify(verify::Verify),
     Leakage(leakage::Leakage),
@@ -40,6 +46,8 @@ enum Command {
 pub fn run() -> ExitCode {
     let outcome = match CommandLine::parse().command {
         Command::Serve(command) => command.run(),
+        Command::Token(command) => command.run(),
+        Command::Health(command) => command.run(),
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
         Command::Leakage(command) => command.run(),

@@ -1,5 +1,6 @@
 //! The service over HTTP: extract, one call to the service, respond. Knows no SQL.
 
+pub mod access;
 mod batches;
 mod certifications;
 mod commitments;
@@ -8,6 +9,8 @@ mod health;
 mod intake;
 mod leakage;
 mod ledger;
+pub mod limits;
+mod measurements;
 mod negotiation;
 pub mod openapi;
 pub mod problem;

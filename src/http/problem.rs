@@ -159,6 +159,18 @@ impl Problem {
             .retry_after(retry_after.as_secs().max(1))
     }
 
+    /// There are too many connections to serve this one.
+    pub fn crowded() -> Self {
+        Self::new(StatusCode::SERVICE_UNAVAILABLE, "There are too many connections at present.").retry_after(5)
+    }
+
+    /// More requests than one client may send.
+    pub fn too_many(wait: Duration) -> Self {
+        let seconds = wait.as_secs() + 1;
+        Self::new(StatusCode::TOO_MANY_REQUESTS, format!("Too many requests; the next is taken in {seconds} s at the latest."))
+            .retry_after(seconds)
+    }
+
     /// Not ready, and why.
     pub fn not_ready(failed: Vec<Check>) -> Self {
         let mut problem = Self::new(StatusCode::SERVICE_UNAVAILABLE, "The service takes no batches at present.").retry_after(5);

@@ -15,7 +15,9 @@ use crate::{
 
 fn bitassay() -> Command {
     let mut command = Command::new(env!("CARGO_BIN_EXE_bitassay"));
-    command.env_remove("RUST_LOG");
+    for (name, _) in std::env::vars().filter(|(name, _)| name.starts_with("BITASSAY_")) {
+        command.env_remove(name);
+    }
     command
 }
 
@@ -27,8 +29,12 @@ struct Process {
 
 impl Process {
     fn start(database: &Path) -> Self {
+        Self::listening("127.0.0.1:0", database)
+    }
+
+    fn listening(address: &str, database: &Path) -> Self {
         let mut command = bitassay();
-        command.args(["serve", "--listen", "127.0.0.1:0", "--database"]).arg(database).stderr(Stdio::piped());
+        command.args(["serve", "--listen", address, "--database"]).arg(database).stderr(Stdio::piped());
         let mut child = command.spawn().unwrap();
         let mut lines = BufReader::new(child.stderr.take().unwrap()).lines();
         let first = lines.next().unwrap().unwrap();
@@ -98,6 +104,21 @@ fn a_termination_signal_ends_the_server_well() {
     assert!(process.child.wait().unwrap().success());
 }
 
+#[cfg(unix)]
+#[test]
+fn a_service_that_is_well_is_told_from_one_that_is_not() {
+    let folder = tempfile::tempdir().unwrap();
+    let mut process = Process::start(&folder.path().join("ledger.sqlite"));
+    let ask = |url: &str| bitassay().args(["health", "--url", url]).output().unwrap();
+    let url = process.client.base().to_owned();
+    assert!(ask(&url).status.success());
+    process.child.kill().unwrap();
+    process.child.wait().unwrap();
+    let output = ask(&url);
+    assert_eq!(output.status.code(), Some(2));
+    assert_eq!(String::from_utf8(output.stderr).unwrap().lines().count(), 1);
+}
+
 #[test]
 fn the_world_is_not_listened_to() {
     let folder = tempfile::tempdir().unwrap();
@@ -106,9 +127,18 @@ fn the_world_is_not_listened_to() {
         let output = bitassay().args(["serve", "--listen", address, "--database"]).arg(&database).output().unwrap();
         assert_eq!(output.status.code(), Some(2), "{address}");
         let words = String::from_utf8(output.stderr).unwrap();
-        assert!(words.contains("needs tokens, which this version does not have") && words.lines().count() == 1, "{words}");
+        assert!(words.contains("needs tokens, and none was ever created") && words.lines().count() == 1, "{words}");
     }
     assert!(!database.exists());
+    // Neither is a database enough that has no tokens.
+    drop(Process::start(&database));
+    let output = bitassay().args(["serve", "--listen", "0.0.0.0:0", "--database"]).arg(&database).output().unwrap();
+    assert_eq!(output.status.code(), Some(2));
+    // With a token, it is.
+    assert!(bitassay().args(["token", "create", "--role", "operator", "--database"]).arg(&database).output().unwrap().status.success());
+    let process = Process::listening("0.0.0.0:0", &database);
+    process.client.get("/v1/rigs").expect(401);
+    process.client.get("/livez").expect(200);
 }
 
 #[test]

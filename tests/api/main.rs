@@ -1,5 +1,6 @@
 //! The real server on a free port, with a database file of its own. Modules follow the paths.
 
+mod access;
 mod bad_requests;
 mod batches;
 mod certifications;
@@ -12,7 +13,10 @@ mod examples;
 mod health;
 mod leakage;
 mod ledger;
+mod measurements;
 mod openapi;
 mod rigs;
 mod server;
+mod settings;
+mod tokens;
 mod yields;

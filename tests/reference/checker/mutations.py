@@ -12,9 +12,9 @@ from record import counts_digest
 OTHERS = {
     "leakage_holds": ["on-average", "every-emission"],
     "rounds": ["independent", "plug-in", "memory"],
-    "entropy": ["guessing", "power"],
+    "entropy": ["auto", "guessing", "power"],
     "verdict": ["certified", "refused", "estimate"],
-    "level": ["lean", "standard", "sharp"],
+    "level": ["sparse", "lean", "standard", "sharp"],
     "parity": ["even", "odd"],
     "kind": ["guess", "power", "contradiction"],
     "reason": ["zero-bound", "outside-model", "unverified", "uncommitted"],
