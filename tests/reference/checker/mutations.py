@@ -123,6 +123,8 @@ def mutations(document, random, count):
         attempt += 1
         path = random.choice(sections[name])
         value = get(document, path)
+        if value is None:
+            continue
         siblings = get(document, path[:-1]) if name[-1:] == ("monomials",) else ()
         steps = []
         if name == ("record", "counts") and random.random() < 0.5:
