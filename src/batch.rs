@@ -167,6 +167,7 @@ impl BatchDocument {
             level: profile.level(),
             entropy: profile.entropy(),
             lost_rounds,
+            bracket: false,
         })?;
         Ok(Batch { started_at, ended_at, leakage_source, task: Task::Solve(Box::new(request)) })
     }

@@ -37,6 +37,17 @@ pub enum Reason {
     Uncommitted,
 }
 
+/// Where a bound's witness came from. It makes no difference to what the bound means.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[serde(rename_all = "kebab-case")]
+pub enum Origin {
+    /// Kept from an earlier solve.
+    Kept,
+    /// Solved for this batch.
+    Fresh,
+}
+
 /// Failure probabilities as recorded.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
 #[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
@@ -74,11 +85,30 @@ pub struct TargetCertificate {
     pub level: Option<Level>,
     /// `sha256:` digest of the witness document; `null` when there is none.
     pub witness: Option<String>,
+    /// Whether the witness was kept or made for this batch, for information; absent without a witness, and in older records.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub origin: Option<Origin>,
     /// What rounding the witness to integers cost in guessing probability, an approximate figure for information.
     pub rounding_cost: Option<f64>,
     /// The power entropy; `null` where no witness of it passed the exact check, or nothing is left of the min-entropy.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub power: Option<PowerCertificate>,
+    /// What an explicit attack reaches, if one was sought and found. For information: no figure rests on it.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub bracket: Option<Bracket>,
+}
+
+/// The largest guessing probability lies between these two, up to the residual: how much the bound may be giving away.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[serde(deny_unknown_fields)]
+pub struct Bracket {
+    /// Guessing probability of an explicit model within the declared leakage, rounded down.
+    pub attack: f64,
+    /// The bound, as above.
+    pub bound: f64,
+    /// By how much the model's probabilities may miss the data, or the region; zero if its behaviour lies inside.
+    pub residual: f64,
 }
 
 /// A bound on the power entropy of a target's outcomes.
@@ -98,6 +128,9 @@ pub struct PowerCertificate {
     pub level: Level,
     /// `sha256:` digest of the witness document.
     pub witness: String,
+    /// Whether the witness was kept or made for this batch, for information; absent in older records.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub origin: Option<Origin>,
     /// What rounding the witness cost, in nats, an approximate figure for information.
     pub rounding_cost: f64,
 }

@@ -1,10 +1,13 @@
 //! The pure pipeline: a request in, a certificate and its witnesses out.
 
+use std::sync::Arc;
+
 use num_rational::BigRational;
 
 use crate::{
+    attack::{Effort, Hints, attack, objective::Objective},
     bound::{Answer, guessing_probability, power_entropy},
-    certificate::{Certificate, FailureTotal, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
+    certificate::{Bracket, Certificate, FailureTotal, Origin, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
     commitment::Commitment,
     counts::{Counts, Table},
     entropy::{
@@ -20,7 +23,8 @@ use crate::{
     solver::Limits,
     statistics::region::{frequencies, region},
     witness::{
-        check::{CheckedBound, CheckedWitness, Place},
+        check::{CheckedBound, CheckedWitness, Place, proves_contradiction},
+        pool::{Kept, MadeFor, Pool, Spot, Subject},
         witness::Witness,
     },
 };
@@ -43,18 +47,95 @@ pub fn certify(request: &Request) -> Certification {
                 return draft.outside(&contradiction.found.witness, least);
             }
             Answer::Bounded(found) => {
-                draft.add(request, *target, found.level, &found.witness, &found.bound);
+                draft.add(request, *target, found.level, &found.witness, &found.bound, Some(Origin::Fresh));
+                if request.bracket {
+                    draft.attack(request, *target, &evidence, &found.witness);
+                }
                 let PowerTerms { power, .. } = power_terms(request, *target);
                 if let Some(level) = request.power_start.filter(|_| found.bound.rounded_up() < 1.0)
                     && let Some(found) = power_entropy(request.scenario(), *target, evidence.place(), power, level, Limits::default())
                 {
-                    draft.add_power(request, *target, &evidence, found.level, &found.witness, &found.bound);
+                    let origin = Some(Origin::Fresh);
+                    draft.add_power(request, *target, &evidence, found.level, &found.witness, &found.bound, origin);
                 }
             }
             Answer::Unverified => draft.add_unverified(request, *target),
         }
     }
     draft.conclude()
+}
+
+/// A certificate that kept witnesses gave. Its witnesses are the pool's.
+#[derive(Debug, Clone)]
+pub struct FromPool {
+    pub certificate: Certificate,
+    pub kept: Vec<Arc<Kept>>,
+    /// Estimate of how many bits per round of a target a solve would give more, the largest over the targets.
+    pub loss: f64,
+}
+
+/// Certifies a request with kept witnesses alone, without a solve; the pool's documentation says when they are good enough.
+///
+/// `None` where a solve is called for: some target's bound is estimated to give away more than `acceptable_loss` bits per round of that
+/// target, or the numbers seem to contradict the declaration. Plug-in figures, which are diagnostics, are always solved.
+pub fn certify_from(pool: &Pool, request: &Request, acceptable_loss: f64) -> Option<FromPool> {
+    if request.rounds != RoundModel::Independent || request.bracket {
+        return None;
+    }
+    let evidence = evidence(request);
+    let Evidence::Region(region) = &evidence else { return None };
+    let scenario = request.scenario();
+    let spot = Spot::new(scenario, region, request.start);
+    if pool.contradicts(&spot) {
+        return None;
+    }
+    let mut draft = Draft::new(request, Some(&evidence));
+    let (mut kept, mut loss) = (Vec::new(), 0f64);
+    let mut best = |subject, power| {
+        let best = pool.best(subject, &spot, power).filter(|best| best.loss <= acceptable_loss)?;
+        let bound = best.kept.witness().bound(evidence.place(), scenario.leakage(), scenario.leakage_holds()).ok()?;
+        loss = loss.max(best.loss);
+        kept.push(Arc::clone(&best.kept));
+        Some((best.kept, bound))
+    };
+    for target in scenario.targets() {
+        let (guess, bound) = best(Subject::Guess(*target), None)?;
+        if proves_contradiction(guess.witness(), &bound, evidence.place()) {
+            return None;
+        }
+        draft.add(request, *target, guess.level(), guess.witness(), &bound, Some(Origin::Kept));
+        if request.power_start.is_some() && bound.rounded_up() < 1.0 {
+            let PowerTerms { power, .. } = power_terms(request, *target);
+            let (of_power, bound) = best(Subject::Power(*target), Some(power))?;
+            let added = draft.add_power(request, *target, &evidence, of_power.level(), of_power.witness(), &bound, Some(Origin::Kept));
+            if !added {
+                return None;
+            }
+        }
+    }
+    Some(FromPool { certificate: draft.conclude().certificate, kept, loss })
+}
+
+/// Where a request's witnesses were made, and at which levels, as the pool wants to know it.
+pub fn keepable(request: &Request, certification: &Certification) -> Vec<(Witness, MadeFor)> {
+    let Evidence::Region(region) = evidence(request) else { return Vec::new() };
+    let scenario = request.scenario();
+    let certificate = &certification.certificate;
+    let level_of = |digest: &str| {
+        let of_target = |target: &TargetCertificate| {
+            let guess = target.level.filter(|_| target.witness.as_deref() == Some(digest));
+            guess.or_else(|| target.power.as_ref().filter(|power| power.witness == digest).map(|power| power.level))
+        };
+        let named = certificate.targets.iter().find_map(of_target);
+        // The certificate of a contradiction does not say its level.
+        named.map_or_else(|| Level::ALL.to_vec(), |level| vec![level])
+    };
+    let made = |witness: &Witness| {
+        let level = level_of(&witness.digest()).into_iter().find(|level| witness.is_of_level(*level))?;
+        let (leakage, leakage_holds) = (scenario.leakage().to_vec(), scenario.leakage_holds());
+        Some((witness.clone(), MadeFor { region: region.clone(), leakage, leakage_holds, asked: request.start, level }))
+    };
+    certification.witnesses.iter().filter_map(made).collect()
 }
 
 /// Certifies a block of rounds with memory under a commitment. No solve is involved: bits follow from counts and factors.
@@ -99,6 +180,7 @@ pub(crate) fn certify_counted(
         power_start: None,
         entropy: EntropyChoice::Power,
         lost_rounds,
+        bracket: false,
     };
     let mut certificate = Draft::new(&request, None).certificate;
     if !in_time {
@@ -118,6 +200,7 @@ pub(crate) fn certify_counted(
 }
 
 /// What is known of the behaviour.
+#[derive(Debug, Clone, PartialEq)]
 pub(crate) enum Evidence {
     Point(Table<f64>),
     Region(Table<[f64; 2]>),
@@ -132,7 +215,24 @@ impl Evidence {
             Self::Scores(scores) => Place::Scores(scores),
         }
     }
+
+    /// Intervals that hold every behaviour within a distance of this in each probability; none for scores.
+    pub(crate) fn widened(&self, by: f64) -> Option<Table<[f64; 2]>> {
+        let wider = |[low, high]: [f64; 2]| [(low - by).next_down().max(0.0), (high + by).next_up().min(1.0)];
+        match self {
+            Self::Point(table) => Some(map(table, |p| wider([*p, *p]))),
+            Self::Region(table) => Some(map(table, |interval| wider(*interval))),
+            Self::Scores(_) => None,
+        }
+    }
 }
+
+fn map<T>(table: &Table<T>, of: impl Fn(&T) -> [f64; 2]) -> Table<[f64; 2]> {
+    table.iter().map(|table| table.iter().map(|values| values.iter().map(&of).collect()).collect()).collect()
+}
+
+/// The most by which the behaviour of an attack that is recorded may miss the data.
+const LARGEST_RESIDUAL: f64 = 1e-6;
 
 pub(crate) fn evidence(request: &Request) -> Evidence {
     match (&request.data, request.rounds) {
@@ -149,14 +249,14 @@ pub(crate) fn evidence(request: &Request) -> Evidence {
 const SMALL_POWER: u32 = 1 << 10;
 
 /// Which power entropy is asked for.
-struct PowerTerms {
+pub(crate) struct PowerTerms {
     /// `β` in units of `2^-30`.
-    power: u32,
+    pub(crate) power: u32,
     /// The target's share of the estimation failure; `None` if no bits are to come from it.
-    failure: Option<f64>,
+    pub(crate) failure: Option<f64>,
 }
 
-fn power_terms(request: &Request, target: Setting) -> PowerTerms {
+pub(crate) fn power_terms(request: &Request, target: Setting) -> PowerTerms {
     let share = |failure: f64| (failure / request.scenario.targets().len() as f64).next_down();
     match (request.rounds, request.entropy, request.rounds_at(target)) {
         (RoundModel::Independent, EntropyChoice::Auto | EntropyChoice::Power, Some(rounds)) => {
@@ -226,25 +326,69 @@ impl Draft {
         Self { certificate, witnesses: Vec::new() }
     }
 
-    fn keep(&mut self, witness: &CheckedWitness) -> String {
-        if self.witnesses.iter().all(|kept| kept != witness.witness()) {
+    fn keep(&mut self, witness: &CheckedWitness, origin: Option<Origin>) -> String {
+        // A kept one is in the pool.
+        if origin != Some(Origin::Kept) && self.witnesses.iter().all(|kept| kept != witness.witness()) {
             self.witnesses.push(witness.witness().clone());
         }
         witness.digest().to_owned()
     }
 
-    pub(crate) fn add(&mut self, request: &Request, target: Setting, level: Level, witness: &CheckedWitness, bound: &CheckedBound) {
-        let digest = self.keep(witness);
+    pub(crate) fn add(
+        &mut self,
+        request: &Request,
+        target: Setting,
+        level: Level,
+        witness: &CheckedWitness,
+        bound: &CheckedBound,
+        origin: Option<Origin>,
+    ) {
+        let digest = self.keep(witness, origin);
         let mut entry = TargetCertificate::without_bound(target, request.rounds_at(target));
         entry.level = Some(level);
         entry.witness = Some(digest);
+        entry.origin = origin;
         entry.rounding_cost = Some(witness.rounding_cost());
         entry.fill(bound.rounded_up(), request);
         self.certificate.targets.push(entry);
     }
 
+    /// Seeks an explicit attack on the target that was added last.
+    fn attack(&mut self, request: &Request, target: Setting, evidence: &Evidence, witness: &CheckedWitness) {
+        let hints = Hints { witness: Some(witness), known: &[] };
+        let found = attack(request.scenario(), target, evidence.place(), Objective::Guess, hints, Effort::default());
+        if let Some(found) = found {
+            self.add_bracket(request, evidence, witness, found.guessing_probability(), found.residual);
+        }
+    }
+
+    /// Adds an attack to the target that was added last; `false` if it exceeds what the witness allows over the data, widened by how far the
+    /// attack's behaviour may miss them. An attack that misses them by more than [`LARGEST_RESIDUAL`] says nothing of interest and is left
+    /// out.
+    pub(crate) fn add_bracket(
+        &mut self,
+        request: &Request,
+        evidence: &Evidence,
+        witness: &CheckedWitness,
+        attack: f64,
+        residual: f64,
+    ) -> bool {
+        let Some(widened) = evidence.widened(residual) else { return false };
+        let (leakage, reading) = (request.scenario.leakage(), request.scenario.leakage_holds());
+        let allowed = witness.bound(Place::Region(&widened), leakage, reading);
+        if !allowed.is_ok_and(|allowed| attack <= allowed.rounded_up()) {
+            return false;
+        }
+        if let Some(entry) = self.certificate.targets.last_mut()
+            && let Some(bound) = entry.guessing_probability_bound.filter(|_| residual <= LARGEST_RESIDUAL)
+        {
+            entry.bracket = Some(Bracket { attack, bound, residual });
+        }
+        true
+    }
+
     /// Adds a power entropy to the target that was added last. One that exceeds what the data allow anyway proves that there is no model, and
-    /// is no entropy: it is left out.
+    /// is no entropy: it is left out. Answers whether it was added.
     pub(crate) fn add_power(
         &mut self,
         request: &Request,
@@ -253,7 +397,8 @@ impl Draft {
         level: Level,
         witness: &CheckedWitness,
         bound: &CheckedBound,
-    ) {
+        origin: Option<Origin>,
+    ) -> bool {
         let PowerTerms { power, failure } = power_terms(request, target);
         let entropy_per_round = entropy_in_bits(bound.exact());
         let intervals: Vec<[f64; 2]> = match evidence {
@@ -263,14 +408,15 @@ impl Draft {
         };
         let largest = largest_power_entropy(&intervals, power) * std::f64::consts::LOG2_E;
         if entropy_per_round > largest {
-            return;
+            return false;
         }
-        let digest = self.keep(witness);
-        let Some(entry) = self.certificate.targets.last_mut() else { return };
+        let digest = self.keep(witness, origin);
+        let Some(entry) = self.certificate.targets.last_mut() else { return false };
         let rounds = entry.rounds.unwrap_or(0);
         let min_entropy = failure.map(|failure| block_min_entropy(bound.exact(), rounds, power, failure));
         let rounding_cost = witness.rounding_cost();
-        entry.power = Some(PowerCertificate { power, entropy_per_round, failure, min_entropy, level, witness: digest, rounding_cost });
+        entry.power =
+            Some(PowerCertificate { power, entropy_per_round, failure, min_entropy, level, witness: digest, origin, rounding_cost });
         if let (Some(known), Some(found), Some(publication), Some(hashing)) =
             (entry.min_entropy, min_entropy, entry.publication_cost, entry.hashing_cost)
         {
@@ -278,6 +424,7 @@ impl Draft {
             entry.min_entropy = Some(better);
             entry.certified_bits = extractable(better, &[publication, hashing]);
         }
+        true
     }
 
     pub(crate) fn add_unverified(&mut self, request: &Request, target: Setting) {
@@ -321,9 +468,9 @@ impl Draft {
         self.certificate.verdict = Verdict::Refused;
         self.certificate.reason = Some(Reason::OutsideModel);
         self.certificate.outside_model = Some(OutsideModel {
-            witness: self.keep(contradiction),
+            witness: self.keep(contradiction, None),
             smallest_uniform_leakage: least_leakage.map(|(least, _)| round_down(least)),
-            smallest_uniform_leakage_witness: least_leakage.map(|(_, witness)| self.keep(witness)),
+            smallest_uniform_leakage_witness: least_leakage.map(|(_, witness)| self.keep(witness, None)),
         });
         Certification { certificate: self.certificate, witnesses: self.witnesses }
     }
@@ -344,8 +491,10 @@ impl TargetCertificate {
             certified_bits: 0,
             level: None,
             witness: None,
+            origin: None,
             rounding_cost: None,
             power: None,
+            bracket: None,
         }
     }
 

@@ -29,11 +29,34 @@ pub fn dyadic(numerator: impl Into<BigInt>, bits: u32) -> BigRational {
 
 /// The smallest `f64`, up to a few units in the last place, whose decimal is not below the value. Infinite if none is.
 pub fn round_up(value: &BigRational) -> f64 {
+    if let Some((numerator, bits)) = as_dyadic(value) {
+        return round_up_dyadic(numerator, bits);
+    }
     let mut guess = value.to_f64().unwrap_or(if value.is_negative() { f64::MIN } else { f64::INFINITY });
     while guess.is_finite() && decimal(guess) < *value {
         guess = guess.next_up();
     }
     guess
+}
+
+/// Most bits after the binary point for which the short way is taken: far from where `f64` runs out of exponents.
+const MOST_BITS: u64 = 512;
+
+/// Numerator and bits of a value `numerator / 2^bits` that is small enough for the short way.
+fn as_dyadic(value: &BigRational) -> Option<(i128, u32)> {
+    let bits = value.denom().trailing_zeros().filter(|zeros| value.denom().bits() == zeros + 1 && *zeros <= MOST_BITS)?;
+    Some((value.numer().to_i128()?, u32::try_from(bits).ok()?))
+}
+
+/// As [`round_up`], of `numerator / 2^bits`, in a few steps.
+fn round_up_dyadic(numerator: i128, bits: u32) -> f64 {
+    if numerator == 0 {
+        return 0.0;
+    }
+    // The cast rounds to nearest and the scaling is exact, so the value is at most half a unit above the product. The shortest decimal of
+    // the number one unit up is at most half a unit below that number.
+    let nearest = numerator as f64 * 2f64.powi(-(bits as i32));
+    nearest.next_up()
 }
 
 /// The largest `f64`, up to a few units in the last place, whose decimal is not above the value.

@@ -7,6 +7,7 @@ use serde::{Deserialize, Serialize};
 use crate::{
     counts::{NORMALISATION_SLACK, check_distribution},
     fault::Fault,
+    freshness::Freshness,
     relaxation::{cost::choose, level::LevelChoice},
     request::{EntropyChoice, Failure, RoundModel},
     scenario::{Scenario, ScenarioDocument},
@@ -67,6 +68,8 @@ pub struct ProfileDocument {
     pub level: LevelChoice,
     #[serde(default)]
     pub entropy: EntropyChoice,
+    #[serde(default)]
+    pub freshness: Freshness,
     /// Probability `π(x,y)` with which the rig chooses each setting, `[x][y]`; adds up to 1.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub setting_distribution: Option<Vec<Vec<f64>>>,
@@ -87,6 +90,7 @@ pub struct Profile {
     failure: Failure,
     level: LevelChoice,
     entropy: EntropyChoice,
+    freshness: Freshness,
     setting_distribution: Option<Vec<Vec<f64>>>,
     outcome_labels: Option<Vec<String>>,
     notes: Option<String>,
@@ -96,9 +100,11 @@ impl TryFrom<ProfileDocument> for Profile {
     type Error = Fault;
 
     fn try_from(document: ProfileDocument) -> Result<Self, Fault> {
-        let ProfileDocument { scenario, rounds, failure, level, entropy, setting_distribution, outcome_labels, notes } = document;
+        let ProfileDocument { scenario, rounds, failure, level, entropy, freshness, setting_distribution, outcome_labels, notes } =
+            document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
+        freshness.check().map_err(|fault| fault.under("/freshness"))?;
         // Too large for every level is said now, and not when a batch comes in.
         choose(level, &scenario, scenario.geometry().outcomes)?;
         if let Some(distribution) = &setting_distribution {
@@ -111,7 +117,7 @@ impl TryFrom<ProfileDocument> for Profile {
         if notes.as_ref().is_some_and(|notes| notes.len() > MAX_NOTES) {
             return Err(Fault::new("/notes", format!("notes have at most {MAX_NOTES} bytes")));
         }
-        Ok(Self { scenario, rounds, failure, level, entropy, setting_distribution, outcome_labels, notes })
+        Ok(Self { scenario, rounds, failure, level, entropy, freshness, setting_distribution, outcome_labels, notes })
     }
 }
 
@@ -132,8 +138,8 @@ fn check_labels(labels: &[String], outcomes: usize) -> Result<(), Fault> {
 
 impl From<Profile> for ProfileDocument {
     fn from(profile: Profile) -> Self {
-        let Profile { scenario, rounds, failure, level, entropy, setting_distribution, outcome_labels, notes } = profile;
-        Self { scenario: scenario.into(), rounds, failure, level, entropy, setting_distribution, outcome_labels, notes }
+        let Profile { scenario, rounds, failure, level, entropy, freshness, setting_distribution, outcome_labels, notes } = profile;
+        Self { scenario: scenario.into(), rounds, failure, level, entropy, freshness, setting_distribution, outcome_labels, notes }
     }
 }
 
@@ -159,6 +165,10 @@ impl Profile {
         self.entropy
     }
 
+    pub fn freshness(&self) -> Freshness {
+        self.freshness
+    }
+
     pub fn level(&self) -> LevelChoice {
         self.level
     }
@@ -177,7 +187,12 @@ mod tests {
         let document: ProfileDocument = parse(PROFILE.as_bytes()).unwrap();
         let profile = Profile::try_from(document).unwrap();
         let text = serde_json::to_string(&profile).unwrap();
-        assert!(text.contains(r#""failure":{"estimation":1e-10,"hashing":1e-10},"level":"auto","entropy":"auto""#), "{text}");
+        assert!(
+            text.contains(
+                r#""failure":{"estimation":1e-10,"hashing":1e-10},"level":"auto","entropy":"auto","freshness":{"accept_loss":0.001}"#
+            ),
+            "{text}"
+        );
         assert_eq!(serde_json::from_str::<Profile>(&text).unwrap(), profile);
     }
 
@@ -186,6 +201,19 @@ mod tests {
         for (rows, pointer) in [("[[0.5], [0.6]]", ""), ("[[1.0]]", ""), ("[[0.5, 0.5], [0.5]]", "/0"), ("[[0.0], [1.0]]", "/0/0")] {
             let document: ProfileDocument = parse(PROFILE.replace("[[0.25], [0.75]]", rows).as_bytes()).unwrap();
             assert_eq!(Profile::try_from(document).unwrap_err().pointer, format!("/setting_distribution{pointer}"), "{rows}");
+        }
+    }
+
+    #[test]
+    fn freshness_is_always_or_a_loss_within_reason() {
+        let with = |freshness: &str| {
+            let text = PROFILE.replace(r#""rounds":"#, &format!(r#""freshness": {freshness}, "rounds":"#));
+            Profile::try_from(parse::<ProfileDocument>(text.as_bytes()).unwrap())
+        };
+        assert_eq!(with(r#""always""#).unwrap().freshness(), Freshness::Always);
+        assert_eq!(with(r#"{"accept_loss": 0}"#).unwrap().freshness(), Freshness::AcceptLoss(0.0));
+        for bits in ["-1e-9", "1.5"] {
+            assert_eq!(with(&format!(r#"{{"accept_loss": {bits}}}"#)).unwrap_err().pointer, "/freshness/accept_loss");
         }
     }
 

@@ -16,7 +16,7 @@ use crate::{
 pub struct Timings {
     /// From acceptance until a solver was free.
     pub queued_seconds: f64,
-    /// On the solver; zero for rounds with memory, which need none.
+    /// On the solver; zero where none was needed: with kept witnesses, and for rounds with memory.
     pub solved_seconds: f64,
 }
 

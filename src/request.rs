@@ -112,6 +112,9 @@ pub struct RequestDocument {
     pub entropy: EntropyChoice,
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub lost_rounds: Option<LostRounds>,
+    /// Whether explicit attacks are to be sought as well, which say how much the bounds may give away. Changes no certified figure.
+    #[serde(default, skip_serializing_if = "std::ops::Not::not")]
+    pub bracket: bool,
 }
 
 /// Counts, or probabilities in their place.
@@ -137,13 +140,14 @@ pub struct Request {
     pub(crate) power_start: Option<Level>,
     pub(crate) entropy: EntropyChoice,
     pub(crate) lost_rounds: Option<LostRounds>,
+    pub(crate) bracket: bool,
 }
 
 impl TryFrom<RequestDocument> for Request {
     type Error = Fault;
 
     fn try_from(document: RequestDocument) -> Result<Self, Fault> {
-        let RequestDocument { scenario, counts, behaviour, scores, rounds, failure, level, entropy, lost_rounds } = document;
+        let RequestDocument { scenario, counts, behaviour, scores, rounds, failure, level, entropy, lost_rounds, bracket } = document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
         let start = choose(level, &scenario, scenario.geometry().outcomes)?;
@@ -182,7 +186,7 @@ impl TryFrom<RequestDocument> for Request {
             (_, _, Some(_)) => return Err(Fault::new("/scores", "give scores in place of counts or a behaviour, not besides")),
             (None, None, None) => return Err(Fault::new("/counts", "counts are missing")),
         };
-        Ok(Self { scenario, data, rounds, failure, level, start, power_start, entropy, lost_rounds })
+        Ok(Self { scenario, data, rounds, failure, level, start, power_start, entropy, lost_rounds, bracket })
     }
 }
 

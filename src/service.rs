@@ -2,29 +2,41 @@
 
 mod access;
 mod commitments;
+mod forecasts;
+mod kept;
+mod newest;
 mod quality;
 mod solvers;
 mod tree;
 mod turns;
 
-use std::sync::{
-    Arc,
-    atomic::{AtomicBool, Ordering},
+use std::{
+    sync::{
+        Arc,
+        atomic::{AtomicBool, Ordering},
+    },
+    time::Instant,
 };
 
 use tokio::sync::watch;
 use uuid::{NoContext, Uuid};
 
-use self::turns::Turns;
 pub use self::{
     access::{AccessError, Caller, Scope},
     commitments::{Listed, OrderError},
+    forecasts::ForecastError,
     solvers::{Certifier, SolveError, Solvers},
     tree::Exported,
 };
+use self::{
+    kept::{KeptWitnesses, Outcome},
+    newest::Newest,
+    turns::Turns,
+};
 use crate::{
-    batch::{Batch, BatchFault, Posted, Task},
-    certify::Certification,
+    batch::{Batch, BatchFault, LeakageSource, Posted, Task},
+    certificate::{Certificate, Verdict},
+    certify::{Certification, FromPool},
     clock::{Clock, Stamp},
     committed::Committed,
     ledger::{
@@ -39,6 +51,7 @@ use crate::{
     request::RoundModel,
     rig_yield::RigYield,
     submission::{IdempotencyKey, Submission},
+    witness::{pool::Kept as KeptWitness, witness::Witness},
 };
 
 /// Why a batch was not certified. Nothing was recorded.
@@ -85,6 +98,8 @@ pub struct Service {
     solvers: Solvers,
     clock: Arc<dyn Clock>,
     turns: Arc<Turns>,
+    kept: KeptWitnesses,
+    newest: Newest,
     keys: access::Keys,
     metrics: Metrics,
     accepting: AtomicBool,
@@ -96,8 +111,18 @@ impl Service {
     pub fn new(ledger: Ledger, solvers: Solvers, clock: Arc<dyn Clock>) -> Arc<Self> {
         let turns = Arc::new(Turns::default());
         let metrics = Metrics::new(ledger.writer.group_sizes.clone());
-        let keys = access::Keys::default();
-        Arc::new(Self { ledger, solvers, clock, turns, keys, metrics, accepting: AtomicBool::new(true), active: watch::Sender::new(0) })
+        Arc::new(Self {
+            ledger,
+            solvers,
+            clock,
+            turns,
+            kept: KeptWitnesses::default(),
+            newest: Newest::default(),
+            keys: access::Keys::default(),
+            metrics,
+            accepting: AtomicBool::new(true),
+            active: watch::Sender::new(0),
+        })
     }
 
     /// What is counted and measured here.
@@ -118,7 +143,22 @@ impl Service {
     /// # Errors
     /// An expectation that does not hold, or the ledger's.
     pub async fn keep_profile(&self, rig: RigName, profile: Profile, expectation: Expectation) -> Result<(Kept, u64), WriteError> {
-        self.ledger.writer.keep_profile(rig, profile, expectation, self.clock.now()).await
+        let recorded_at = self.clock.now();
+        let (kept, version) = self.ledger.writer.keep_profile(rig.clone(), profile.clone(), expectation, recorded_at).await?;
+        if kept != Kept::Unchanged {
+            self.newest.note_profile(Arc::new(ProfileVersion { rig, version, recorded_at, profile }));
+        }
+        Ok((kept, version))
+    }
+
+    /// A rig's newest profile.
+    async fn newest_profile(&self, rig: &RigName) -> Result<Option<Arc<ProfileVersion>>, LedgerError> {
+        if let Some(known) = self.newest.profile(rig) {
+            return Ok(Some(known));
+        }
+        let found = self.ledger.history.profile(rig, None).await?.map(Arc::new);
+        found.iter().for_each(|profile| self.newest.note_profile(Arc::clone(profile)));
+        Ok(found)
     }
 
     /// A rig's profile, the newest or a given version.
@@ -150,56 +190,90 @@ impl Service {
         tokio::spawn(async move { working.service.settle(rig, key, posted).await }).await.map_err(SubmitError::Abandoned)?
     }
 
-    async fn settle(&self, rig: RigName, key: IdempotencyKey, posted: Posted) -> Result<Settled, SubmitError> {
-        let profile = self.profile(&rig, None).await?.ok_or(SubmitError::UnknownRig)?;
+    async fn settle(self: &Arc<Self>, rig: RigName, key: IdempotencyKey, posted: Posted) -> Result<Settled, SubmitError> {
+        let profile = self.newest_profile(&rig).await?.ok_or(SubmitError::UnknownRig)?;
         let submission = Submission { key, body_digest: posted.digest() };
         // Posts under one key go one after the other, so that a batch sent twice is solved once.
         let _turn = self.turns.take(&rig, &submission.key).await;
-        if let Some(answered) = self.ledger.history.answered(&rig, &submission.key).await? {
-            let same = answered.body_digest == submission.body_digest;
-            return if same { Ok(Settled { answered, replayed: true }) } else { Err(SubmitError::KeyReused) };
-        }
+        let (committed, batch) = match self.read(&profile, posted).await {
+            Ok(read) => read,
+            // What was answered before is answered again, though the profile may have changed since.
+            Err(error) => return self.answered(&rig, &submission).await?.ok_or(error),
+        };
+        let certified = match batch.task {
+            Task::Done(certificate) => {
+                Certified { certificate: *certificate, witnesses: vec![], kept: vec![], timings: Timings::default() }
+            }
+            Task::Solve(request) => {
+                let acceptable_loss = profile.profile.freshness().acceptable_loss();
+                let before = Instant::now();
+                let found = acceptable_loss.and_then(|loss| self.from_pool(&request, loss));
+                self.metrics.looked_up(found.is_some(), before.elapsed());
+                match found {
+                    // The writer sees for itself whether the batch was answered before.
+                    Some(found) => Certified::from(found),
+                    None => match self.answered(&rig, &submission).await? {
+                        Some(settled) => return Ok(settled),
+                        None => {
+                            let solved = self.solve(*request, acceptable_loss).await?;
+                            self.metrics.solved(solved.queued, solved.solved);
+                            let timings =
+                                Timings { queued_seconds: solved.queued.as_secs_f64(), solved_seconds: solved.solved.as_secs_f64() };
+                            Certified { timings, ..Certified::from(solved.outcome) }
+                        }
+                    },
+                }
+            }
+        };
+        self.keep(&profile, committed, (batch.started_at, batch.ended_at), batch.leakage_source, certified, submission).await
+    }
+
+    async fn read(&self, profile: &ProfileVersion, posted: Posted) -> Result<(Option<Committed>, Batch), SubmitError> {
         let committed = match profile.profile.rounds() {
-            RoundModel::Memory => Some(self.standing(&profile).await?.ok_or(SubmitError::Uncommitted)?),
+            RoundModel::Memory => Some(self.standing(profile).await?.ok_or(SubmitError::Uncommitted)?),
             RoundModel::PlugIn | RoundModel::Independent => None,
         };
         let batch = posted.read(&profile.profile, committed.as_ref())?;
-        self.keep(profile, committed, batch, submission).await
+        Ok((committed, batch))
+    }
+
+    async fn answered(&self, rig: &RigName, submission: &Submission) -> Result<Option<Settled>, SubmitError> {
+        match self.ledger.history.answered(rig, &submission.key).await? {
+            Some(answered) if answered.body_digest == submission.body_digest => Ok(Some(Settled { answered, replayed: true })),
+            Some(_) => Err(SubmitError::KeyReused),
+            None => Ok(None),
+        }
     }
 
     async fn keep(
         &self,
-        profile: ProfileVersion,
+        profile: &ProfileVersion,
         committed: Option<Committed>,
-        batch: Batch,
+        (started_at, ended_at): (Stamp, Stamp),
+        leakage_source: LeakageSource,
+        certified: Certified,
         submission: Submission,
     ) -> Result<Settled, SubmitError> {
-        let (Certification { certificate, witnesses }, timings) = match batch.task {
-            Task::Solve(request) => {
-                let done = self.solvers.certify(*request).await?;
-                self.metrics.solved(done.queued, done.solved);
-                (done.outcome, Timings { queued_seconds: done.queued.as_secs_f64(), solved_seconds: done.solved.as_secs_f64() })
-            }
-            Task::Done(certificate) => (Certification { certificate: *certificate, witnesses: vec![] }, Timings::default()),
-        };
+        let Certified { certificate, witnesses, kept, timings } = certified;
         let declared = profile.profile.setting_distribution();
         let distribution = committed.as_ref().map(|committed| &committed.commitment.setting_distribution[..]).or(declared);
-        let concerns = quality::concerns(&self.ledger, &profile.rig, distribution, &certificate).await?;
+        let previous = quality::previous(&self.ledger, &self.newest, &profile.rig).await?;
+        let concerns = quality::concerns(previous.as_deref(), distribution, &certificate);
         let recorded_at = self.clock.now();
         let record = Record {
             id: new_id(recorded_at),
-            rig: profile.rig,
+            rig: profile.rig.clone(),
             profile_version: profile.version,
             recorded_at,
-            started_at: batch.started_at,
-            ended_at: batch.ended_at,
-            leakage_source: batch.leakage_source,
+            started_at,
+            ended_at,
+            leakage_source,
             commitment: committed.map(|committed| committed.id),
             certificate,
             concerns,
             timings,
         };
-        let entry = Entry::new(&record, &witnesses, submission)?;
+        let entry = Entry::new(&record, &witnesses, &kept, submission)?;
         let settled = self.ledger.writer.keep_entry(entry).await.map_err(|error| match error {
             WriteError::KeyReused => SubmitError::KeyReused,
             WriteError::Ledger(error) => SubmitError::Ledger(error),
@@ -208,6 +282,9 @@ impl Service {
         })?;
         if !settled.replayed {
             self.metrics.recorded(&record);
+            if record.certificate.verdict == Verdict::Certified {
+                self.newest.note_certified(&profile.rig, Some(record.id), record.certificate.counts.map(Arc::new));
+            }
         }
         Ok(settled)
     }
@@ -280,7 +357,35 @@ impl Service {
         // The sender lives in `self`: waiting cannot fail.
         let _ = self.active.subscribe().wait_for(|active| *active == 0).await;
         self.solvers.close().await;
+        // A solve that nobody waited for may have had something to file.
+        let _ = self.active.subscribe().wait_for(|active| *active == 0).await;
         self.ledger.close().await;
+    }
+}
+
+/// A certificate, and what it rests on besides a commitment.
+struct Certified {
+    certificate: Certificate,
+    witnesses: Vec<Witness>,
+    kept: Vec<Arc<KeptWitness>>,
+    timings: Timings,
+}
+
+impl From<FromPool> for Certified {
+    fn from(found: FromPool) -> Self {
+        Self { certificate: found.certificate, witnesses: vec![], kept: found.kept, timings: Timings::default() }
+    }
+}
+
+impl From<Outcome> for Certified {
+    fn from(outcome: Outcome) -> Self {
+        match outcome {
+            Outcome::Kept(found) => (*found).into(),
+            Outcome::Fresh(certification) => {
+                let Certification { certificate, witnesses } = *certification;
+                Self { certificate, witnesses, kept: vec![], timings: Timings::default() }
+            }
+        }
     }
 }
 

@@ -12,7 +12,6 @@ use crate::{
     certify::{Draft, Evidence, certify_counted, evidence},
     commitment::{Commitment, CommitmentFault},
     fault::Fault,
-    relaxation::{level::Level, word::Algebra},
     request::{Failure, Request, RequestDocument, RoundModel},
     witness::{
         check::{CheckError, CheckedWitness, check, proves_contradiction},
@@ -70,6 +69,7 @@ fn request(certificate: &Certificate) -> Result<Request, Fault> {
         level: certificate.level,
         entropy: certificate.entropy,
         lost_rounds: None,
+        bracket: false,
     };
     let mut request = Request::try_from(document)?;
     request.lost_rounds = certificate.lost_rounds.clone();
@@ -101,7 +101,7 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
             if witness.witness().geometry != request.scenario().geometry() {
                 return Err(claim("it is for another geometry"));
             }
-            if !is_of_level(witness.witness(), level) {
+            if !witness.witness().is_of_level(level) {
                 return Err(claim("it is not of the recorded level"));
             }
             let bound = witness.bound(evidence.place(), request.scenario().leakage(), request.scenario().leakage_holds());
@@ -109,21 +109,25 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
             if proves_contradiction(&witness, &bound, evidence.place()) {
                 return Err(claim("the numbers contradict the declaration, so there is no entropy to speak of"));
             }
-            draft.add(&request, *target, level, &witness, &bound);
+            draft.add(&request, *target, level, &witness, &bound, recorded.origin);
+            if let Some(bracket) = recorded.bracket
+                && !draft.add_bracket(&request, &evidence, &witness, bracket.attack, bracket.residual)
+            {
+                return Err(claim("the attack exceeds it"));
+            }
             if let Some(recorded) = &recorded.power {
                 let pointer = format!("/targets/{}/power/witness", draft.targets() - 1);
                 let power = find(witnesses, &recorded.witness, &pointer)?;
                 let claim = |detail| Discrepancy::Claim { pointer: pointer.clone(), digest: recorded.witness.clone(), detail };
                 let of_target =
-                    matches!(&power.witness().claim, Claim::Power { target: of, power, .. } if of == target && *power == recorded.power);
-                if !of_target || power.witness().geometry != request.scenario().geometry() || !is_of_level(power.witness(), recorded.level)
-                {
+                    matches!(&power.witness().claim, Claim::Power { target: of, power, .. } if of == target && *power >= recorded.power);
+                if !of_target || power.witness().geometry != request.scenario().geometry() || !power.witness().is_of_level(recorded.level) {
                     return Err(claim("it bounds something else"));
                 }
                 let bound = power.bound(evidence.place(), request.scenario().leakage(), request.scenario().leakage_holds());
                 let bound =
                     bound.map_err(|error| Discrepancy::Witness { pointer: pointer.clone(), digest: recorded.witness.clone(), error })?;
-                draft.add_power(&request, *target, &evidence, recorded.level, &power, &bound);
+                draft.add_power(&request, *target, &evidence, recorded.level, &power, &bound, recorded.origin);
             }
         }
         draft.conclude().certificate
@@ -183,14 +187,6 @@ fn find(witnesses: &BTreeMap<String, &Witness>, digest: &str, pointer: &str) -> 
         return Err(Discrepancy::MissingWitness { pointer, digest });
     };
     check(witness).map_err(|error| Discrepancy::Witness { pointer, digest, error })
-}
-
-/// Whether a witness has the monomials of a level.
-fn is_of_level(witness: &Witness, level: Level) -> bool {
-    let algebra = Algebra::new(witness.geometry, &witness.exact);
-    let bases = level.bases(&algebra);
-    bases.len() == witness.bases.len()
-        && bases.iter().zip(&witness.bases).all(|(basis, span)| basis.parity == span.parity && basis.monomials == span.monomials)
 }
 
 fn compare(recorded: &Value, recomputed: &Value, pointer: String, differences: &mut Vec<Discrepancy>) {

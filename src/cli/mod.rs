@@ -1,10 +1,12 @@
 //! The command line: one file a command.
 
+mod attack;
 mod backup;
 mod certify;
 mod demo;
 mod document;
 mod export;
+mod forecast;
 mod health;
 mod leakage;
 mod openapi;
@@ -35,7 +37,9 @@ enum Command {
     Health(health::Health),
     Certify(certify::Certify),
     Verify(verify::Verify),
+    Attack(attack::Attack),
     Leakage(leakage::Leakage),
+    Forecast(forecast::Forecast),
     Export(export::Export),
     Backup(backup::Backup),
     Demo(demo::Demo),
@@ -50,7 +54,9 @@ pub fn run() -> ExitCode {
         Command::Health(command) => command.run(),
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
+        Command::Attack(command) => command.run(),
         Command::Leakage(command) => command.run(),
+        Command::Forecast(command) => command.run(),
         Command::Export(command) => command.run(),
         Command::Backup(command) => command.run(),
         Command::Demo(command) => command.run(),

@@ -92,7 +92,9 @@ async fn serve(settings: &Settings) -> anyhow::Result<()> {
     let key = ledger.seal.verifier().to_string();
     let solvers = Solvers::start(settings.solvers.into(), settings.queue.into(), Arc::new(certify)).context("no threads to solve on")?;
     let service = Service::new(ledger, solvers, Arc::new(SystemClock));
+    let recalled = service.recall_witnesses().await?;
     eprintln!("listening on http://{}", listener.local_addr()?);
+    tracing::info!(recalled, "kept witnesses were checked, and are in use");
     tracing::info!(%key, "checkpoints of the ledger are signed with this key");
     if open {
         tracing::warn!(

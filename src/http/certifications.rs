@@ -233,7 +233,8 @@ pub async fn list(
     let link = next.as_deref().map(|next| link_next(&query.target(next)));
     let vary = [(header::VARY, "Accept")];
     let body = match offer {
-        Offer::Json => json(StatusCode::OK, page(items.into_iter().map(|item| item.record), next.as_deref())),
+        // A picture is not among what this route offers.
+        Offer::Json | Offer::Svg => json(StatusCode::OK, page(items.into_iter().map(|item| item.record), next.as_deref())),
         Offer::Csv => {
             let table = table(&items).map_err(|error| Problem::internal(error.as_ref()))?;
             (StatusCode::OK, [(header::CONTENT_TYPE, "text/csv; charset=utf-8; header=present")], table).into_response()

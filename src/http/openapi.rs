@@ -39,6 +39,7 @@ use crate::scenario::LeakageDocument;
         (name = "certifications", description = "What was certified, and what was refused."),
         (name = "ledger", description = "The Merkle tree over everything that is recorded, for auditors."),
         (name = "leakage", description = "What leaves the carrier, from what was measured."),
+        (name = "forecasts", description = "What would be certified."),
         (name = "health", description = "For whoever watches over the process."),
     ),
     modifiers(&Tokens),

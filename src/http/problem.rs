@@ -14,7 +14,7 @@ use crate::{
     batch::BatchFault,
     fault::Fault,
     ledger::{LedgerError, seal::SealError, writer::WriteError},
-    service::{Check, OrderError, SolveError, SubmitError},
+    service::{Check, ForecastError, OrderError, SolveError, SubmitError},
 };
 
 /// Media type of every error.
@@ -324,6 +324,19 @@ impl From<OrderError> for Problem {
             OrderError::Solve(SolveError::Stopped) => LedgerError::Closed.into(),
             OrderError::Ledger(error) => error.into(),
             error @ (OrderError::Solve(SolveError::Panicked) | OrderError::Abandoned(_)) => Self::internal(&error),
+        }
+    }
+}
+
+impl From<ForecastError> for Problem {
+    fn from(error: ForecastError) -> Self {
+        match error {
+            ForecastError::TooLarge(fault) => Self::body(StatusCode::UNPROCESSABLE_ENTITY, fault),
+            ForecastError::Solve(SolveError::QueueFull { waiting, retry_after }) => {
+                Self::queue_full(format!("{waiting} jobs are waiting already. Ask for the forecast again."), retry_after)
+            }
+            ForecastError::Solve(SolveError::Stopped) => LedgerError::Closed.into(),
+            error @ ForecastError::Solve(SolveError::Panicked) => Self::internal(&error),
         }
     }
 }

@@ -20,7 +20,7 @@ use utoipa_axum::{router::OpenApiRouter, routes};
 
 use super::{
     access::{self, Gate, Rules},
-    batches, certifications, commitments, health, intake, leakage, ledger,
+    batches, certifications, commitments, forecasts, health, intake, leakage, ledger,
     limits::Limits,
     measurements, openapi,
     problem::Problem,
@@ -49,20 +49,21 @@ pub(super) fn routes() -> OpenApiRouter<Arc<Service>> {
         .routes(routes!(ledger::inclusion))
         .routes(routes!(ledger::consistency))
         .routes(routes!(leakage::post))
+        .routes(routes!(forecasts::post))
         .routes(routes!(openapi::get))
         .routes(routes!(health::live))
         .routes(routes!(health::ready))
         .routes(routes!(measurements::get))
 }
 
-/// The whole interface, with an answer for whatever is not part of it.
-pub(super) fn router(service: Arc<Service>, limits: &Limits) -> Router {
+/// The whole interface, with an answer for whatever is not part of it, and further routes beside it in the same layers.
+pub(super) fn router(service: Arc<Service>, limits: &Limits, beside: Router) -> Router {
     let (router, document) = routes().split_for_parts();
     // A document that cannot be written states no rule, and then nobody is let in.
     let rules = Rules::read(&serde_json::to_value(&document).unwrap_or_default());
     let gate = Gate::new(Arc::clone(&service), rules, limits);
     let guarded = router.route_layer(middleware::from_fn_with_state(gate, access::guard)).fallback(nothing).with_state(service);
-    dressed(guarded, limits)
+    dressed(guarded.merge(beside), limits)
 }
 
 /// What is left of the interface when there are too many connections: enough to see that the service is alive and busy.

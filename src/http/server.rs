@@ -42,8 +42,22 @@ struct House {
 /// # Errors
 /// None at present: connections that fail are their clients' loss.
 pub async fn run(listener: TcpListener, service: Arc<Service>, limits: Limits, shutdown: impl Future<Output = ()>) -> io::Result<()> {
+    run_beside(listener, service, limits, Router::new(), shutdown).await
+}
+
+/// The same with further routes beside the interface, in the same layers: the bench compares with those.
+///
+/// # Errors
+/// As [`run`].
+pub async fn run_beside(
+    listener: TcpListener,
+    service: Arc<Service>,
+    limits: Limits,
+    beside: Router,
+    shutdown: impl Future<Output = ()>,
+) -> io::Result<()> {
     let house = House {
-        app: router(Arc::clone(&service), &limits),
+        app: router(Arc::clone(&service), &limits, beside),
         crowded: crowded(Arc::clone(&service), &limits),
         places: Arc::new(Semaphore::new(limits.connections)),
         reserve: Arc::new(Semaphore::new(RESERVE)),

@@ -7,7 +7,7 @@ use uuid::Uuid;
 
 use super::{
     LedgerError,
-    rows::{Answered, NumberedCommitment, ProfileVersion, Read, Recorded, Tally, word},
+    rows::{Answered, KeptRow, NumberedCommitment, ProfileVersion, Read, Recorded, Tally, word},
 };
 use crate::{certificate::Verdict, clock::Stamp, committed::Committed, profile::RigName, record::Summary, submission::IdempotencyKey};
 
@@ -194,6 +194,16 @@ impl History {
                    ORDER BY w.digest";
         let witnesses = sqlx::query_as(sql).bind(clamped(number)).fetch_all(&self.pool).await?;
         Ok(Some((committed, witnesses)))
+    }
+
+    /// All witnesses that are kept for later batches, in the order in which they came.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn kept_witnesses(&self) -> Result<Vec<KeptRow>, LedgerError> {
+        let sql = "SELECT k.digest, w.document, k.made_for FROM kept_witnesses k JOIN witnesses w USING (digest) ORDER BY k.rowid";
+        let rows: Vec<(String, String, String)> = sqlx::query_as(sql).fetch_all(&self.pool).await?;
+        Ok(rows.into_iter().map(|(digest, document, made_for)| KeptRow { digest, document, made_for }).collect())
     }
 
     /// The answer that a submission was given.

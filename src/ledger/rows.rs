@@ -15,7 +15,7 @@ use crate::{
     record::Record,
     refusal::Refusal,
     submission::Submission,
-    witness::witness::Witness,
+    witness::{pool::Kept, witness::Witness},
 };
 
 /// One version of a rig's profile.
@@ -43,8 +43,10 @@ pub struct Entry {
     pub commitment: Option<Uuid>,
     /// The record's text.
     pub record: String,
-    /// Digest and document of each witness.
+    /// Digest and document of each witness that may be new to the ledger.
     pub witnesses: Vec<(String, String)>,
+    /// Digests of witnesses that are in the ledger already.
+    pub kept: Vec<String>,
     pub submission: Submission,
     /// The text that is answered where that is not the record itself.
     pub refusal: Option<String>,
@@ -55,8 +57,16 @@ impl Entry {
     ///
     /// # Errors
     /// A figure that JSON cannot hold.
-    pub fn new(record: &Record, witnesses: &[Witness], submission: Submission) -> Result<Self, serde_json::Error> {
+    pub fn new(record: &Record, witnesses: &[Witness], kept: &[Arc<Kept>], submission: Submission) -> Result<Self, serde_json::Error> {
         let certificate = &record.certificate;
+        let (mut witnesses, mut known) = (documents(witnesses), Vec::new());
+        for kept in kept {
+            let digest = kept.witness().digest().to_owned();
+            match kept.document() {
+                Some(document) => witnesses.push((digest, document.to_string())),
+                None => known.push(digest),
+            }
+        }
         Ok(Self {
             id: record.id,
             rig: record.rig.clone(),
@@ -69,7 +79,8 @@ impl Entry {
             failure: certificate.failure.map(|failure| failure.total),
             commitment: record.commitment,
             record: serde_json::to_string(record)?,
-            witnesses: documents(witnesses),
+            witnesses,
+            kept: known,
             submission,
             refusal: Refusal::of(record).map(|refusal| serde_json::to_string(&refusal)).transpose()?,
         })
@@ -82,6 +93,16 @@ pub fn documents(witnesses: &[Witness]) -> Vec<(String, String)> {
     documents.sort();
     documents.dedup();
     documents
+}
+
+/// A witness that is kept for later batches.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct KeptRow {
+    pub digest: String,
+    /// The witness's text.
+    pub document: String,
+    /// What it was made for, as JSON.
+    pub made_for: String,
 }
 
 /// One commitment of a list.

@@ -24,7 +24,7 @@ pub struct Source {
     /// The kind of its entries.
     pub kind: &'static str,
     /// The row of the subject `?1`.
-    row: &'static str,
+    pub(super) row: &'static str,
     /// Subject and time of each row, in the order in which they were written.
     rows: &'static str,
 }
@@ -88,7 +88,12 @@ impl Source {
     /// What is to be logged about a row as it stands now; `None` if there is no such row.
     pub(super) async fn draft(&self, connection: &mut SqliteConnection, subject: &str) -> Result<Option<Draft>, LedgerError> {
         let row = sqlx::query(self.row).bind(subject).fetch_optional(connection).await?;
-        row.map(|row| read(self.kind, &row)).transpose()
+        row.map(|row| self.read(&row)).transpose()
+    }
+
+    /// What is to be logged about a row that [`Self::row`] gave.
+    pub(super) fn read(&self, row: &SqliteRow) -> Result<Draft, LedgerError> {
+        read(self.kind, row)
     }
 
     /// The subject of a row that is not logged.

@@ -1,9 +1,9 @@
 //! Writing the ledger: one task, one transaction for everything that is waiting, one answer each after the commit.
 
-use std::sync::Mutex;
+use std::sync::{Arc, LazyLock, Mutex};
 
 use prometheus_client::metrics::histogram::Histogram;
-use sqlx::{Connection, SqliteConnection};
+use sqlx::{AssertSqlSafe, Connection, SqliteConnection};
 use tokio::{
     sync::{mpsc, oneshot},
     task::JoinHandle,
@@ -12,7 +12,7 @@ use tokio::{
 use super::{
     LedgerError,
     history::answered_within,
-    rows::{Answered, Entry, word},
+    rows::{Answered, Entry, KeptRow, word},
     seal::Fault,
     source::{CERTIFICATION, COMMITMENT, PROFILE},
     tree,
@@ -79,11 +79,13 @@ pub struct Settled {
 type ProfileAnswer = Result<(Kept, u64), WriteError>;
 type EntryAnswer = Result<Settled, WriteError>;
 type CommitmentAnswer = Result<(), LedgerError>;
+type KeptAnswer = Result<(), LedgerError>;
 
 enum Item {
     Profile { rig: RigName, profile: Box<Profile>, expectation: Expectation, recorded_at: Stamp, answer: oneshot::Sender<ProfileAnswer> },
     Entry { entry: Box<Entry>, answer: oneshot::Sender<EntryAnswer> },
     Commitment { committed: Box<Committed>, witnesses: Vec<(String, String)>, answer: oneshot::Sender<CommitmentAnswer> },
+    Kept { added: Vec<KeptRow>, dropped: Vec<String>, answer: oneshot::Sender<KeptAnswer> },
 }
 
 /// An item's outcome, kept back until the transaction is committed.
@@ -91,6 +93,7 @@ enum Outcome {
     Profile(oneshot::Sender<ProfileAnswer>, ProfileAnswer),
     Entry(oneshot::Sender<EntryAnswer>, EntryAnswer),
     Commitment(oneshot::Sender<CommitmentAnswer>, CommitmentAnswer),
+    Kept(oneshot::Sender<KeptAnswer>, KeptAnswer),
 }
 
 impl Outcome {
@@ -100,6 +103,7 @@ impl Outcome {
             Self::Profile(answer, outcome) => drop(answer.send(outcome)),
             Self::Entry(answer, outcome) => drop(answer.send(outcome)),
             Self::Commitment(answer, outcome) => drop(answer.send(outcome)),
+            Self::Kept(answer, outcome) => drop(answer.send(outcome)),
         }
     }
 
@@ -108,7 +112,8 @@ impl Outcome {
         match self {
             Self::Profile(_, Err(WriteError::Ledger(error)))
             | Self::Entry(_, Err(WriteError::Ledger(error)))
-            | Self::Commitment(_, Err(error)) => Some(error),
+            | Self::Commitment(_, Err(error))
+            | Self::Kept(_, Err(error)) => Some(error),
             _ => None,
         }
     }
@@ -118,6 +123,7 @@ impl Outcome {
             Self::Profile(answer, _) => Self::Profile(answer, Err(error.clone().into())),
             Self::Entry(answer, _) => Self::Entry(answer, Err(error.clone().into())),
             Self::Commitment(answer, _) => Self::Commitment(answer, Err(error.clone())),
+            Self::Kept(answer, _) => Self::Kept(answer, Err(error.clone())),
         }
     }
 }
@@ -128,6 +134,7 @@ impl Item {
             Self::Profile { answer, .. } => Outcome::Profile(answer, Err(error.clone().into())),
             Self::Entry { answer, .. } => Outcome::Entry(answer, Err(error.clone().into())),
             Self::Commitment { answer, .. } => Outcome::Commitment(answer, Err(error.clone())),
+            Self::Kept { answer, .. } => Outcome::Kept(answer, Err(error.clone())),
         }
     }
 
@@ -141,6 +148,7 @@ impl Item {
             Self::Commitment { committed, witnesses, answer } => {
                 Outcome::Commitment(answer, write_commitment(connection, &committed, &witnesses).await)
             }
+            Self::Kept { added, dropped, answer } => Outcome::Kept(answer, write_kept(connection, &added, &dropped).await),
         }
     }
 }
@@ -207,6 +215,16 @@ impl Writer {
         outcome.await.map_err(|_| LedgerError::Closed)?
     }
 
+    /// Writes down which witnesses are kept from now on, and which no longer; their documents stay.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn keep_witnesses(&self, added: Vec<KeptRow>, dropped: Vec<String>) -> KeptAnswer {
+        let (answer, outcome) = oneshot::channel();
+        self.sender()?.send(Item::Kept { added, dropped, answer }).await.map_err(|_| LedgerError::Closed)?;
+        outcome.await.map_err(|_| LedgerError::Closed)?
+    }
+
     /// Takes no more items, writes those that were taken, and closes the connection.
     pub(super) async fn close(&self) {
         drop(self.inbox.lock().unwrap_or_else(|poisoned| poisoned.into_inner()).take());
@@ -240,7 +258,7 @@ async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>, 
 /// Writes a group of items in one transaction. An item that fails is undone alone; if the transaction fails, all of them have.
 async fn commit(connection: &mut SqliteConnection, items: impl Iterator<Item = Item>) -> Vec<Outcome> {
     let mut outcomes = Vec::new();
-    let mut broken = execute(connection, "BEGIN IMMEDIATE").await.err();
+    let mut broken = execute(connection, "BEGIN IMMEDIATE; SAVEPOINT item").await.err();
     for item in items {
         let outcome = match &broken {
             Some(error) => item.failed(error),
@@ -258,23 +276,12 @@ async fn commit(connection: &mut SqliteConnection, items: impl Iterator<Item = I
     outcomes.into_iter().map(|outcome| outcome.failed(&error)).collect()
 }
 
-/// Writes one item inside a savepoint. `broken` is set if the transaction itself can no longer be trusted.
+/// Writes one item inside the savepoint that is open, and opens it anew. `broken` is set if the transaction itself can no longer be trusted.
 async fn write_undoable(connection: &mut SqliteConnection, item: Item, broken: &mut Option<LedgerError>) -> Outcome {
-    if let Err(error) = execute(connection, "SAVEPOINT item").await {
-        let outcome = item.failed(&error);
-        *broken = Some(error);
-        return outcome;
-    }
     let outcome = item.write(connection).await;
-    if outcome.broken().is_some()
-        && let Err(error) = execute(connection, "ROLLBACK TO item").await
-    {
-        *broken = Some(error);
-        return outcome;
-    }
-    if let Err(error) = execute(connection, "RELEASE item").await {
-        *broken = Some(error);
-    }
+    // Undone, the savepoint stays open for the next item.
+    let next = if outcome.broken().is_some() { "ROLLBACK TO item" } else { "RELEASE item; SAVEPOINT item" };
+    *broken = execute(connection, next).await.err();
     outcome
 }
 
@@ -325,44 +332,40 @@ async fn write_profile(
 }
 
 async fn write_entry(connection: &mut SqliteConnection, entry: Entry) -> EntryAnswer {
-    let Entry { submission, rig, .. } = &entry;
-    if let Some(answered) = answered_within(connection, rig, &submission.key).await? {
-        let same = answered.body_digest == submission.body_digest;
+    if let Err(error) = insert_entry(connection, &entry).await {
+        // The key may stand for a batch already. To ask first would cost every batch a question, and hardly any has been sent before.
+        execute(connection, "ROLLBACK TO item").await?;
+        let Some(answered) = answered_within(connection, &entry.rig, &entry.submission.key).await? else { return Err(error.into()) };
+        let same = answered.body_digest == entry.submission.body_digest;
         return if same { Ok(Settled { answered, replayed: true }) } else { Err(WriteError::KeyReused) };
     }
-    let number = insert_certification(connection, &entry).await?;
-    for (digest, document) in &entry.witnesses {
-        insert_witness(connection, digest, document).await?;
-        sqlx::query("INSERT INTO certification_witnesses (entry, digest) VALUES (?, ?)")
-            .bind(number)
-            .bind(digest)
-            .execute(&mut *connection)
-            .await?;
-    }
-    if let Some(commitment) = entry.commitment {
-        // A commitment that is not there makes this NULL, which the column refuses.
-        let sql = "INSERT INTO certification_commitments (entry, commitment) VALUES (?, (SELECT commitment FROM commitments WHERE id = ?))";
-        sqlx::query(sql).bind(number).bind(commitment.to_string()).execute(&mut *connection).await?;
-    }
-    sqlx::query("INSERT INTO submissions (rig, idempotency_key, body_digest, entry, refusal) VALUES (?, ?, ?, ?, ?)")
-        .bind(rig.as_str())
-        .bind(submission.key.as_str())
-        .bind(&submission.body_digest)
-        .bind(number)
-        .bind(&entry.refusal)
-        .execute(&mut *connection)
-        .await?;
-    tree::log(connection, &CERTIFICATION, &entry.id.to_string()).await?;
     let Entry { id, record, refusal, submission, .. } = entry;
     Ok(Settled { answered: Answered { id, body_digest: submission.body_digest, record, refusal }, replayed: false })
 }
 
-/// Adds the certification as the next entry; answers with its number.
-async fn insert_certification(connection: &mut SqliteConnection, entry: &Entry) -> Result<i64, WriteError> {
-    let sql = "INSERT INTO certifications (entry, id, rig, profile_version, verdict, reason, recorded_at, certified_bits, rounds, \
-               failure, record) VALUES ((SELECT COALESCE(MAX(entry), -1) + 1 FROM certifications), ?, ?, ?, ?, ?, ?, ?, ?, ?, ?) \
-               RETURNING entry";
-    let number = sqlx::query_scalar(sql)
+/// A certification with all that belongs to it, and the row that is logged about it. One text, so that the database is asked once.
+///
+/// A commitment that is not there makes its column NULL, which the column refuses.
+static ENTRY: LazyLock<Arc<str>> = LazyLock::new(|| {
+    let inserts = "\
+        INSERT INTO certifications (entry, id, rig, profile_version, verdict, reason, recorded_at, certified_bits, rounds, failure, record) \
+            VALUES ((SELECT COALESCE(MAX(entry), -1) + 1 FROM certifications), $1, $2, $3, $4, $5, $6, $7, $8, $9, $10); \
+        INSERT INTO certification_witnesses (entry, digest) \
+            SELECT c.entry, w.value FROM certifications c, json_each($11) w WHERE c.id = $1; \
+        INSERT INTO certification_commitments (entry, commitment) \
+            SELECT entry, (SELECT commitment FROM commitments WHERE id = $12) FROM certifications WHERE id = $1 AND $12 IS NOT NULL; \
+        INSERT INTO submissions (rig, idempotency_key, body_digest, entry, refusal) \
+            SELECT $2, $13, $14, entry, $15 FROM certifications WHERE id = $1; ";
+    format!("{inserts}{}", CERTIFICATION.row).into()
+});
+
+/// Adds the certification as the next entry, with its witnesses and its submission, and logs it.
+async fn insert_entry(connection: &mut SqliteConnection, entry: &Entry) -> Result<(), LedgerError> {
+    for (digest, document) in &entry.witnesses {
+        insert_witness(connection, digest, document).await?;
+    }
+    let digests: Vec<&String> = entry.witnesses.iter().map(|(digest, _)| digest).chain(&entry.kept).collect();
+    let row = sqlx::query(AssertSqlSafe(Arc::clone(&ENTRY)))
         .bind(entry.id.to_string())
         .bind(entry.rig.as_str())
         .bind(signed(entry.profile_version, "version")?)
@@ -373,9 +376,16 @@ async fn insert_certification(connection: &mut SqliteConnection, entry: &Entry) 
         .bind(signed(entry.rounds, "number of rounds")?)
         .bind(entry.failure)
         .bind(&entry.record)
-        .fetch_one(connection)
+        // Strings only: serialisation cannot fail.
+        .bind(serde_json::to_string(&digests).unwrap_or_default())
+        .bind(entry.commitment.map(|id| id.to_string()))
+        .bind(entry.submission.key.as_str())
+        .bind(&entry.submission.body_digest)
+        .bind(&entry.refusal)
+        .fetch_one(&mut *connection)
         .await?;
-    Ok(number)
+    tree::append(connection, &CERTIFICATION.read(&row)?).await?;
+    Ok(())
 }
 
 async fn write_commitment(connection: &mut SqliteConnection, committed: &Committed, witnesses: &[(String, String)]) -> CommitmentAnswer {
@@ -397,6 +407,18 @@ async fn write_commitment(connection: &mut SqliteConnection, committed: &Committ
         sqlx::query(sql).bind(number).bind(digest).execute(&mut *connection).await?;
     }
     tree::log(connection, &COMMITMENT, &committed.id.to_string()).await?;
+    Ok(())
+}
+
+async fn write_kept(connection: &mut SqliteConnection, added: &[KeptRow], dropped: &[String]) -> KeptAnswer {
+    for KeptRow { digest, document, made_for } in added {
+        insert_witness(connection, digest, document).await?;
+        let sql = "INSERT OR REPLACE INTO kept_witnesses (digest, made_for) VALUES (?, ?)";
+        sqlx::query(sql).bind(digest).bind(made_for).execute(&mut *connection).await?;
+    }
+    for digest in dropped {
+        sqlx::query("DELETE FROM kept_witnesses WHERE digest = ?").bind(digest).execute(&mut *connection).await?;
+    }
     Ok(())
 }
 

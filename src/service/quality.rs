@@ -1,7 +1,11 @@
 //! What the reader of a record should know about the batch's data.
 
-use serde::Deserialize;
+use std::sync::Arc;
 
+use serde::Deserialize;
+use uuid::Uuid;
+
+use super::newest::Newest;
 use crate::{
     certificate::{Certificate, Verdict},
     counts::{Counts, Table},
@@ -19,30 +23,36 @@ const SIGNIFICANCE: f64 = 1e-3;
 /// The part of an earlier record that a batch is compared with.
 #[derive(Deserialize)]
 struct Earlier {
+    id: Uuid,
     counts: Option<Table<u64>>,
 }
 
-/// Settings against the distribution that was declared or committed, outcomes against the rig's newest certified batch, and settings with few rounds.
+/// Counts of the rig's newest certified batch, as far as anybody can tell while others are being written.
 ///
 /// # Errors
 /// The ledger's.
-pub async fn concerns(
-    ledger: &Ledger,
-    rig: &RigName,
-    distribution: Option<&[Vec<f64>]>,
-    certificate: &Certificate,
-) -> Result<Vec<Concern>, LedgerError> {
+pub(super) async fn previous(ledger: &Ledger, newest: &Newest, rig: &RigName) -> Result<Option<Arc<Table<u64>>>, LedgerError> {
+    if let Some(known) = newest.certified(rig) {
+        return Ok(known);
+    }
+    let filter = Filter { rig: Some(rig.clone()), verdict: Some(Verdict::Certified), ..Filter::default() };
+    let found = ledger.history.page(&filter, 1).await?.items.into_iter().next();
+    let earlier = found.and_then(|recorded| serde_json::from_str::<Earlier>(&recorded.record).ok());
+    let counts = earlier.as_ref().and_then(|earlier| earlier.counts.clone()).map(Arc::new);
+    newest.note_certified(rig, earlier.map(|earlier| earlier.id), counts.clone());
+    Ok(counts)
+}
+
+/// Settings against the distribution that was declared or committed, outcomes against an earlier batch, and settings with few rounds.
+pub(super) fn concerns(previous: Option<&Table<u64>>, distribution: Option<&[Vec<f64>]>, certificate: &Certificate) -> Vec<Concern> {
     let geometry = certificate.scenario.geometry();
     let fitting = |table: Table<u64>| Counts::try_new(table, geometry).ok();
     // A certificate of a posted batch has counts, and they fit.
-    let Some(counts) = certificate.counts.clone().and_then(fitting) else { return Ok(vec![]) };
-    let filter = Filter { rig: Some(rig.clone()), verdict: Some(Verdict::Certified), ..Filter::default() };
-    let newest = ledger.history.page(&filter, 1).await?.items.into_iter().next();
-    let table = newest.and_then(|recorded| serde_json::from_str::<Earlier>(&recorded.record).ok()?.counts);
+    let Some(counts) = certificate.counts.clone().and_then(fitting) else { return vec![] };
     // A batch of another geometry is nothing to compare with.
-    let previous = table.and_then(fitting);
+    let previous = previous.cloned().and_then(fitting);
     let expectations = Expectations { distribution, previous: previous.as_ref(), least_rounds: LEAST_ROUNDS, significance: SIGNIFICANCE };
     // Distribution and counts fit the geometry of a valid profile or commitment.
     let findings = examine(&counts, &expectations).unwrap_or_default();
-    Ok(findings.into_iter().map(|finding| Concern { detail: finding.to_string(), finding }).collect())
+    findings.into_iter().map(|finding| Concern { detail: finding.to_string(), finding }).collect()
 }

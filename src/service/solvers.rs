@@ -1,11 +1,12 @@
-//! A fixed number of threads that solve, behind a queue of fixed length.
+//! A fixed number of threads that solve, behind a queue of fixed length. What nobody waits for has a queue of its own: it is done when nothing
+//! else is to be done, and never on all threads at once, so that one is always there for who waits.
 
 use std::{
+    collections::VecDeque,
     panic::{AssertUnwindSafe, catch_unwind},
     sync::{
-        Arc, Mutex, MutexGuard,
+        Arc, Condvar, Mutex, MutexGuard,
         atomic::{AtomicU64, AtomicUsize, Ordering},
-        mpsc::{Receiver, SyncSender, TrySendError, sync_channel},
     },
     thread::JoinHandle,
     time::{Duration, Instant},
@@ -60,13 +61,33 @@ impl Load {
     }
 }
 
+/// Most jobs that wait though nobody waits for them.
+const SPARE: usize = 4;
+
+/// What waits.
+#[derive(Default)]
+struct Queue {
+    jobs: VecDeque<Job>,
+    spare: VecDeque<Job>,
+    /// Threads that are at a spare job.
+    at_spare: usize,
+    closed: bool,
+}
+
+/// The queue, and the news that something changed about it.
+#[derive(Default)]
+struct Waiting {
+    queue: Mutex<Queue>,
+    changed: Condvar,
+}
+
 /// The threads and their queue.
 pub struct Solvers {
     certifier: Certifier,
-    /// `None` once closed.
-    queue: Mutex<Option<SyncSender<Job>>>,
+    waiting: Arc<Waiting>,
     threads: Mutex<Vec<JoinHandle<()>>>,
     number: usize,
+    length: usize,
     load: Arc<Load>,
 }
 
@@ -77,25 +98,35 @@ impl Solvers {
     /// The operating system's, if it refuses a thread.
     pub fn start(number: usize, length: usize, certifier: Certifier) -> std::io::Result<Self> {
         let number = number.max(1);
-        let (queue, jobs) = sync_channel(length.max(1));
-        let jobs = Arc::new(Mutex::new(jobs));
+        let waiting = Arc::new(Waiting::default());
         let load = Arc::new(Load::default());
         let threads = (0..number)
             .map(|i| {
-                let (jobs, load) = (Arc::clone(&jobs), Arc::clone(&load));
-                std::thread::Builder::new().name(format!("solver-{i}")).spawn(move || work(&jobs, &load))
+                let (waiting, load) = (Arc::clone(&waiting), Arc::clone(&load));
+                std::thread::Builder::new().name(format!("solver-{i}")).spawn(move || work(&waiting, number, &load))
             })
             .collect::<Result<Vec<_>, _>>()?;
-        Ok(Self { certifier, queue: Mutex::new(Some(queue)), threads: Mutex::new(threads), number, load })
+        Ok(Self { certifier, waiting, threads: Mutex::new(threads), number, length: length.max(1), load })
     }
 
-    /// Has a request certified, once a thread is free.
-    ///
-    /// # Errors
-    /// A full queue, a panic inside the solve, or closed solvers.
-    pub(super) async fn certify(&self, request: Request) -> Result<Solved<Certification>, SolveError> {
-        let certifier = Arc::clone(&self.certifier);
-        self.run(move || certifier(&request)).await
+    /// What certifies.
+    pub(super) fn certifier(&self) -> Certifier {
+        Arc::clone(&self.certifier)
+    }
+
+    /// Has a job done that nobody waits for, once there is nothing else to do. Answers whether it was taken: with a single thread none is, nor
+    /// while others like it wait.
+    pub(super) fn offer(&self, job: impl FnOnce() + Send + 'static) -> bool {
+        let mut queue = own(&self.waiting.queue);
+        let taken = !queue.closed && self.number > 1 && queue.spare.len() < SPARE;
+        if taken {
+            queue.spare.push_back(Box::new(move |_: &Load| {
+                // As for other jobs; the panic itself has been logged.
+                drop(catch_unwind(AssertUnwindSafe(job)));
+            }));
+            self.waiting.changed.notify_one();
+        }
+        taken
     }
 
     /// Runs a job, once a thread is free.
@@ -119,17 +150,18 @@ impl Solvers {
     }
 
     fn enqueue(&self, job: Job) -> Result<(), SolveError> {
-        let queue = own(&self.queue);
-        let queue = queue.as_ref().ok_or(SolveError::Stopped)?;
-        // Counted before the job can be taken off, so that the count never falls below zero.
-        let waiting = self.load.waiting.fetch_add(1, Ordering::Relaxed);
-        queue.try_send(job).map_err(|error| {
-            self.load.waiting.fetch_sub(1, Ordering::Relaxed);
-            match error {
-                TrySendError::Full(_) => SolveError::QueueFull { waiting, retry_after: self.retry_after(waiting) },
-                TrySendError::Disconnected(_) => SolveError::Stopped,
-            }
-        })
+        let mut queue = own(&self.waiting.queue);
+        if queue.closed {
+            return Err(SolveError::Stopped);
+        }
+        let waiting = queue.jobs.len();
+        if waiting >= self.length {
+            return Err(SolveError::QueueFull { waiting, retry_after: self.retry_after(waiting) });
+        }
+        queue.jobs.push_back(job);
+        self.load.waiting.store(queue.jobs.len(), Ordering::Relaxed);
+        self.waiting.changed.notify_one();
+        Ok(())
     }
 
     /// How long until half of those waiting are through, from a second to two minutes.
@@ -146,16 +178,21 @@ impl Solvers {
 
     /// What is wrong with the solvers, if anything is.
     pub(super) fn fault(&self) -> Option<String> {
-        if own(&self.queue).is_none() {
+        if own(&self.waiting.queue).closed {
             return Some("the solvers have stopped".into());
         }
         let gone = own(&self.threads).iter().filter(|thread| thread.is_finished()).count();
         (gone > 0).then(|| format!("{gone} of {} solver threads are gone", self.number))
     }
 
-    /// Takes no more jobs, does those that were taken, and ends the threads.
+    /// Takes no more jobs, does those that somebody waits for, and ends the threads.
     pub(super) async fn close(&self) {
-        drop(own(&self.queue).take());
+        {
+            let mut queue = own(&self.waiting.queue);
+            queue.closed = true;
+            queue.spare.clear();
+        }
+        self.waiting.changed.notify_all();
         let threads = std::mem::take(&mut *own(&self.threads));
         let joined = tokio::task::spawn_blocking(move || threads.into_iter().filter_map(|thread| thread.join().err()).count()).await;
         if !matches!(joined, Ok(0)) {
@@ -169,11 +206,26 @@ fn own<T>(mutex: &Mutex<T>) -> MutexGuard<'_, T> {
     mutex.lock().unwrap_or_else(|poisoned| poisoned.into_inner())
 }
 
-fn work(jobs: &Mutex<Receiver<Job>>, load: &Load) {
+fn work(waiting: &Waiting, threads: usize, load: &Load) {
+    let mut queue = own(&waiting.queue);
     loop {
-        // The lock is held while waiting: idle threads queue for the lock in place of the channel.
-        let Ok(job) = own(jobs).recv() else { return };
-        load.waiting.fetch_sub(1, Ordering::Relaxed);
-        job(load);
+        if let Some(job) = queue.jobs.pop_front() {
+            load.waiting.store(queue.jobs.len(), Ordering::Relaxed);
+            drop(queue);
+            job(load);
+            queue = own(&waiting.queue);
+        } else if queue.closed {
+            return;
+        } else if queue.at_spare + 1 < threads
+            && let Some(job) = queue.spare.pop_front()
+        {
+            queue.at_spare += 1;
+            drop(queue);
+            job(load);
+            queue = own(&waiting.queue);
+            queue.at_spare -= 1;
+        } else {
+            queue = waiting.changed.wait(queue).unwrap_or_else(|poisoned| poisoned.into_inner());
+        }
     }
 }

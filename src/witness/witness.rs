@@ -17,7 +17,12 @@ use sha2::{Digest, Sha256};
 
 use crate::{
     counts::Table,
-    relaxation::{cells::Cut, parity::Parity, word::Monomial},
+    relaxation::{
+        cells::Cut,
+        level::Level,
+        parity::Parity,
+        word::{Algebra, Monomial},
+    },
     scenario::{Geometry, LeakageReading, Setting},
 };
 
@@ -125,6 +130,14 @@ impl Witness {
     pub fn canonical_json(&self) -> String {
         // Strings, integers and arrays only: serialisation cannot fail.
         serde_json::to_string(self).unwrap_or_default()
+    }
+
+    /// Whether the bases are those of a level.
+    pub fn is_of_level(&self, level: Level) -> bool {
+        let algebra = Algebra::new(self.geometry, &self.exact);
+        let bases = level.bases(&algebra);
+        bases.len() == self.bases.len()
+            && bases.iter().zip(&self.bases).all(|(basis, span)| basis.parity == span.parity && basis.monomials == span.monomials)
     }
 
     /// `sha256:` and the digest of the canonical bytes, in lower-case hexadecimal.

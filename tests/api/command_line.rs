@@ -173,3 +173,44 @@ fn a_reader_that_stops_ends_the_command_quietly() {
     child.stderr.take().unwrap().read_to_string(&mut said).unwrap();
     assert_eq!((child.wait().unwrap().code(), said.as_str()), (Some(141), ""));
 }
+
+/// The attack on the noisy 2→1 code comes out with its model, next to the bound.
+#[test]
+fn an_attack_is_printed_with_its_model() {
+    let folder = tempfile::tempdir().unwrap();
+    let file = folder.path().join("request.json");
+    let right = 0.5 * (1.0 + 0.99 / 2f64.sqrt());
+    let answers = |x: usize, y: usize| if x >> y & 1 == 0 { [right, 1.0 - right] } else { [1.0 - right, right] };
+    let behaviour: Vec<Vec<[f64; 2]>> = (0..4).map(|x| (0..2).map(|y| answers(x, y)).collect()).collect();
+    let request = serde_json::json!({
+        "scenario": { "preparations": 4, "measurements": 2, "outcomes": 2, "carrier_dimension": 2, "leakage": 0, "targets": [[0, 0]] },
+        "behaviour": behaviour, "rounds": "plug-in", "level": "sharp" });
+    std::fs::write(&file, request.to_string()).unwrap();
+    let output = bitassay().arg("attack").arg(&file).output().unwrap();
+    let words = String::from_utf8(output.stderr).unwrap();
+    assert_eq!(output.status.code(), Some(0), "{words}");
+    assert!(words.contains("an adversary guesses at least 0.88185") && words.lines().count() == 1, "{words}");
+    let report: serde_json::Value = serde_json::from_slice(&output.stdout).unwrap();
+    let target = &report["targets"][0];
+    let (attack, bound) = (target["attack"].as_f64().unwrap(), target["bound"].as_f64().unwrap());
+    assert!(attack <= bound && bound - attack < 1e-5, "{attack} {bound}");
+    // The figure is the one that the printed weights, states and measurements give.
+    let number = |value: &serde_json::Value| (value[0].as_f64().unwrap(), value[1].as_f64().unwrap());
+    let mut guessed = 0.0;
+    for strategy in target["model"]["strategies"].as_array().unwrap() {
+        let state: Vec<(f64, f64)> = strategy["states"][0].as_array().unwrap().iter().map(number).collect();
+        let element = &strategy["measurements"][0][strategy["guess"].as_u64().unwrap() as usize];
+        let mut probability = 0.0;
+        for (i, (a, b)) in state.iter().enumerate() {
+            for (j, (c, d)) in state.iter().enumerate() {
+                let (re, im) = number(&element[i][j]);
+                // The real part of (a − ib)(re + i im)(c + id).
+                probability += (a * c + b * d) * re - (a * d - b * c) * im;
+            }
+        }
+        guessed += strategy["weight"].as_f64().unwrap() * probability;
+    }
+    assert!((guessed - attack).abs() < 1e-9, "{guessed} {attack}");
+    std::fs::write(&file, "{}").unwrap();
+    assert_eq!(bitassay().arg("attack").arg(&file).output().unwrap().status.code(), Some(2));
+}

@@ -127,6 +127,7 @@ fn entry(key: &str, witness: &str) -> Entry {
         commitment: None,
         record: format!("{{\"key\":\"{key}\"}}"),
         witnesses: vec![(witness.to_owned(), "{}".to_owned())],
+        kept: vec![],
         submission: Submission { key: IdempotencyKey::try_from(key).unwrap(), body_digest: "sha256:0".into() },
         refusal: None,
     }

@@ -49,6 +49,7 @@ pub fn document(counts: Table<u64>, dimension: u32, leakage: f64) -> RequestDocu
         level: LevelChoice::Lean,
         entropy: EntropyChoice::Guessing,
         lost_rounds: None,
+        bracket: false,
     }
 }
 

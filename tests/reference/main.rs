@@ -1,5 +1,6 @@
 //! Values from outside: published, handbook, derived by hand, or reached by explicit strategies. The source stands beside each.
 
+mod attacks;
 mod codes;
 mod curves;
 mod entropies;
