@@ -12,9 +12,9 @@ from record import counts_digest
 OTHERS = {
     "leakage_holds": ["on-average", "every-emission"],
     "rounds": ["independent", "plug-in", "memory"],
-    "entropy": ["guessing", "power"],
+    "entropy": ["auto", "guessing", "power"],
     "verdict": ["certified", "refused", "estimate"],
-    "level": ["lean", "standard", "sharp"],
+    "level": ["sparse", "lean", "standard", "sharp"],
     "parity": ["even", "odd"],
     "kind": ["guess", "power", "contradiction"],
     "reason": ["zero-bound", "outside-model", "unverified", "uncommitted"],
@@ -123,6 +123,8 @@ def mutations(document, random, count):
         attempt += 1
         path = random.choice(sections[name])
         value = get(document, path)
+        if value is None:
+            continue
         siblings = get(document, path[:-1]) if name[-1:] == ("monomials",) else ()
         steps = []
         if name == ("record", "counts") and random.random() < 0.5:

@@ -19,9 +19,9 @@ from words import Refused, require
 ROUNDING = Fraction(1, 10**13)
 # Assumed variance of ln p from which the power of independent rounds is chosen. Any value would do that does not depend on the outcomes.
 VARIANCE = Decimal("0.4")
-# The power is one of sixteen in a factor of two.
-POWER_STEPS = 16
 DISTRIBUTION_BITS = 38
+# The power of a diagnostic: the entropy is Shannon's up to a millionth.
+SMALL_POWER = 2**10
 
 
 class Scenario:
@@ -54,6 +54,9 @@ class Point:
     def likeliest(self, x, y):
         return max(self.vertices(x, y)[0])
 
+    def largest_power_entropy(self, x, y, power):
+        return power_entropy(self.vertices(x, y)[0], power)
+
 
 class Scores:
     """All behaviours that reach some scores."""
@@ -63,6 +66,9 @@ class Scores:
 
     def likeliest(self, x, y):
         return Fraction(1, self.outcomes)
+
+    def largest_power_entropy(self, x, y, power):
+        return power_entropy([Fraction(1, self.outcomes)] * self.outcomes, power)
 
 
 class Region:
@@ -131,7 +137,7 @@ class Bundle:
     def check(self):
         record, scenario = self.record, self.scenario
         require(record["rounds"] in ("plug-in", "independent", "memory"), "rounds are accounted for in one of three ways")
-        require(record.get("entropy", "guessing") in ("guessing", "power"), "the entropy is one of two")
+        require(record.get("entropy", "auto") in ("auto", "guessing", "power"), "the entropy is one of three")
         require(isinstance(record["assumptions"], list) and record["assumptions"], "the assumptions are missing")
         counts, sizes = record["counts"], [scenario.geometry[size] for size in SIZES[:3]]
         self.total = None
@@ -179,7 +185,7 @@ class Bundle:
             return Point(behaviour)
         require(counts is not None and is_table(region, *sizes, 2), "independent rounds need counts and a region")
         outcomes = geometry["outcomes"]
-        share = Fraction(1, 2) if record.get("entropy") == "power" else 1
+        share = 1 if record.get("entropy") == "guessing" else Fraction(1, 2)
         alpha = real(self.failure["estimation"] * share / (len(settings(geometry)) * (1 if outcomes == 2 else outcomes)))
         # Two outcomes have one event: both intervals hold the exact one of the first outcome or its mirror image, which misses the probability
         # with alpha at most. So they count once.
@@ -220,13 +226,14 @@ class Bundle:
         require(abs(target["rounding_cost"] - cost) <= cost / 10**9, f"{here}/rounding_cost is another one")
         per_round = -log2(bound)
         at_most(target["min_entropy_per_round"], per_round, real(ROUNDING), f"{here}/min_entropy_per_round")
+        if target.get("power") is not None:
+            self.check_power(target["power"], setting, rounds, f"{here}/power")
         if record["rounds"] == "plug-in":
-            require(all(target.get(m) is None for m in ("min_entropy", "publication_cost", "hashing_cost", "power")), f"{here} has no rounds")
+            require(all(target.get(m) is None for m in ("min_entropy", "publication_cost", "hashing_cost")), f"{here} has no rounds")
             require(target["certified_bits"] == 0, f"{here}: no bits come from a plug-in figure")
             return
         best = rounds * per_round
-        if target.get("power") is not None:
-            self.check_power(target["power"], setting, rounds, f"{here}/power")
+        if target.get("power") is not None and target["power"]["min_entropy"] is not None:
             best = max(best, real(target["power"]["min_entropy"]))
         room = rounds * real(ROUNDING) + real(ROUNDING) * best
         at_most(target["min_entropy"], best, room, f"{here}/min_entropy")
@@ -238,14 +245,6 @@ class Bundle:
 
     def check_power(self, power, setting, rounds, here):
         """Min-entropy of the string that follows from a power entropy, by Markov's inequality."""
-<<<<<<< ours
-        require(self.record.get("entropy") == "power", f"{here} was not asked for")
-        failure = self.failure["estimation"] / (2 * len(self.scenario.targets))
-        at_most(power["failure"], failure, failure * ROUNDING, f"{here}/failure")
-        # The power may depend on the number of rounds and on nothing else that was observed.
-        chosen = min((2 * -ln(power["failure"]) / (rounds * VARIANCE)).sqrt(), Decimal(1)) * 2**30
-        require(is_integer(power["power"], 1, 2**30) and abs(power["power"] - max(chosen, 1)) <= 1, f"{here}/power was not chosen ahead")
-=======
         if self.record["rounds"] == "plug-in":
             require(power["power"] == SMALL_POWER, f"{here}/power is not the one of a diagnostic")
             share = None
@@ -254,18 +253,13 @@ class Bundle:
             drawn = self.record.get("entropy", "auto") != "guessing"
             share = self.failure["estimation"] / (len(self.scenario.targets) * (2 if drawn else 1))
             # The power may depend on the number of rounds and on nothing else that was observed.
-            steps = min(log2(2 * -ln(share) / (rounds * VARIANCE)) / 2, Decimal(0)) * POWER_STEPS
-            # Doubles may take a number that is almost a whole one for its neighbour.
-            floors = {(steps + error).to_integral_value("ROUND_FLOOR") for error in (Decimal("-1e-9"), Decimal("1e-9"))}
-            chosen = [max((floor / POWER_STEPS * LN2).exp() * 2**30, Decimal(1)) for floor in floors]
-            require(any(abs(power["power"] - value) <= 1 for value in chosen), f"{here}/power was not chosen ahead")
+            chosen = min((2 * -ln(share) / (rounds * VARIANCE)).sqrt(), Decimal(1)) * 2**30
+            require(is_integer(power["power"], 1, 2**30) and abs(power["power"] - max(chosen, 1)) <= 1, f"{here}/power was not chosen ahead")
             share = share if drawn else None
         require((power["failure"] is None) == (power["min_entropy"] is None) == (share is None), f"{here}: bits are drawn at a failure probability")
->>>>>>> theirs
         witness = self.witness(power["witness"])
         require(witness.kind == "power" and tuple(witness.target) == setting, f"{here}/witness bounds something else")
-        # The entropy falls as the power rises, so a witness for a larger power will do.
-        require(is_integer(power["power"], 1, witness.claim["power"]), f"{here}/witness is for a smaller power")
+        require(witness.claim["power"] == power["power"], f"{here}/witness is for another power")
         require(witness.is_of_level(power["level"]), f"{here}/level is another one")
         entropy = -witness.bound(self.scenario, self.place)
         most = self.place.largest_power_entropy(*setting, power["power"])
@@ -273,6 +267,9 @@ class Bundle:
         at_most(power["entropy_per_round"], max(real(entropy) / LN2, Decimal(0)), real(ROUNDING), f"{here}/entropy_per_round")
         cost = witness.rounding_cost
         require(abs(power["rounding_cost"] - cost) <= cost / 10**9, f"{here}/rounding_cost is another one")
+        if share is None:
+            return
+        at_most(power["failure"], share, share * ROUNDING, f"{here}/failure")
         beta = power_value(power["power"])
         proved = max(-rounds * log2(1 - beta * entropy) + log2(power["failure"]), Decimal(0)) / real(beta)
         at_most(power["min_entropy"], proved, (rounds * real(ROUNDING) / 100 + Decimal("1e-12")) / real(beta), f"{here}/min_entropy")

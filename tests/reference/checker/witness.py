@@ -290,16 +290,29 @@ class Witness:
     def is_of_level(self, level):
         """Whether the bases are those of a named level; a monomial stands for its adjoint as well."""
         x_size, y_size, b_size = (self.geometry[size] for size in SIZES[:3])
-        states = [("R", x) for x in range(x_size)]
+        V, N, states = ("V",), ("N",), [("R", x) for x in range(x_size)]
         outcomes = [("M", b, y) for y in range(y_size) for b in range(b_size - 1)]
-        wanted = [(r,) for r in states] + [(("V",),)] + [(("V",), m) for m in outcomes] + [(r, m) for r in states for m in outcomes]
-        wanted += [(("N",), r) for r in states if not self.exact[r[1]]]
-        if level in ("standard", "sharp"):
-            wanted += [(one, two) for one in states for two in states if one < two]
-        if level == "sharp":
-            wanted += [(r, one, two) for r in states for one in outcomes for two in outcomes if one[2] != two[2]]
-        inner = lambda word: tuple(letter for letter in word if letter != ("V",)) if self.algebra.flat else word
-        odd = [word for word in wanted if inner(word) != inner(word)[::-1]]
-        same = lambda words: sorted(min(word, word[::-1]) for word in words)
-        found = [(parity, same(parse(text, self.geometry) for text in monomials)) for parity, monomials in self.bases]
-        return found == [("even", same(wanted)), ("odd", same(odd))]
+        if level == "sparse":
+            shared = [(r,) for r in states] + [(V,)] + [(V, m) for m in outcomes] + [(V, m, V) for m in outcomes]
+            shared += [(V, one, two) for one in outcomes for two in outcomes if one[2] != two[2]]
+            inside = lambda r: () if self.exact[r[1]] else ((N,),)
+            own = lambda r: [(r, *n, *m) for n in ((), *inside(r)) for m in ((), *((m,) for m in outcomes))]
+            families = [shared] + [own(r) for r in states]
+        else:
+            wanted = [(r,) for r in states] + [(V,)] + [(V, m) for m in outcomes] + [(r, m) for r in states for m in outcomes]
+            wanted += [(N, r) for r in states if not self.exact[r[1]]]
+            if level in ("standard", "sharp"):
+                wanted += [(one, two) for one in states for two in states if one < two]
+            if level == "sharp":
+                wanted += [(r, one, two) for r in states for one in outcomes for two in outcomes if one[2] != two[2]]
+            families = [wanted]
+        # In the flat algebra the carrier is the identity.
+        inner = lambda word: tuple(letter for letter in word if letter != V) if self.algebra.flat else word
+        one_of_two = lambda word: min(inner(word), inner(word)[::-1])
+        expected = []
+        for family in families:
+            even = sorted(set(map(one_of_two, family)))
+            odd = [word for word in even if word != word[::-1]]
+            expected += [("even", even)] + [("odd", odd)] * bool(odd)
+        found = [(parity, sorted(one_of_two(parse(text, self.geometry)) for text in monomials)) for parity, monomials in self.bases if monomials]
+        return found == expected
