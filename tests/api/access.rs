@@ -41,6 +41,7 @@ const TABLE: &[(&str, &str)] = &[
     ("metrics", "public"),
     ("post_batch", "rig"),
     ("post_commitment", "operator"),
+    ("post_forecast", "rig operator auditor"),
     ("post_leakage", "rig operator auditor"),
     ("put_rig", "operator"),
     ("readyz", "public"),
