@@ -106,8 +106,13 @@ pub fn certify_from(pool: &Pool, request: &Request, acceptable_loss: f64) -> Opt
         }
         draft.add(request, *target, guess.level(), guess.witness(), &bound, Some(Origin::Kept));
         if request.power_start.is_some() && bound.rounded_up() < 1.0 {
-            let PowerTerms { power, .. } = power_terms(request, *target);
-            let (of_power, bound) = best(Subject::Power(*target), Some(power))?;
+            let PowerTerms { power, failure } = power_terms(request, *target);
+            let (of_power, bound) = match (best(Subject::Power(*target), Some(power)), failure) {
+                (Some(best), _) => best,
+                // Nothing is drawn from it: not worth a solve.
+                (None, None) => continue,
+                (None, Some(_)) => return None,
+            };
             let added = draft.add_power(request, *target, &evidence, of_power.level(), of_power.witness(), &bound, Some(Origin::Kept));
             if !added {
                 return None;

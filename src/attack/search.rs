@@ -91,7 +91,31 @@ pub struct Hints<'a> {
 /// The best explicit attack found on a target of a scenario whose behaviour lies in the place.
 ///
 /// `None` if the place does not fit the scenario, if nothing was found that obeys the leakage, or if the solver gave up.
+///
+/// A hint is no more than that: where the best prices are not unique it may lead astray, and a search that did not settle is made again
+/// without it.
 pub fn attack(scenario: &Scenario, target: Setting, place: Place, objective: Objective, hints: Hints, effort: Effort) -> Option<Attack> {
+    let first = attack_once(scenario, target, place, objective, hints, effort);
+    if hints.witness.is_none() || first.as_ref().is_some_and(|first| first.settled) {
+        return first;
+    }
+    let second = attack_once(scenario, target, place, objective, Hints { witness: None, ..hints }, effort);
+    match (first, second) {
+        (Some(first), Some(second)) => {
+            let better = match objective {
+                Objective::Guess => second.guessing_probability() > first.guessing_probability(),
+                Objective::PowerEntropy { .. } => false,
+            };
+            Some(if better && second.residual <= first.residual.max(USUAL_RESIDUAL) { second } else { first })
+        }
+        (first, second) => first.or(second),
+    }
+}
+
+/// A residual that is due to rounding.
+const USUAL_RESIDUAL: f64 = 1e-10;
+
+fn attack_once(scenario: &Scenario, target: Setting, place: Place, objective: Objective, hints: Hints, effort: Effort) -> Option<Attack> {
     let geometry = scenario.geometry();
     let intervals = narrowed(place, geometry)?;
     if target.x >= geometry.preparations || target.y >= geometry.measurements {

@@ -88,7 +88,9 @@ fn a_batch_sent_again_is_answered_again() {
     let (running, client) = with_rig();
     for (key, body, status) in [("good", batch(1000), 201), ("bad", batch(999), 422)] {
         let first = client.post_batch("bench", key, &body).expect(status);
-        let rows = running.rows();
+        // Witnesses are kept for later when nobody waits for that.
+        let rows = || running.rows().into_iter().filter(|(table, _)| table != "kept_witnesses").collect::<Vec<_>>();
+        let before = rows();
         let again = client.post_batch("bench", key, &body).expect(status);
         assert_eq!(again.body, first.body);
         for header in ["location", "content-type"] {
@@ -98,7 +100,7 @@ fn a_batch_sent_again_is_answered_again() {
         let reused = client.post_batch("bench", key, &batch(1002)).expect(422).json();
         assert_eq!(reused["type"], "urn:bitassay:problem:key-reused");
         assert_eq!(reused["errors"][0]["header"], "Idempotency-Key");
-        assert_eq!(running.rows(), rows);
+        assert_eq!(rows(), before);
     }
     // Another rig's keys are its own.
     client.put_rig("other", &profile(), &[]).expect(201);

@@ -12,7 +12,7 @@ fn request() -> Value {
     json!({
         "scenario": { "preparations": 2, "measurements": 1, "outcomes": 2, "carrier_dimension": 1, "leakage": 0.1, "targets": [[0, 0]] },
         "behaviour": [[[0.75, 0.25]], [[0.25, 0.75]]],
-        "rounds": ["plug-in", "independent"], "total_rounds": 1_000_000, "level": "lean",
+        "rounds": ["plug-in", "independent"], "total_rounds": 1_000_000, "entropy": "guessing", "level": "lean",
         "sweep": { "leakage": { "from": 0.01, "to": 0.3, "points": 12 } },
         "thresholds": { "leakage": 0.01 },
     })
@@ -108,7 +108,7 @@ fn a_grid_that_would_take_too_long_is_refused() {
     let even = |outcomes: usize| vec![1.0 / outcomes as f64; outcomes];
     let request = json!({
         "scenario": { "preparations": 4, "measurements": 2, "outcomes": 2, "carrier_dimension": 2, "leakage": 0.001, "targets": [[0, 0]] },
-        "behaviour": vec![vec![even(2); 2]; 4], "rounds": ["plug-in"], "level": "sharp",
+        "behaviour": vec![vec![even(2); 2]; 4], "rounds": ["plug-in"], "entropy": "guessing", "level": "sharp",
         "sweep": { "leakage": { "from": 1e-5, "to": 0.1, "points": 500 } },
     });
     let problem = post(&running, &request, "*/*").expect(422).json();

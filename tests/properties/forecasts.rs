@@ -27,7 +27,7 @@ fn two_states(success: f64) -> Table<f64> {
 fn vacuum(success: f64, leakage: f64) -> Value {
     json!({
         "scenario": { "preparations": 2, "measurements": 1, "outcomes": 2, "carrier_dimension": 1, "leakage": leakage, "targets": [[0, 0]] },
-        "behaviour": two_states(success), "rounds": ["plug-in"], "level": "standard",
+        "behaviour": two_states(success), "rounds": ["plug-in"], "entropy": "guessing", "level": "standard",
         "sweep": { "leakage": { "from": 0.06, "to": 0.2, "points": 15, "spacing": "linear" } },
     })
 }
@@ -36,7 +36,7 @@ fn vacuum(success: f64, leakage: f64) -> Value {
 fn noisy_code() -> Value {
     json!({
         "scenario": { "preparations": 4, "measurements": 2, "outcomes": 2, "carrier_dimension": 2, "leakage": 0.001, "targets": [[0, 0]] },
-        "behaviour": code(0.99), "rounds": ["plug-in"], "level": "lean",
+        "behaviour": code(0.99), "rounds": ["plug-in"], "entropy": "guessing", "level": "lean",
         "sweep": { "leakage": { "from": 1e-5, "to": 0.1, "points": 24 } },
     })
 }
@@ -220,7 +220,7 @@ fn what_cannot_be_forecast_is_placed() {
     for (members, pointer) in [
         (json!({ "rounds": [] }), "/rounds"),
         (json!({ "rounds": ["plug-in", "plug-in"] }), "/rounds/1"),
-        (json!({ "rounds": ["memory"], "total_rounds": 1000 }), "/rounds/0"),
+        (json!({ "rounds": ["memory"], "total_rounds": 1000, "entropy": "guessing" }), "/rounds/0"),
         (json!({ "rounds": ["independent"] }), "/total_rounds"),
         (json!({ "total_rounds": 0 }), "/total_rounds"),
         (json!({ "wanted_bits": 1 }), "/wanted_bits"),
