@@ -154,8 +154,7 @@ impl BatchDocument {
         if let Some(leakage) = leakage {
             scenario = scenario.with_leakage(leakage)?;
             // A leakage that is not exactly zero makes a solve larger, possibly too large.
-            let groups = profile.entropy().groups(&scenario);
-            choose(profile.level(), &scenario, groups).map_err(|fault| Fault::new("/leakage", fault.detail))?;
+            choose(profile.level(), &scenario, scenario.geometry().outcomes).map_err(|fault| Fault::new("/leakage", fault.detail))?;
         }
         // Scenario, rounds and failure come from a valid profile: what can still be wrong is in the batch, under its own name.
         let request = Request::try_from(RequestDocument {

@@ -89,7 +89,7 @@ pub struct TargetCertificate {
     pub origin: Option<Origin>,
     /// What rounding the witness to integers cost in guessing probability, an approximate figure for information.
     pub rounding_cost: Option<f64>,
-    /// The account of a power entropy, if one was asked for and found.
+    /// The power entropy; `null` where no witness of it passed the exact check, or nothing is left of the min-entropy.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub power: Option<PowerCertificate>,
 }
@@ -103,10 +103,11 @@ pub struct PowerCertificate {
     pub power: u32,
     /// Lower bound on the mean of `η_β`, in bits per target round, rounded down.
     pub entropy_per_round: f64,
-    /// Failure probability of the step from rounds to the block.
-    pub failure: f64,
-    /// Min-entropy of the target string that follows, in bits, rounded down, before anything is subtracted.
-    pub min_entropy: f64,
+    /// Failure probability of the step from rounds to the block; `null` where no bits are drawn from it.
+    pub failure: Option<f64>,
+    /// Min-entropy of the target string that follows, in bits, rounded down, before anything is subtracted; `null` where no bits are drawn
+    /// from it.
+    pub min_entropy: Option<f64>,
     pub level: Level,
     /// `sha256:` digest of the witness document.
     pub witness: String,

@@ -5,7 +5,7 @@ use std::sync::Arc;
 use num_rational::BigRational;
 
 use crate::{
-    bound::{Answer, guessing_probability, power_entropy},
+    bound::{Answer, Found, guessing_probability, power_entropy},
     certificate::{Certificate, FailureTotal, Origin, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
     commitment::Commitment,
     counts::{Counts, Table},
@@ -23,7 +23,7 @@ use crate::{
     witness::{
         check::{CheckedBound, CheckedWitness, Place, proves_contradiction},
         pool::{Kept, MadeFor, Pool, Spot, Subject},
-        witness::Witness,
+        witness::{Claim, Witness},
     },
 };
 
@@ -45,13 +45,12 @@ pub fn certify(request: &Request) -> Certification {
                 return draft.outside(&contradiction.found.witness, least);
             }
             Answer::Bounded(found) => {
-                draft.add(request, *target, found.level, &found.witness, &found.bound, Some(Origin::Fresh));
-                if let Some((power, _)) = power_terms(request, *target).filter(|_| found.bound.rounded_up() < 1.0)
-                    && let Some(found) =
-                        power_entropy(request.scenario(), *target, evidence.place(), power, request.start, Limits::default())
+                draft.add(request, *target, &Grounds::fresh(&found));
+                let PowerTerms { power, .. } = power_terms(request, *target);
+                if let Some(level) = request.power_start.filter(|_| found.bound.rounded_up() < 1.0)
+                    && let Some(found) = power_entropy(request.scenario(), *target, evidence.place(), power, level, Limits::default())
                 {
-                    let origin = Some(Origin::Fresh);
-                    draft.add_power(request, *target, &evidence, found.level, &found.witness, &found.bound, origin);
+                    draft.add_power(request, *target, &evidence, &Grounds::fresh(&found));
                 }
             }
             Answer::Unverified => draft.add_unverified(request, *target),
@@ -80,31 +79,32 @@ pub fn certify_from(pool: &Pool, request: &Request, acceptable_loss: f64) -> Opt
     let evidence = evidence(request);
     let Evidence::Region(region) = &evidence else { return None };
     let scenario = request.scenario();
-    let spot = Spot::new(scenario, region, request.start);
+    let spot = Spot::new(scenario, region);
     if pool.contradicts(&spot) {
         return None;
     }
     let mut draft = Draft::new(request, Some(&evidence));
     let (mut kept, mut loss) = (Vec::new(), 0f64);
-    let mut best = |subject, power| {
-        let best = pool.best(subject, &spot, power).filter(|best| best.loss <= acceptable_loss)?;
+    let mut best = |subject, level, power| {
+        let best = pool.best(subject, &spot, level, power).filter(|best| best.loss <= acceptable_loss)?;
         let bound = best.kept.witness().bound(evidence.place(), scenario.leakage(), scenario.leakage_holds()).ok()?;
         loss = loss.max(best.loss);
         kept.push(Arc::clone(&best.kept));
         Some((best.kept, bound))
     };
     for target in scenario.targets() {
-        let (guess, bound) = best(Subject::Guess(*target), None)?;
+        let (guess, bound) = best(Subject::Guess(*target), request.start, None)?;
         if proves_contradiction(guess.witness(), &bound, evidence.place()) {
             return None;
         }
-        draft.add(request, *target, guess.level(), guess.witness(), &bound, Some(Origin::Kept));
-        if let Some((power, _)) = power_terms(request, *target).filter(|_| bound.rounded_up() < 1.0) {
-            let (of_power, bound) = best(Subject::Power(*target), Some(power))?;
-            let added = draft.add_power(request, *target, &evidence, of_power.level(), of_power.witness(), &bound, Some(Origin::Kept));
-            if !added {
-                return None;
-            }
+        draft.add(request, *target, &Grounds::kept(&guess, &bound));
+        let Some(level) = request.power_start.filter(|_| bound.rounded_up() < 1.0) else { continue };
+        let PowerTerms { power, failure } = power_terms(request, *target);
+        let added = best(Subject::Power(*target), level, Some(power))
+            .map(|(of_power, bound)| draft.add_power(request, *target, &evidence, &Grounds::kept(&of_power, &bound)));
+        // One that is only shown is not worth a solve; one that is more than the data allow is.
+        if added == Some(false) || (added.is_none() && failure.is_some()) {
+            return None;
         }
     }
     Some(FromPool { certificate: draft.conclude().certificate, kept, loss })
@@ -127,7 +127,9 @@ pub fn keepable(request: &Request, certification: &Certification) -> Vec<(Witnes
     let made = |witness: &Witness| {
         let level = level_of(&witness.digest()).into_iter().find(|level| witness.is_of_level(*level))?;
         let (leakage, leakage_holds) = (scenario.leakage().to_vec(), scenario.leakage_holds());
-        Some((witness.clone(), MadeFor { region: region.clone(), leakage, leakage_holds, asked: request.start, level }))
+        let of_power = matches!(witness.claim, Claim::Power { .. });
+        let asked = request.power_start.filter(|_| of_power).unwrap_or(request.start);
+        Some((witness.clone(), MadeFor { region: region.clone(), leakage, leakage_holds, asked, level }))
     };
     certification.witnesses.iter().filter_map(made).collect()
 }
@@ -171,7 +173,8 @@ pub(crate) fn certify_counted(
         failure: Failure { estimation, hashing },
         level,
         start: Level::Lean,
-        entropy: EntropyChoice::Guessing,
+        power_start: None,
+        entropy: EntropyChoice::Power,
         lost_rounds,
     };
     let mut certificate = Draft::new(&request, None).certificate;
@@ -211,19 +214,62 @@ pub(crate) fn evidence(request: &Request) -> Evidence {
         (Data::Behaviour(behaviour), _) => Evidence::Point(behaviour.table().clone()),
         (Data::Counts(counts), RoundModel::PlugIn) => Evidence::Point(frequencies(counts)),
         (Data::Counts(counts), RoundModel::Independent | RoundModel::Memory) => {
-            // A power entropy takes the other half.
-            let share = if request.entropy == EntropyChoice::Power { 0.5 } else { 1.0 };
-            Evidence::Region(region(counts, request.failure.estimation * share))
+            Evidence::Region(region(counts, request.failure.estimation - power_failure(request)))
         }
     }
 }
 
-/// The power of a target's power entropy and its share of the estimation failure; `None` if none is asked for.
-fn power_terms(request: &Request, target: Setting) -> Option<(u32, f64)> {
-    let rounds =
-        request.rounds_at(target).filter(|_| request.rounds == RoundModel::Independent && request.entropy == EntropyChoice::Power)?;
-    let failure = (request.failure.estimation * 0.5 / request.scenario().targets().len() as f64).next_down();
-    Some((power_for(rounds, failure), failure))
+/// The power of a diagnostic, at which a power entropy is the Shannon entropy up to a millionth.
+const SMALL_POWER: u32 = 1 << 10;
+
+/// Which power entropy is asked for.
+struct PowerTerms {
+    /// `β` in units of `2^-30`.
+    power: u32,
+    /// The target's share of the estimation failure; `None` if no bits are to come from it.
+    failure: Option<f64>,
+}
+
+fn power_terms(request: &Request, target: Setting) -> PowerTerms {
+    let share = |failure: f64| (failure / request.scenario.targets().len() as f64).next_down();
+    match (request.rounds, request.entropy, request.rounds_at(target)) {
+        (RoundModel::Independent, EntropyChoice::Auto | EntropyChoice::Power, Some(rounds)) => {
+            let failure = share(power_failure(request));
+            PowerTerms { power: power_for(rounds, failure), failure: Some(failure) }
+        }
+        (RoundModel::Independent, EntropyChoice::Guessing, Some(rounds)) => {
+            PowerTerms { power: power_for(rounds, share(request.failure.estimation)), failure: None }
+        }
+        (RoundModel::PlugIn | RoundModel::Memory, _, _) | (RoundModel::Independent, _, None) => {
+            PowerTerms { power: SMALL_POWER, failure: None }
+        }
+    }
+}
+
+/// What power entropies take of the estimation failure, all targets together.
+fn power_failure(request: &Request) -> f64 {
+    match request.entropy {
+        EntropyChoice::Guessing => 0.0,
+        EntropyChoice::Auto | EntropyChoice::Power => 0.5 * request.failure.estimation,
+    }
+}
+
+/// What a bound rests on.
+pub(crate) struct Grounds<'a> {
+    pub(crate) level: Level,
+    pub(crate) witness: &'a CheckedWitness,
+    pub(crate) bound: &'a CheckedBound,
+    pub(crate) origin: Option<Origin>,
+}
+
+impl<'a> Grounds<'a> {
+    fn fresh(found: &'a Found) -> Self {
+        Self { level: found.level, witness: &found.witness, bound: &found.bound, origin: Some(Origin::Fresh) }
+    }
+
+    fn kept(kept: &'a Kept, bound: &'a CheckedBound) -> Self {
+        Self { level: kept.level(), witness: kept.witness(), bound, origin: Some(Origin::Kept) }
+    }
 }
 
 /// A certificate in the making.
@@ -278,15 +324,8 @@ impl Draft {
         witness.digest().to_owned()
     }
 
-    pub(crate) fn add(
-        &mut self,
-        request: &Request,
-        target: Setting,
-        level: Level,
-        witness: &CheckedWitness,
-        bound: &CheckedBound,
-        origin: Option<Origin>,
-    ) {
+    pub(crate) fn add(&mut self, request: &Request, target: Setting, grounds: &Grounds) {
+        let &Grounds { level, witness, bound, origin } = grounds;
         let digest = self.keep(witness, origin);
         let mut entry = TargetCertificate::without_bound(target, request.rounds_at(target));
         entry.level = Some(level);
@@ -299,31 +338,29 @@ impl Draft {
 
     /// Adds a power entropy to the target that was added last. One that exceeds what the data allow anyway proves that there is no model, and
     /// is no entropy: it is left out. Answers whether it was added.
-    pub(crate) fn add_power(
-        &mut self,
-        request: &Request,
-        target: Setting,
-        evidence: &Evidence,
-        level: Level,
-        witness: &CheckedWitness,
-        bound: &CheckedBound,
-        origin: Option<Origin>,
-    ) -> bool {
-        let (Some((power, failure)), Evidence::Region(region)) = (power_terms(request, target), evidence) else { return false };
+    pub(crate) fn add_power(&mut self, request: &Request, target: Setting, evidence: &Evidence, grounds: &Grounds) -> bool {
+        let &Grounds { level, witness, bound, origin } = grounds;
+        let PowerTerms { power, failure } = power_terms(request, target);
         let entropy_per_round = entropy_in_bits(bound.exact());
-        let largest = largest_power_entropy(&region[target.x][target.y], power) * std::f64::consts::LOG2_E;
+        let intervals: Vec<[f64; 2]> = match evidence {
+            Evidence::Region(region) => region[target.x][target.y].clone(),
+            Evidence::Point(table) => table[target.x][target.y].iter().map(|p| [*p, *p]).collect(),
+        };
+        let largest = largest_power_entropy(&intervals, power) * std::f64::consts::LOG2_E;
         if entropy_per_round > largest {
             return false;
         }
         let digest = self.keep(witness, origin);
         let Some(entry) = self.certificate.targets.last_mut() else { return false };
         let rounds = entry.rounds.unwrap_or(0);
-        let min_entropy = block_min_entropy(bound.exact(), rounds, power, failure);
+        let min_entropy = failure.map(|failure| block_min_entropy(bound.exact(), rounds, power, failure));
         let rounding_cost = witness.rounding_cost();
         entry.power =
             Some(PowerCertificate { power, entropy_per_round, failure, min_entropy, level, witness: digest, origin, rounding_cost });
-        if let (Some(known), Some(publication), Some(hashing)) = (entry.min_entropy, entry.publication_cost, entry.hashing_cost) {
-            let better = known.max(min_entropy);
+        if let (Some(known), Some(found), Some(publication), Some(hashing)) =
+            (entry.min_entropy, min_entropy, entry.publication_cost, entry.hashing_cost)
+        {
+            let better = known.max(found);
             entry.min_entropy = Some(better);
             entry.certified_bits = extractable(better, &[publication, hashing]);
         }

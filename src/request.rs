@@ -31,22 +31,14 @@ pub enum RoundModel {
 #[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(rename_all = "kebab-case")]
 pub enum EntropyChoice {
-    /// The min-entropy, from the guessing probability of one round.
+    /// `power` wherever rounds are finite.
     #[default]
+    Auto,
+    /// The min-entropy, from the guessing probability of one round. The power entropy is shown, and no bits come from it.
     Guessing,
-    /// With independent rounds also a power entropy, which gives up to three times the bits and takes several times as long. The better of
-    /// the two counts. Half of the estimation failure goes to it.
+    /// A power entropy, which gives up to three times the bits, or the min-entropy where that gives more. Half of the estimation failure
+    /// goes to the step from rounds to the block.
     Power,
-}
-
-impl EntropyChoice {
-    /// Most groups of a question that this asks.
-    pub fn groups(self, scenario: &Scenario) -> usize {
-        match self {
-            Self::Guessing => scenario.geometry().outcomes,
-            Self::Power => COVER_CELLS,
-        }
-    }
 }
 
 /// Failure probabilities that the poster is willing to accept, each in `[1e-100, 0.5]`.
@@ -133,8 +125,10 @@ pub struct Request {
     pub(crate) rounds: RoundModel,
     pub(crate) failure: Failure,
     pub(crate) level: LevelChoice,
-    /// The level that the choice comes to.
+    /// The level that the choice comes to for guessing probabilities.
     pub(crate) start: Level,
+    /// The same for power entropies, which have more groups; `None` where no level is affordable.
+    pub(crate) power_start: Option<Level>,
     pub(crate) entropy: EntropyChoice,
     pub(crate) lost_rounds: Option<LostRounds>,
 }
@@ -146,7 +140,8 @@ impl TryFrom<RequestDocument> for Request {
         let RequestDocument { scenario, counts, behaviour, rounds, failure, level, entropy, lost_rounds } = document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
-        let start = choose(level, &scenario, entropy.groups(&scenario))?;
+        let start = choose(level, &scenario, scenario.geometry().outcomes)?;
+        let power_start = [level, LevelChoice::Auto].into_iter().find_map(|choice| choose(choice, &scenario, COVER_CELLS).ok());
         if rounds == RoundModel::Memory {
             return Err(Fault::new("/rounds", "rounds with memory need a commitment recorded before the data: post them to the service"));
         }
@@ -170,7 +165,7 @@ impl TryFrom<RequestDocument> for Request {
             (Some(_), Some(_)) => return Err(Fault::new("/behaviour", "give counts or a behaviour, not both")),
             (None, None) => return Err(Fault::new("/counts", "counts are missing")),
         };
-        Ok(Self { scenario, data, rounds, failure, level, start, entropy, lost_rounds })
+        Ok(Self { scenario, data, rounds, failure, level, start, power_start, entropy, lost_rounds })
     }
 }
 

@@ -5,7 +5,6 @@
 
 use super::{
     level::{Level, LevelChoice},
-    parity::split,
     word::Algebra,
 };
 use crate::{fault::Fault, scenario::Scenario};
@@ -21,12 +20,13 @@ pub const LIMIT: f64 = 2e11;
 /// The figure, if the scenario is too large for the level that is asked for (pointer `/level`), or for every level (`/scenario`).
 pub fn choose(choice: LevelChoice, scenario: &Scenario, groups: usize) -> Result<Level, Fault> {
     let (level, pointer, what) = match choice {
+        LevelChoice::Sparse => (Level::Sparse, "/level", "this level"),
         LevelChoice::Lean => (Level::Lean, "/level", "this level"),
         LevelChoice::Standard => (Level::Standard, "/level", "this level"),
         LevelChoice::Sharp => (Level::Sharp, "/level", "this level"),
         LevelChoice::Auto => {
             let affordable = |level: &Level| estimate(*level, scenario, groups) <= AUTO_BUDGET;
-            (Level::ALL.into_iter().rev().find(affordable).unwrap_or(Level::Lean), "/scenario", "every level")
+            (Level::ALL.into_iter().rev().find(affordable).unwrap_or(Level::Sparse), "/scenario", "every level")
         }
     };
     let cost = estimate(level, scenario, groups);
@@ -41,7 +41,7 @@ pub fn choose(choice: LevelChoice, scenario: &Scenario, groups: usize) -> Result
 fn estimate(level: Level, scenario: &Scenario, groups: usize) -> f64 {
     let exact: Vec<bool> = scenario.leakage().iter().map(|leakage| *leakage == 0.0).collect();
     let algebra = Algebra::new(scenario.geometry(), &exact);
-    let bases = split(&level.monomials(&algebra), &algebra);
+    let bases = level.bases(&algebra);
     let triangle = |side: f64| side * (side + 1.0) / 2.0;
     let size: f64 = bases.iter().map(|basis| triangle(basis.monomials.len() as f64)).sum();
     groups as f64 * size.powi(3)

@@ -221,7 +221,8 @@ impl Shape {
 /// Scale of each element of the bases, so that products of projectors have at most unit norm: `u + u†` of a product that is its own
 /// adjoint is `2u`. Scaling `N R_x` by `1/√ε_x` on top of this was measured to cost accuracy, up to a factor of a hundred.
 fn scales(moments: &Moments) -> Vec<Vec<f64>> {
-    let scale = |letters: &[Letter]| if letters.len() == 1 { 0.5 } else { std::f64::consts::FRAC_1_SQRT_2 };
+    let own_adjoint = |letters: &[Letter]| letters.iter().eq(letters.iter().rev());
+    let scale = |letters: &[Letter]| if own_adjoint(letters) { 0.5 } else { std::f64::consts::FRAC_1_SQRT_2 };
     moments.bases().iter().map(|basis| basis.monomials.iter().map(|monomial| scale(monomial.letters())).collect()).collect()
 }
 

@@ -20,7 +20,7 @@ use crate::{
     relaxation::{
         cells::Cut,
         level::Level,
-        parity::{Parity, split},
+        parity::Parity,
         word::{Algebra, Monomial},
     },
     scenario::{Geometry, LeakageReading, Setting},
@@ -135,7 +135,7 @@ impl Witness {
     /// Whether the bases are those of a level.
     pub fn is_of_level(&self, level: Level) -> bool {
         let algebra = Algebra::new(self.geometry, &self.exact);
-        let bases = split(&level.monomials(&algebra), &algebra);
+        let bases = level.bases(&algebra);
         bases.len() == self.bases.len()
             && bases.iter().zip(&self.bases).all(|(basis, span)| basis.parity == span.parity && basis.monomials == span.monomials)
     }

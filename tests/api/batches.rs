@@ -9,7 +9,10 @@ use std::{
     time::{Duration, Instant},
 };
 
-use bitassay::certify::certify;
+use bitassay::{
+    certify::certify,
+    ledger::{Ledger, LedgerError, key::KeyError},
+};
 use serde_json::{Value, json};
 
 use crate::server::{PANICS, Running, Solving, batch, profile, stand_in, with_rig};
@@ -156,34 +159,14 @@ fn the_same_batch_posted_at_once_is_certified_once() {
     assert_eq!(client.get("/v1/certifications").json()["items"].as_array().unwrap().len(), 1);
 }
 
+/// Two servers on one file would sign two histories.
 #[test]
-fn two_servers_on_one_file_certify_the_same_batch_once() {
-    let (running, gate) = gated(1, 1);
-    let at_gate = Arc::clone(&gate);
-    let certifier = Arc::new(move |request: &_| {
-        at_gate.pass();
-        stand_in(request)
-    });
-    // Neither server knows of what the other is working on: only the ledger can tell.
-    let other = Running::on(&running.database, Solving { certifier, threads: 1, queue: 1 });
-    let threads: Vec<_> = [running.client(), other.client()]
-        .map(|client| std::thread::spawn(move || client.post_batch("bench", "k", &batch(1000)).expect(201)))
-        .into_iter()
-        .collect();
-    gate.wait_for(2);
-    gate.open();
-    let replies: Vec<_> = threads.into_iter().map(|thread| thread.join().unwrap()).collect();
-    assert_eq!(replies[0].body, replies[1].body);
-    assert_eq!(replies.iter().filter(|reply| reply.header("idempotency-replayed").is_none()).count(), 1);
-    assert_eq!(running.client().get("/v1/certifications").json()["items"].as_array().unwrap().len(), 1);
-
-    // Two batches under one key at once: one is kept, the other is told so.
-    let statuses: Vec<u16> = [(running.client(), 1000), (other.client(), 1002)]
-        .map(|(client, first)| std::thread::spawn(move || client.post_batch("bench", "l", &batch(first)).status))
-        .into_iter()
-        .map(|thread| thread.join().unwrap())
-        .collect();
-    assert!(statuses == [201, 422] || statuses == [422, 201], "{statuses:?}");
+fn a_second_server_on_the_file_is_turned_away() {
+    let running = Running::new();
+    let runtime = tokio::runtime::Builder::new_current_thread().enable_all().build().unwrap();
+    let refused = runtime.block_on(Ledger::open(&running.database)).map(|_| ());
+    assert!(matches!(refused, Err(LedgerError::Key(KeyError::Taken { .. }))), "{refused:?}");
+    running.client().get("/livez").expect(200);
 }
 
 /// A gate that solves wait at.

@@ -107,7 +107,9 @@ fn a_witness_is_kept_once_and_found_by_its_digest() {
     assert_eq!(of(&first)["witnesses"], of(&second)["witnesses"]);
     assert_eq!(of(&refused)["witnesses"], serde_json::json!({}));
     let record = client.get(&format!("/v1/certifications/{first}")).json();
-    let named: HashSet<&str> = record["targets"].as_array().unwrap().iter().map(|target| target["witness"].as_str().unwrap()).collect();
+    let targets = record["targets"].as_array().unwrap().iter();
+    let named: HashSet<&str> =
+        targets.flat_map(|target| [&target["witness"], &target["power"]["witness"]]).map(|digest| digest.as_str().unwrap()).collect();
     let found = of(&first);
     assert_eq!(found["witnesses"].as_object().unwrap().keys().map(String::as_str).collect::<HashSet<_>>(), named);
     // The document still has the digest that it goes by.
@@ -116,7 +118,7 @@ fn a_witness_is_kept_once_and_found_by_its_digest() {
         assert_eq!(&witness.digest(), digest);
     }
     let rows: std::collections::HashMap<_, _> = running.rows().into_iter().collect();
-    assert_eq!((rows["witnesses"], rows["certification_witnesses"]), (1, 2));
+    assert_eq!((rows["witnesses"], rows["certification_witnesses"]), (2, 4));
 }
 
 #[test]

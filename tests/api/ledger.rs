@@ -53,7 +53,8 @@ fn nothing_in_the_ledger_can_be_changed_removed_or_replaced() {
     client.post_batch("bench", "a", &batch(1000)).expect(201);
     client.post_batch("bench", "b", &batch(999)).expect(422);
     let before = contents(&running);
-    assert_eq!(before.len(), 1 + 2 + 1 + 1 + 2);
+    // A profile; two records; the certified one's two witnesses and where they belong; two submissions.
+    assert_eq!(before.len(), 1 + 2 + 2 + 2 + 2);
     let statements = [
         ("UPDATE rig_profiles SET profile = '{}'", "write-once"),
         ("DELETE FROM rig_profiles", "write-once"),
