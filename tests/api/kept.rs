@@ -160,7 +160,8 @@ fn a_restart_keeps_what_is_kept() {
     assert_eq!(origin(&client.post_batch("bench", "c", &batch(78_050)).expect(201)), "kept");
     drop(release);
     running.stop();
-    assert_eq!(rows(&database), 2, "the witness of the second solve was not kept");
+    // Two solves, each with a witness of the guessing probability and one of the power entropy.
+    assert_eq!(rows(&database), 4, "the witnesses of the second solve were not kept");
 }
 
 fn rows(database: &Path) -> i64 {
@@ -189,7 +190,7 @@ fn a_corrupted_witness_is_dropped() {
         query(&database, async |mut connection| {
             sqlx::query("DROP TRIGGER witnesses_refuse_update").execute(&mut connection).await.unwrap();
             let changed = sqlx::query(sqlx::AssertSqlSafe(corruption)).execute(&mut connection).await.unwrap();
-            assert_eq!(changed.rows_affected(), 1, "{corruption}");
+            assert!(changed.rows_affected() > 0, "{corruption}");
             connection.close().await.unwrap();
         });
         let (solving, solves) = counted();
