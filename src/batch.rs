@@ -163,11 +163,13 @@ impl BatchDocument {
             scenario: ScenarioDocument::from(scenario),
             counts: Some(counts),
             behaviour: None,
+            scores: None,
             rounds: profile.rounds(),
             failure: profile.failure(),
             level: profile.level(),
             entropy: profile.entropy(),
             lost_rounds,
+            bracket: false,
         };
         let request = Request::read(document, Some(starts))?;
         Ok(Batch { started_at, ended_at, leakage_source, task: Task::Solve(Box::new(request)) })

@@ -15,6 +15,7 @@ use crate::{
         word::Algebra,
     },
     scenario::{Geometry, LeakageReading, Scenario, Setting},
+    score::check_scores,
     solver::{Limits, Status, solve},
     witness::{
         check::{CheckedBound, CheckedWitness, Place, proves_contradiction},
@@ -108,7 +109,7 @@ pub fn contradiction(scenario: &Scenario, place: Place, level: Level, limits: Li
     let intervals = intervals(place);
     let question = Question {
         claim: Claim::Contradiction,
-        knowledge: Knowledge::Within(&intervals),
+        knowledge: intervals.as_ref().map_or(knowledge(place), Knowledge::Within),
         leakage: scenario.leakage(),
         leakage_holds: scenario.leakage_holds(),
         slack: Slack::Behaviour,
@@ -124,7 +125,7 @@ fn least_leakage(geometry: Geometry, place: Place, level: Level, limits: Limits)
     let intervals = intervals(place);
     let question = Question {
         claim: Claim::Contradiction,
-        knowledge: Knowledge::Within(&intervals),
+        knowledge: intervals.as_ref().map_or(knowledge(place), Knowledge::Within),
         leakage: &anything,
         leakage_holds: LeakageReading::OnAverage,
         slack: Slack::Leakage,
@@ -166,6 +167,7 @@ fn is_about(question: &Question, geometry: Geometry) -> bool {
         Knowledge::Nothing => true,
         Knowledge::Exactly(table) => fits(table, geometry),
         Knowledge::Within(table) => fits(table, geometry),
+        Knowledge::Reaching(scores) => check_scores(scores, geometry).is_ok(),
     };
     let claimed = match &question.claim {
         Claim::Guess { target } | Claim::Power { target, .. } => target.x < geometry.preparations && target.y < geometry.measurements,
@@ -179,16 +181,18 @@ fn knowledge(place: Place<'_>) -> Knowledge<'_> {
     match place {
         Place::Behaviour(table) => Knowledge::Exactly(table),
         Place::Region(table) => Knowledge::Within(table),
+        Place::Scores(scores) => Knowledge::Reaching(scores),
     }
 }
 
-/// The place as intervals, of no width for a behaviour.
-fn intervals(place: Place) -> Table<[f64; 2]> {
+/// The place as intervals, of no width for a behaviour; `None` for scores.
+fn intervals(place: Place) -> Option<Table<[f64; 2]>> {
     match place {
         Place::Behaviour(table) => {
-            table.iter().map(|t| t.iter().map(|values| values.iter().map(|p| [*p, *p]).collect()).collect()).collect()
+            Some(table.iter().map(|t| t.iter().map(|values| values.iter().map(|p| [*p, *p]).collect()).collect()).collect())
         }
-        Place::Region(table) => table.clone(),
+        Place::Region(table) => Some(table.clone()),
+        Place::Scores(_) => None,
     }
 }
 
@@ -259,6 +263,7 @@ fn expected(place: Place, target: Setting, outcomes: usize) -> DVector<f64> {
             let intervals = table.get(target.x).and_then(|t| t.get(target.y));
             intervals.map(|intervals| intervals.iter().map(|[low, high]| 0.5 * (low + high)).collect())
         }
+        Place::Scores(_) => None,
     };
     let values =
         values.filter(|values| values.len() == outcomes && values.iter().sum::<f64>() > 0.0).unwrap_or_else(|| vec![1.0; outcomes]);

@@ -7,6 +7,7 @@ use crate::{
     relaxation::level::{Level, LevelChoice},
     request::{EntropyChoice, LostRounds, RoundModel},
     scenario::{Scenario, Setting},
+    score::Score,
 };
 
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
@@ -92,6 +93,22 @@ pub struct TargetCertificate {
     /// The power entropy; `null` where no witness of it passed the exact check, or nothing is left of the min-entropy.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub power: Option<PowerCertificate>,
+    /// What an explicit attack reaches, if one was sought and found. For information: no figure rests on it.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub bracket: Option<Bracket>,
+}
+
+/// The largest guessing probability lies between these two, up to the residual: how much the bound may be giving away.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[serde(deny_unknown_fields)]
+pub struct Bracket {
+    /// Guessing probability of an explicit model within the declared leakage, rounded down.
+    pub attack: f64,
+    /// The bound, as above.
+    pub bound: f64,
+    /// By how much the model's probabilities may miss the data, or the region; zero if its behaviour lies inside.
+    pub residual: f64,
 }
 
 /// A bound on the power entropy of a target's outcomes.
@@ -179,6 +196,9 @@ pub struct Certificate {
     pub counts_digest: Option<String>,
     #[cfg_attr(feature = "service", schema(value_type = Option<Vec<Vec<Vec<f64>>>>))]
     pub behaviour: Option<Table<f64>>,
+    /// Scores that were stated in place of a behaviour.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub scores: Option<Vec<Score>>,
     pub lost_rounds: Option<LostRounds>,
     pub rounds: RoundModel,
     pub total_rounds: Option<u64>,

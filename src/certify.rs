@@ -5,19 +5,21 @@ use std::sync::Arc;
 use num_rational::BigRational;
 
 use crate::{
+    attack::{Effort, Hints, attack, objective::Objective},
     bound::{Answer, Found, guessing_probability, power_entropy},
-    certificate::{Certificate, FailureTotal, Origin, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
+    certificate::{Bracket, Certificate, FailureTotal, Origin, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
     commitment::Commitment,
     counts::{Counts, Table},
     entropy::{
         extraction::{extractable, hashing_cost, min_entropy, min_entropy_per_round, publication_cost},
         independent::{block_min_entropy, entropy_in_bits, largest_power_entropy, power_for},
     },
-    exact::round_down,
+    exact::{decimal, round_down},
     fault::Fault,
     relaxation::level::{Level, LevelChoice},
     request::{Data, EntropyChoice, Failure, LostRounds, LostTreatment, Request, RoundModel},
     scenario::{LeakageReading, Setting},
+    score::Score,
     solver::Limits,
     statistics::region::{frequencies, region},
     witness::{
@@ -46,6 +48,9 @@ pub fn certify(request: &Request) -> Certification {
             }
             Answer::Bounded(found) => {
                 draft.add(request, *target, &Grounds::fresh(&found));
+                if request.bracket {
+                    draft.attack(request, *target, &evidence, &found.witness);
+                }
                 let PowerTerms { power, .. } = power_terms(request, *target);
                 if let Some(level) = request.power_start.filter(|_| found.bound.rounded_up() < 1.0)
                     && let Some(found) = power_entropy(request.scenario(), *target, evidence.place(), power, level, Limits::default())
@@ -73,7 +78,7 @@ pub struct FromPool {
 /// `None` where a solve is called for: some target's bound is estimated to give away more than `acceptable_loss` bits per round of that
 /// target, or the numbers seem to contradict the declaration. Plug-in figures, which are diagnostics, are always solved.
 pub fn certify_from(pool: &Pool, request: &Request, acceptable_loss: f64) -> Option<FromPool> {
-    if request.rounds != RoundModel::Independent {
+    if request.rounds != RoundModel::Independent || request.bracket {
         return None;
     }
     let evidence = evidence(request);
@@ -176,6 +181,7 @@ pub(crate) fn certify_counted(
         power_start: None,
         entropy: EntropyChoice::Power,
         lost_rounds,
+        bracket: false,
     };
     let mut certificate = Draft::new(&request, None).certificate;
     if !in_time {
@@ -195,9 +201,11 @@ pub(crate) fn certify_counted(
 }
 
 /// What is known of the behaviour.
+#[derive(Debug, Clone, PartialEq)]
 pub(crate) enum Evidence {
     Point(Table<f64>),
     Region(Table<[f64; 2]>),
+    Scores(Vec<Score>),
 }
 
 impl Evidence {
@@ -205,13 +213,32 @@ impl Evidence {
         match self {
             Self::Point(table) => Place::Behaviour(table),
             Self::Region(table) => Place::Region(table),
+            Self::Scores(scores) => Place::Scores(scores),
+        }
+    }
+
+    /// Intervals that hold every behaviour within a distance of this in each probability; none for scores.
+    pub(crate) fn widened(&self, by: f64) -> Option<Table<[f64; 2]>> {
+        let wider = |[low, high]: [f64; 2]| [(low - by).next_down().max(0.0), (high + by).next_up().min(1.0)];
+        match self {
+            Self::Point(table) => Some(map(table, |p| wider([*p, *p]))),
+            Self::Region(table) => Some(map(table, |interval| wider(*interval))),
+            Self::Scores(_) => None,
         }
     }
 }
 
+fn map<T>(table: &Table<T>, of: impl Fn(&T) -> [f64; 2]) -> Table<[f64; 2]> {
+    table.iter().map(|table| table.iter().map(|values| values.iter().map(&of).collect()).collect()).collect()
+}
+
+/// The most by which the behaviour of an attack that is recorded may miss the data.
+const LARGEST_RESIDUAL: f64 = 1e-6;
+
 pub(crate) fn evidence(request: &Request) -> Evidence {
     match (&request.data, request.rounds) {
         (Data::Behaviour(behaviour), _) => Evidence::Point(behaviour.table().clone()),
+        (Data::Scores(scores), _) => Evidence::Scores(scores.clone()),
         (Data::Counts(counts), RoundModel::PlugIn) => Evidence::Point(frequencies(counts)),
         (Data::Counts(counts), RoundModel::Independent | RoundModel::Memory) => {
             Evidence::Region(region(counts, request.failure.estimation - power_failure(request)))
@@ -223,14 +250,14 @@ pub(crate) fn evidence(request: &Request) -> Evidence {
 const SMALL_POWER: u32 = 1 << 10;
 
 /// Which power entropy is asked for.
-struct PowerTerms {
+pub(crate) struct PowerTerms {
     /// `β` in units of `2^-30`.
-    power: u32,
+    pub(crate) power: u32,
     /// The target's share of the estimation failure; `None` if no bits are to come from it.
-    failure: Option<f64>,
+    pub(crate) failure: Option<f64>,
 }
 
-fn power_terms(request: &Request, target: Setting) -> PowerTerms {
+pub(crate) fn power_terms(request: &Request, target: Setting) -> PowerTerms {
     let share = |failure: f64| (failure / request.scenario.targets().len() as f64).next_down();
     match (request.rounds, request.entropy, request.rounds_at(target)) {
         (RoundModel::Independent, EntropyChoice::Auto | EntropyChoice::Power, Some(rounds)) => {
@@ -281,12 +308,13 @@ pub(crate) struct Draft {
 impl Draft {
     /// Everything that is known before the first bound.
     pub(crate) fn new(request: &Request, evidence: Option<&Evidence>) -> Self {
-        let (counts, behaviour) = match &request.data {
-            Data::Counts(counts) => (Some(counts), None),
-            Data::Behaviour(behaviour) => (None, Some(behaviour.table().clone())),
+        let (counts, behaviour, scores) = match &request.data {
+            Data::Counts(counts) => (Some(counts), None, None),
+            Data::Behaviour(behaviour) => (None, Some(behaviour.table().clone()), None),
+            Data::Scores(scores) => (None, None, Some(scores.clone())),
         };
         let region = match evidence {
-            None | Some(Evidence::Point(_)) => None,
+            None | Some(Evidence::Point(_) | Evidence::Scores(_)) => None,
             Some(Evidence::Region(table)) => Some(table.clone()),
         };
         let failure = (request.rounds != RoundModel::PlugIn).then(|| FailureTotal::new(request.failure));
@@ -297,6 +325,7 @@ impl Draft {
             counts: counts.map(|counts| counts.table().clone()),
             counts_digest: counts.map(|counts| counts.digest()),
             behaviour,
+            scores,
             lost_rounds: request.lost_rounds.clone(),
             rounds: request.rounds,
             total_rounds: counts.map(|counts| counts.total()),
@@ -336,6 +365,40 @@ impl Draft {
         self.certificate.targets.push(entry);
     }
 
+    /// Seeks an explicit attack on the target that was added last.
+    fn attack(&mut self, request: &Request, target: Setting, evidence: &Evidence, witness: &CheckedWitness) {
+        let hints = Hints { witness: Some(witness), known: &[] };
+        let found = attack(request.scenario(), target, evidence.place(), Objective::Guess, hints, Effort::default());
+        if let Some(found) = found {
+            self.add_bracket(request, evidence, witness, found.guessing_probability(), found.residual);
+        }
+    }
+
+    /// Adds an attack to the target that was added last; `false` if it exceeds what the witness allows over the data, widened by how far the
+    /// attack's behaviour may miss them. An attack that misses them by more than [`LARGEST_RESIDUAL`] says nothing of interest and is left
+    /// out.
+    pub(crate) fn add_bracket(
+        &mut self,
+        request: &Request,
+        evidence: &Evidence,
+        witness: &CheckedWitness,
+        attack: f64,
+        residual: f64,
+    ) -> bool {
+        let Some(widened) = evidence.widened(residual) else { return false };
+        let (leakage, reading) = (request.scenario.leakage(), request.scenario.leakage_holds());
+        let allowed = witness.bound(Place::Region(&widened), leakage, reading);
+        if !allowed.is_ok_and(|allowed| attack <= allowed.rounded_up()) {
+            return false;
+        }
+        if let Some(entry) = self.certificate.targets.last_mut()
+            && let Some(bound) = entry.guessing_probability_bound.filter(|_| residual <= LARGEST_RESIDUAL)
+        {
+            entry.bracket = Some(Bracket { attack, bound, residual });
+        }
+        true
+    }
+
     /// Adds a power entropy to the target that was added last. One that exceeds what the data allow anyway proves that there is no model, and
     /// is no entropy: it is left out. Answers whether it was added.
     pub(crate) fn add_power(&mut self, request: &Request, target: Setting, evidence: &Evidence, grounds: &Grounds) -> bool {
@@ -345,6 +408,7 @@ impl Draft {
         let intervals: Vec<[f64; 2]> = match evidence {
             Evidence::Region(region) => region[target.x][target.y].clone(),
             Evidence::Point(table) => table[target.x][target.y].iter().map(|p| [*p, *p]).collect(),
+            Evidence::Scores(_) => vec![[0.0, 1.0]; request.scenario.geometry().outcomes],
         };
         let largest = largest_power_entropy(&intervals, power) * std::f64::consts::LOG2_E;
         if entropy_per_round > largest {
@@ -434,6 +498,7 @@ impl TargetCertificate {
             origin: None,
             rounding_cost: None,
             power: None,
+            bracket: None,
         }
     }
 
@@ -458,7 +523,13 @@ impl TargetCertificate {
 impl FailureTotal {
     pub(crate) fn new(failure: Failure) -> Self {
         let Failure { estimation, hashing } = failure;
-        Self { estimation, hashing, total: (estimation + hashing).next_up() }
+        let sum = decimal(estimation) + decimal(hashing);
+        let mut total = (estimation + hashing).next_up();
+        // The decimal that is printed for a double may lie below it.
+        while decimal(total) < sum {
+            total = total.next_up();
+        }
+        Self { estimation, hashing, total }
     }
 }
 
@@ -484,7 +555,11 @@ fn assumptions(request: &Request) -> Vec<String> {
     ];
     match request.rounds {
         RoundModel::PlugIn => {
-            assumptions.push("Frequencies are taken as probabilities: a diagnostic from which no bits may be released.".to_owned())
+            let taken = match request.data {
+                Data::Scores(_) => "Stated scores are taken as true",
+                Data::Counts(_) | Data::Behaviour(_) => "Frequencies are taken as probabilities",
+            };
+            assumptions.push(format!("{taken}: a diagnostic from which no bits may be released."));
         }
         RoundModel::Independent => {
             assumptions

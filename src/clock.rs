@@ -2,7 +2,7 @@
 
 use std::{fmt, str::FromStr};
 
-use jiff::Timestamp;
+use jiff::{Span, Timestamp, tz::TimeZone};
 use serde::{Deserialize, Deserializer, Serialize, Serializer, de};
 
 /// Tells the time. The core never asks; the service asks through this, so that tests can hold it still.
@@ -41,6 +41,26 @@ impl Stamp {
         (u64::try_from(self.0.as_second()).unwrap_or(0), u32::try_from(self.0.subsec_nanosecond()).unwrap_or(0))
     }
 }
+
+impl Stamp {
+    /// The time that a text names: a time as in RFC 3339, or a span counted from here, such as `90d`, `12h` or `1y`; days are those of UTC.
+    ///
+    /// # Errors
+    /// A text that is neither, or a time that is too far away.
+    pub fn or_after(self, text: &str) -> Result<Self, NoEnd> {
+        if let Ok(time) = text.parse() {
+            return Ok(time);
+        }
+        let span: Span = text.parse().map_err(|_| NoEnd)?;
+        let end = self.0.to_zoned_datetime(TimeZone::UTC).checked_add(span).map_err(|_| NoEnd)?;
+        Self::from_microseconds(end.timestamp().as_microsecond()).ok_or(NoEnd)
+    }
+}
+
+/// The text names no time.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, thiserror::Error)]
+#[error("neither a time as in RFC 3339, for example 2026-03-01T12:00:00Z, nor a span such as 90d or 12h")]
+pub struct NoEnd;
 
 impl fmt::Display for Stamp {
     fn fmt(&self, formatter: &mut fmt::Formatter) -> fmt::Result {
@@ -93,6 +113,16 @@ mod tests {
         assert_eq!(time.to_string(), "2026-03-01T11:00:00.250000Z");
         assert_eq!(time.to_string().parse(), Ok(time));
         assert_eq!(Stamp::from_microseconds(time.microseconds()), Some(time));
+    }
+
+    #[test]
+    fn an_end_is_a_time_or_a_span() {
+        let now: Stamp = "2026-03-01T12:00:00Z".parse().unwrap();
+        let end = |text| now.or_after(text).map(|end| end.to_string());
+        assert_eq!(end("90d").as_deref(), Ok("2026-05-30T12:00:00.000000Z"));
+        assert_eq!(end("1h").as_deref(), Ok("2026-03-01T13:00:00.000000Z"));
+        assert_eq!(end("2027-01-01T00:00:00Z").as_deref(), Ok("2027-01-01T00:00:00.000000Z"));
+        assert_eq!(end("soon"), Err(NoEnd));
     }
 
     #[test]

@@ -158,25 +158,11 @@ pub enum CommitError {
 pub fn commit(plan: &Plan) -> Result<(Commitment, Vec<Witness>), CommitError> {
     let mut covers: Vec<Option<Claim>> = vec![None; plan.scenario.targets().len()];
     let first = witnesses(plan, power_near(largest_power(plan)), &mut covers)?;
-    let mut curve = Vec::new();
-    let mut best: Option<(f64, u32, Table<f64>)> = None;
-    let mut failure = CommitError::Nothing;
-    for half_steps in 0..CURVE_POINTS {
-        let power = power_near(largest_power(plan) * 0.5f64.powf(f64::from(half_steps) / 2.0));
-        match expectation(plan, power, &first) {
-            Ok((bits, factors)) => {
-                curve.push(CurvePoint { power, expected_bits: bits });
-                if best.as_ref().is_none_or(|(most, ..)| bits > *most) {
-                    best = Some((bits, power, factors));
-                }
-            }
-            Err(error) => failure = error,
-        }
-    }
-    let Some((mut expected_bits, power, mut factors)) = best.filter(|(bits, ..)| *bits > 0.0) else { return Err(failure) };
+    let (mut curve, best) = follow_down(plan, &checked(&first));
+    let (mut expected_bits, power, mut factors) = best?;
     let mut found = first;
     let second = witnesses(plan, power, &mut covers)?;
-    if let Ok((bits, better)) = expectation(plan, power, &second)
+    if let Ok((bits, better)) = expectation(plan, power, &checked(&second))
         && bits > expected_bits
     {
         (expected_bits, factors, found) = (bits, better, second);
@@ -211,11 +197,54 @@ pub fn commit(plan: &Plan) -> Result<(Commitment, Vec<Witness>), CommitError> {
     Ok((commitment, found.into_iter().map(|found| found.witness.witness().clone()).collect()))
 }
 
-/// Expected bits at a power, and the factors they come from.
-fn expectation(plan: &Plan, power: u32, found: &[Found]) -> Result<(f64, Table<f64>), CommitError> {
-    let checked: Vec<&CheckedWitness> = found.iter().map(|found| &found.witness).collect();
-    let factors = plan_factors(&plan.scenario, &plan.distribution, plan.expected.table(), power, &checked)?;
+/// Expected bits at a power, and the factors they come from; one witness for each target.
+fn expectation(plan: &Plan, power: u32, witnesses: &[&CheckedWitness]) -> Result<(f64, Table<f64>), CommitError> {
+    let factors = plan_factors(&plan.scenario, &plan.distribution, plan.expected.table(), power, witnesses)?;
     Ok((expected_bits(plan, &factors, power), factors))
+}
+
+fn checked(found: &[Found]) -> Vec<&CheckedWitness> {
+    found.iter().map(|found| &found.witness).collect()
+}
+
+/// The expected bits along powers that fall from the largest one, and the most of them, if there are any, with power and factors.
+fn follow_down(plan: &Plan, witnesses: &[&CheckedWitness]) -> (Vec<CurvePoint>, Result<(f64, u32, Table<f64>), CommitError>) {
+    let mut curve = Vec::new();
+    let mut best: Result<(f64, u32, Table<f64>), CommitError> = Err(CommitError::Nothing);
+    for half_steps in 0..CURVE_POINTS {
+        let power = power_near(largest_power(plan) * 0.5f64.powf(f64::from(half_steps) / 2.0));
+        match (expectation(plan, power, witnesses), &best) {
+            (Ok((bits, factors)), known) => {
+                curve.push(CurvePoint { power, expected_bits: bits });
+                if bits > known.as_ref().map_or(0.0, |(most, ..)| *most) {
+                    best = Ok((bits, power, factors));
+                }
+            }
+            (Err(error), Err(_)) => best = Err(error),
+            (Err(_), Ok(_)) => {}
+        }
+    }
+    (curve, best)
+}
+
+/// The most bits to be expected with these witnesses, one for each target, and the power that gives them; `None` if none.
+pub(crate) fn best_power(plan: &Plan, witnesses: &[&CheckedWitness]) -> Option<(f64, u32)> {
+    follow_down(plan, witnesses).1.ok().map(|(bits, power, _)| (bits, power))
+}
+
+/// Bits to be expected at a power with these witnesses, one for each target.
+///
+/// # Errors
+/// Factors that do not exist at this power.
+pub(crate) fn expected_at(plan: &Plan, power: u32, witnesses: &[&CheckedWitness]) -> Result<f64, CommitError> {
+    expectation(plan, power, witnesses).map(|(bits, _)| bits)
+}
+
+impl Plan {
+    /// The power from which the best one is sought downwards, in units of `2^-30`.
+    pub(crate) fn largest_power(&self) -> u32 {
+        power_near(largest_power(self))
+    }
 }
 
 /// A power witness for each target; the covers made for the first power serve the others.
@@ -347,6 +376,9 @@ impl Commitment {
         let mut checked = Vec::new();
         for (target, committed) in self.scenario.targets().iter().zip(&self.targets) {
             let fault = |detail| CommitmentFault::Target { x: target.x, y: target.y, detail };
+            if (committed.preparation, committed.measurement) != (target.x, target.y) {
+                return Err(CommitmentFault::Targets);
+            }
             let witness = witnesses.iter().find(|witness| witness.digest() == committed.witness).ok_or(fault("its witness is missing"))?;
             let bounds_it = matches!(&witness.claim, Claim::Power { target: of, power, .. } if of == target && *power >= self.power);
             if !bounds_it || witness.geometry != self.scenario.geometry() {
@@ -356,6 +388,10 @@ impl Commitment {
         }
         if self.power == 0 {
             return Err(CommitmentFault::Power);
+        }
+        let FailureTotal { estimation, hashing, .. } = self.failure;
+        if self.failure != FailureTotal::new(Failure { estimation, hashing }) {
+            return Err(Fault::new("/failure/total", "it is not the sum of the failure probabilities, rounded up").into());
         }
         if checked.len() != self.scenario.targets().len() || self.targets.len() != checked.len() {
             return Err(CommitmentFault::Targets);

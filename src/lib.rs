@@ -21,8 +21,10 @@
 //! - [`relaxation`] turns a question about a scenario into a semidefinite programme; [`solver`] answers it in floating point, and is
 //!   not believed; [`witness`] rounds the answer to integers and proves a bound from them in exact arithmetic. [`bound`] strings these
 //!   together.
+//! - [`attack`] looks for explicit models from below: what is between an attack and a bound is what the bound may give away.
 //! - [`entropy`] turns a bound into whole bits, [`certify`] draws up the [`certificate`], and [`verify`] confirms one without a
 //!   solver; a [`bundle`] is what is needed for that.
+//! - [`forecast`] draws up the same accounts for behaviours that are expected, over leakage, visibility or rounds.
 //! - With the feature `service`, on by default: profiles of rigs, an append-only ledger in SQLite, and HTTP.
 //!
 //! From counts to bits, and the same figures confirmed without a solver:
@@ -46,6 +48,8 @@
 
 #![deny(unsafe_code)]
 
+pub mod attack;
+
 #[cfg(feature = "service")]
 pub mod batch;
 pub mod bound;
@@ -61,6 +65,7 @@ pub mod counts;
 pub mod entropy;
 pub mod exact;
 pub mod fault;
+pub mod forecast;
 #[cfg(feature = "service")]
 pub mod freshness;
 #[cfg(feature = "service")]
@@ -68,6 +73,8 @@ pub mod http;
 pub mod leakage;
 #[cfg(feature = "service")]
 pub mod ledger;
+#[cfg(feature = "service")]
+pub mod metrics;
 #[cfg(feature = "service")]
 pub mod profile;
 #[cfg(feature = "service")]
@@ -79,11 +86,14 @@ pub mod request;
 #[cfg(feature = "service")]
 pub mod rig_yield;
 pub mod scenario;
+pub mod score;
 #[cfg(feature = "service")]
 pub mod service;
 pub mod solver;
 pub mod statistics;
 #[cfg(feature = "service")]
 pub mod submission;
+#[cfg(feature = "service")]
+pub mod token;
 pub mod verify;
 pub mod witness;

@@ -194,9 +194,12 @@ mod tests {
         let document: ProfileDocument = parse(PROFILE.as_bytes()).unwrap();
         let profile = Profile::try_from(document).unwrap();
         let text = serde_json::to_string(&profile).unwrap();
-        let filled_in =
-            r#""failure":{"estimation":1e-10,"hashing":1e-10},"level":"auto","entropy":"auto","freshness":{"accept_loss":0.001}"#;
-        assert!(text.contains(filled_in), "{text}");
+        assert!(
+            text.contains(
+                r#""failure":{"estimation":1e-10,"hashing":1e-10},"level":"auto","entropy":"auto","freshness":{"accept_loss":0.001}"#
+            ),
+            "{text}"
+        );
         assert_eq!(serde_json::from_str::<Profile>(&text).unwrap(), profile);
     }
 

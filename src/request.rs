@@ -11,6 +11,7 @@ use crate::{
         level::{Level, LevelChoice},
     },
     scenario::{Scenario, ScenarioDocument, Setting},
+    score::{Score, check_scores},
 };
 
 /// What is assumed about the sequence of rounds.
@@ -99,6 +100,9 @@ pub struct RequestDocument {
     pub counts: Option<Table<u64>>,
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub behaviour: Option<Table<f64>>,
+    /// In place of counts or a behaviour, with "plug-in" only: linear scores that the behaviour reaches.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub scores: Option<Vec<Score>>,
     pub rounds: RoundModel,
     #[serde(default)]
     pub failure: Failure,
@@ -108,6 +112,9 @@ pub struct RequestDocument {
     pub entropy: EntropyChoice,
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub lost_rounds: Option<LostRounds>,
+    /// Whether explicit attacks are to be sought as well, which say how much the bounds may give away. Changes no certified figure.
+    #[serde(default, skip_serializing_if = "std::ops::Not::not")]
+    pub bracket: bool,
 }
 
 /// Counts, or probabilities in their place.
@@ -115,6 +122,8 @@ pub struct RequestDocument {
 pub enum Data {
     Counts(Counts),
     Behaviour(Behaviour),
+    /// Only scores of the behaviour are known.
+    Scores(Vec<Score>),
 }
 
 /// A valid request.
@@ -131,6 +140,7 @@ pub struct Request {
     pub(crate) power_start: Option<Level>,
     pub(crate) entropy: EntropyChoice,
     pub(crate) lost_rounds: Option<LostRounds>,
+    pub(crate) bracket: bool,
 }
 
 /// The levels that a choice comes to in a scenario. To find them out means to go through all words of each level, so they are kept with a profile.
@@ -162,7 +172,7 @@ impl TryFrom<RequestDocument> for Request {
 impl Request {
     /// As the conversion, with starts that were found for the same choice in the same geometry with the same preparations exactly leak-free.
     pub(crate) fn read(document: RequestDocument, starts: Option<Starts>) -> Result<Self, Fault> {
-        let RequestDocument { scenario, counts, behaviour, rounds, failure, level, entropy, lost_rounds } = document;
+        let RequestDocument { scenario, counts, behaviour, scores, rounds, failure, level, entropy, lost_rounds, bracket } = document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
         let Starts { guessing: start, power: power_start } = starts.map_or_else(|| Starts::of(level, &scenario), Ok)?;
@@ -170,14 +180,14 @@ impl Request {
             return Err(Fault::new("/rounds", "rounds with memory need a commitment recorded before the data: post them to the service"));
         }
         let geometry = scenario.geometry();
-        let data = match (counts, behaviour) {
-            (Some(mut table), None) => {
+        let data = match (counts, behaviour, scores) {
+            (Some(mut table), None, None) => {
                 if let Some(lost) = &lost_rounds {
                     lost.fold_into(&mut table, geometry.outcomes)?;
                 }
                 Data::Counts(Counts::try_new(table, geometry).map_err(|fault| fault.under("/counts"))?)
             }
-            (None, Some(table)) => {
+            (None, Some(table), None) => {
                 if rounds != RoundModel::PlugIn {
                     return Err(Fault::new("/behaviour", "a stated behaviour has no rounds: it goes with \"plug-in\" only"));
                 }
@@ -186,10 +196,21 @@ impl Request {
                 }
                 Data::Behaviour(Behaviour::try_new(table, geometry).map_err(|fault| fault.under("/behaviour"))?)
             }
-            (Some(_), Some(_)) => return Err(Fault::new("/behaviour", "give counts or a behaviour, not both")),
-            (None, None) => return Err(Fault::new("/counts", "counts are missing")),
+            (None, None, Some(scores)) => {
+                if rounds != RoundModel::PlugIn {
+                    return Err(Fault::new("/scores", "a stated score has no rounds: it goes with \"plug-in\" only"));
+                }
+                if lost_rounds.is_some() {
+                    return Err(Fault::new("/lost_rounds", "a stated score has no rounds to lose"));
+                }
+                check_scores(&scores, geometry).map_err(|fault| fault.under("/scores"))?;
+                Data::Scores(scores)
+            }
+            (Some(_), Some(_), _) => return Err(Fault::new("/behaviour", "give counts or a behaviour, not both")),
+            (_, _, Some(_)) => return Err(Fault::new("/scores", "give scores in place of counts or a behaviour, not besides")),
+            (None, None, None) => return Err(Fault::new("/counts", "counts are missing")),
         };
-        Ok(Self { scenario, data, rounds, failure, level, start, power_start, entropy, lost_rounds })
+        Ok(Self { scenario, data, rounds, failure, level, start, power_start, entropy, lost_rounds, bracket })
     }
 }
 
@@ -236,7 +257,7 @@ impl Request {
     pub fn rounds_at(&self, setting: Setting) -> Option<u64> {
         match &self.data {
             Data::Counts(counts) => Some(counts.rounds_at(setting)),
-            Data::Behaviour(_) => None,
+            Data::Behaviour(_) | Data::Scores(_) => None,
         }
     }
 }

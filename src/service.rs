@@ -1,6 +1,8 @@
 //! The service: takes batches in, has them solved, keeps what came out. Knows no HTTP.
 
+mod access;
 mod commitments;
+mod forecasts;
 mod kept;
 mod newest;
 mod quality;
@@ -8,16 +10,21 @@ mod solvers;
 mod tree;
 mod turns;
 
-use std::sync::{
-    Arc,
-    atomic::{AtomicBool, Ordering},
+use std::{
+    sync::{
+        Arc,
+        atomic::{AtomicBool, Ordering},
+    },
+    time::Instant,
 };
 
 use tokio::sync::watch;
 use uuid::{NoContext, Uuid};
 
 pub use self::{
+    access::{AccessError, Caller, Scope},
     commitments::{Listed, OrderError},
+    forecasts::ForecastError,
     solvers::{Certifier, SolveError, Solvers},
     tree::Exported,
 };
@@ -38,6 +45,7 @@ use crate::{
         rows::{Entry, ProfileVersion, Recorded},
         writer::{Expectation, Kept, Settled, WriteError},
     },
+    metrics::Metrics,
     profile::{Profile, RigName},
     record::{Record, Timings},
     request::RoundModel,
@@ -92,6 +100,8 @@ pub struct Service {
     turns: Arc<Turns>,
     kept: KeptWitnesses,
     newest: Newest,
+    keys: access::Keys,
+    metrics: Metrics,
     accepting: AtomicBool,
     /// Batches and commitments that are being worked on, whether or not their posters still wait.
     active: watch::Sender<usize>,
@@ -99,16 +109,33 @@ pub struct Service {
 
 impl Service {
     pub fn new(ledger: Ledger, solvers: Solvers, clock: Arc<dyn Clock>) -> Arc<Self> {
+        let turns = Arc::new(Turns::default());
+        let metrics = Metrics::new(ledger.writer.group_sizes.clone());
         Arc::new(Self {
             ledger,
             solvers,
             clock,
-            turns: Arc::default(),
+            turns,
             kept: KeptWitnesses::default(),
             newest: Newest::default(),
+            keys: access::Keys::default(),
+            metrics,
             accepting: AtomicBool::new(true),
             active: watch::Sender::new(0),
         })
+    }
+
+    /// What is counted and measured here.
+    pub fn metrics(&self) -> &Metrics {
+        &self.metrics
+    }
+
+    /// Everything that is counted and measured, as text.
+    ///
+    /// # Errors
+    /// The encoder's.
+    pub fn measurements(&self) -> Result<String, std::fmt::Error> {
+        self.metrics.text(self.solvers.waiting(), self.ledger.sizes())
     }
 
     /// Keeps a profile; see [`crate::ledger::writer::Writer::keep_profile`].
@@ -179,13 +206,17 @@ impl Service {
             }
             Task::Solve(request) => {
                 let acceptable_loss = profile.profile.freshness().acceptable_loss();
-                match acceptable_loss.and_then(|loss| self.from_pool(&request, loss)) {
+                let before = Instant::now();
+                let found = acceptable_loss.and_then(|loss| self.from_pool(&request, loss));
+                self.metrics.looked_up(found.is_some(), before.elapsed());
+                match found {
                     // The writer sees for itself whether the batch was answered before.
                     Some(found) => Certified::from(found),
                     None => match self.answered(&rig, &submission).await? {
                         Some(settled) => return Ok(settled),
                         None => {
                             let solved = self.solve(*request, acceptable_loss).await?;
+                            self.metrics.solved(solved.queued, solved.solved);
                             let timings =
                                 Timings { queued_seconds: solved.queued.as_secs_f64(), solved_seconds: solved.solved.as_secs_f64() };
                             Certified { timings, ..Certified::from(solved.outcome) }
@@ -249,8 +280,11 @@ impl Service {
             // An entry states no expectation.
             WriteError::ExpectationMissing { .. } | WriteError::ExpectationFailed { .. } => SubmitError::Ledger(LedgerError::Closed),
         })?;
-        if !settled.replayed && record.certificate.verdict == Verdict::Certified {
-            self.newest.note_certified(&profile.rig, Some(record.id), record.certificate.counts.map(Arc::new));
+        if !settled.replayed {
+            self.metrics.recorded(&record);
+            if record.certificate.verdict == Verdict::Certified {
+                self.newest.note_certified(&profile.rig, Some(record.id), record.certificate.counts.map(Arc::new));
+            }
         }
         Ok(settled)
     }

@@ -63,11 +63,13 @@ fn request(certificate: &Certificate) -> Result<Request, Fault> {
         scenario: certificate.scenario.clone().into(),
         counts: certificate.counts.clone(),
         behaviour: certificate.behaviour.clone(),
+        scores: certificate.scores.clone(),
         rounds: certificate.rounds,
         failure: certificate.failure.map_or_else(Failure::default, |f| Failure { estimation: f.estimation, hashing: f.hashing }),
         level: certificate.level,
         entropy: certificate.entropy,
         lost_rounds: None,
+        bracket: false,
     };
     let mut request = Request::try_from(document)?;
     request.lost_rounds = certificate.lost_rounds.clone();
@@ -108,6 +110,11 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
                 return Err(claim("the numbers contradict the declaration, so there is no entropy to speak of"));
             }
             draft.add(&request, *target, &Grounds { level, witness: &witness, bound: &bound, origin: recorded.origin });
+            if let Some(bracket) = recorded.bracket
+                && !draft.add_bracket(&request, &evidence, &witness, bracket.attack, bracket.residual)
+            {
+                return Err(claim("the attack exceeds it"));
+            }
             if let Some(recorded) = &recorded.power {
                 let pointer = format!("/targets/{}/power/witness", draft.targets() - 1);
                 let power = find(witnesses, &recorded.witness, &pointer)?;

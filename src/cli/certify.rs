@@ -18,7 +18,7 @@ use super::document;
 /// Certify one batch from a file and print the record
 ///
 /// FILE is a JSON document with the members `scenario`, `counts` (or `behaviour`, with "plug-in" only), `rounds`, and optionally `failure`,
-/// `level` and `lost_rounds`; `-` reads standard input. The record goes to standard output, a summary in words to standard error. No
+/// `level`, `lost_rounds` and `"bracket": true`, which also seeks an explicit attack on every target; `-` reads standard input. The record goes to standard output, a summary in words to standard error. No
 /// database is involved and nothing is kept.
 ///
 /// Exit status: 0 certified or estimated; 3 refused (the record is printed all the same); 2 bad input.

@@ -9,7 +9,7 @@ use anyhow::{Context, bail, ensure};
 use bitassay::{
     certify::certify,
     clock::SystemClock,
-    http::server,
+    http::{limits::Limits, server},
     ledger::Ledger,
     service::{Service, Solvers},
 };
@@ -71,7 +71,7 @@ impl Demo {
             let listener = TcpListener::bind((Ipv4Addr::LOCALHOST, 0)).await.context("cannot listen on loopback")?;
             let base = format!("http://{}", listener.local_addr()?);
             let (stop, stopped) = oneshot::channel::<()>();
-            let server = tokio::spawn(server::run(listener, service, async { drop(stopped.await) }));
+            let server = tokio::spawn(server::run(listener, service, Limits::default(), async { drop(stopped.await) }));
             writeln!(std::io::stdout(), "server    {base}\ndatabase  {}\n", database.display())?;
             let told = base.clone();
             let visit = tokio::task::spawn_blocking(move || Visit { base: told, agent: agent() }.all()).await?;

@@ -1,13 +1,18 @@
 //! The command line: one file a command.
 
+mod attack;
 mod backup;
 mod certify;
 mod demo;
 mod document;
 mod export;
+mod forecast;
+mod health;
 mod leakage;
 mod openapi;
 mod serve;
+mod settings;
+mod token;
 mod verify;
 
 use std::process::ExitCode;
@@ -27,9 +32,14 @@ pub struct CommandLine {
 #[derive(Subcommand)]
 enum Command {
     Serve(serve::Serve),
+    #[command(subcommand)]
+    Token(token::Token),
+    Health(health::Health),
     Certify(certify::Certify),
     Verify(verify::Verify),
+    Attack(attack::Attack),
     Leakage(leakage::Leakage),
+    Forecast(forecast::Forecast),
     Export(export::Export),
     Backup(backup::Backup),
     Demo(demo::Demo),
@@ -40,9 +50,13 @@ enum Command {
 pub fn run() -> ExitCode {
     let outcome = match CommandLine::parse().command {
         Command::Serve(command) => command.run(),
+        Command::Token(command) => command.run(),
+        Command::Health(command) => command.run(),
         Command::Certify(command) => command.run(),
         Command::Verify(command) => command.run(),
+        Command::Attack(command) => command.run(),
         Command::Leakage(command) => command.run(),
+        Command::Forecast(command) => command.run(),
         Command::Export(command) => command.run(),
         Command::Backup(command) => command.run(),
         Command::Demo(command) => command.run(),

@@ -1,91 +1,123 @@
 //! `bitassay serve`
 
-use std::{io::IsTerminal, net::SocketAddr, path::PathBuf, process::ExitCode, sync::Arc, time::Duration};
+use std::{
+    io::{IsTerminal, Write},
+    path::PathBuf,
+    process::ExitCode,
+    sync::Arc,
+};
 
 use anyhow::{Context, bail};
 use bitassay::{
     certify::certify,
     clock::SystemClock,
     http::server,
-    ledger::{Ledger, Place},
+    ledger::Ledger,
     service::{Service, Solvers},
 };
 use clap::Args;
 use tokio::net::TcpListener;
 use tracing_subscriber::EnvFilter;
 
+use super::settings::{Given, LogFormat, Settings};
+
 /// Run the service
 ///
 /// Listens for HTTP, certifies the batches that rigs post, and keeps every certification in an embedded SQLite file. The address
-/// is printed as one line on standard error once the service listens; the log follows there (RUST_LOG sets how much).
+/// is printed as one line on standard error once the service listens; the log follows there.
+///
+/// Every setting can be given in a file (TOML, named as the flags are, without the hyphens in front), in the environment, or as a flag. The
+/// environment goes before the file, and flags before both. `--print-config` shows what holds, in a form that the file can have.
+///
+/// As long as no token was ever created in the database, the service is open to whoever can reach it, and listens on loopback only. The
+/// first `bitassay token create` closes it, also while it runs.
 ///
 /// On an interrupt or a termination signal the service says that it is not ready, takes no more connections, finishes what it
 /// accepted, and ends. A second signal ends it at once; even so, nothing that was answered is lost.
 #[derive(Args)]
 pub struct Serve {
-    /// Address and port to listen on; port 0 takes any free port
-    ///
-    /// Only a loopback address: anything else needs tokens, which this version does not have.
-    #[arg(long, value_name = "ADDRESS", default_value = "127.0.0.1:8080")]
-    listen: SocketAddr,
+    /// A file with settings
+    #[arg(long, value_name = "FILE", env = "BITASSAY_CONFIG")]
+    config: Option<PathBuf>,
 
-    /// The database; created if it does not exist
-    #[arg(long, value_name = "FILE", default_value = "bitassay.sqlite")]
-    database: PathBuf,
+    #[command(flatten)]
+    given: Given,
 
-    /// The key that checkpoints of the ledger are signed with; made if it does not exist [default: DATABASE.key]
-    ///
-    /// The last checkpoint that was signed stands in a second file beside it, with `.checkpoint` added to the name. Keep both out of what a restore of the
-    /// database brings back: they are how the service knows that it was taken back in time.
-    #[arg(long, value_name = "FILE")]
-    ledger_key: Option<PathBuf>,
-
-    /// Seconds between two audits of the whole ledger
-    ///
-    /// New entries are gone through within seconds, and all of them at the start.
-    #[arg(long, value_name = "SECONDS", default_value_t = 3600, value_parser = clap::value_parser!(u32).range(1..))]
-    audit_interval: u32,
-
-    /// Batches that are solved at the same time
-    #[arg(long, value_name = "N", default_value_t = 2, value_parser = clap::value_parser!(u16).range(1..=256))]
-    solvers: u16,
-
-    /// Batches that may wait for a solver; more are turned away with 503
-    #[arg(long, value_name = "N", default_value_t = 64, value_parser = clap::value_parser!(u16).range(1..=10_000))]
-    queue: u16,
+    /// Print the settings that hold, and end
+    #[arg(long)]
+    print_config: bool,
 }
+
+/// File descriptors that are needed for anything but connections.
+const OTHER_FILES: u64 = 256;
 
 impl Serve {
     pub fn run(self) -> anyhow::Result<ExitCode> {
-        if !self.listen.ip().is_loopback() {
-            bail!("listening on {} needs tokens, which this version does not have; use a loopback address", self.listen);
+        let settings = Settings::read(self.config.as_deref(), &self.given)?;
+        if self.print_config {
+            write!(std::io::stdout(), "{}", settings.text()?)?;
+            return Ok(ExitCode::SUCCESS);
         }
-        let filter = EnvFilter::try_from_default_env().unwrap_or_else(|_| EnvFilter::new("info"));
-        tracing_subscriber::fmt().with_env_filter(filter).with_writer(std::io::stderr).with_ansi(std::io::stderr().is_terminal()).init();
+        start_log(&settings)?;
         let runtime = tokio::runtime::Builder::new_multi_thread().enable_all().build().context("no threads to run on")?;
-        runtime.block_on(self.serve())?;
+        runtime.block_on(serve(&settings))?;
         Ok(ExitCode::SUCCESS)
     }
+}
 
-    async fn serve(self) -> anyhow::Result<()> {
-        let listener = TcpListener::bind(self.listen).await.with_context(|| format!("cannot listen on {}", self.listen))?;
-        let mut place = Place::of(&self.database);
-        if let Some(key) = self.ledger_key {
-            place.key = key;
-        }
-        place.audit_interval = Duration::from_secs(self.audit_interval.into());
-        let ledger = Ledger::open_at(&place).await?;
-        let key = ledger.seal.verifier().to_string();
-        let solvers = Solvers::start(self.solvers.into(), self.queue.into(), Arc::new(certify)).context("no threads to solve on")?;
-        let service = Service::new(ledger, solvers, Arc::new(SystemClock));
-        let recalled = service.recall_witnesses().await?;
-        eprintln!("listening on http://{}", listener.local_addr()?);
-        tracing::info!(recalled, "kept witnesses were checked, and are in use");
-        tracing::info!(%key, "checkpoints of the ledger are signed with this key");
-        tracing::warn!("the service has no tokens: whoever can reach the loopback address can use it");
-        server::run(listener, service, stop_signal()).await?;
-        Ok(())
+fn start_log(settings: &Settings) -> anyhow::Result<()> {
+    let filter = EnvFilter::try_new(&settings.log).with_context(|| format!("{:?} says nothing about how much to log", settings.log))?;
+    let terminal = std::io::stderr().is_terminal();
+    let log = tracing_subscriber::fmt().with_env_filter(filter).with_writer(std::io::stderr).with_ansi(terminal);
+    match settings.log_format {
+        LogFormat::Text => log.init(),
+        LogFormat::Json => log.json().init(),
     }
+    Ok(())
+}
+
+async fn serve(settings: &Settings) -> anyhow::Result<()> {
+    let loopback = settings.listen.ip().is_loopback();
+    // A database that is not there has no tokens, and is not made only to find that out.
+    if !loopback && !settings.database.exists() {
+        bail!(open_to_the_world(settings));
+    }
+    let ledger = Ledger::open_at(&settings.place()).await?;
+    let open = ledger.history.keyring().await?.is_empty();
+    if open && !loopback {
+        ledger.close().await;
+        bail!(open_to_the_world(settings));
+    }
+    let listener = TcpListener::bind(settings.listen).await.with_context(|| format!("cannot listen on {}", settings.listen))?;
+    let key = ledger.seal.verifier().to_string();
+    let solvers = Solvers::start(settings.solvers.into(), settings.queue.into(), Arc::new(certify)).context("no threads to solve on")?;
+    let service = Service::new(ledger, solvers, Arc::new(SystemClock));
+    let recalled = service.recall_witnesses().await?;
+    eprintln!("listening on http://{}", listener.local_addr()?);
+    tracing::info!(recalled, "kept witnesses were checked, and are in use");
+    tracing::info!(%key, "checkpoints of the ledger are signed with this key");
+    if open {
+        tracing::warn!(
+            "no token was ever created: whoever can reach the loopback address can use the service; `bitassay token create` closes it"
+        );
+    }
+    let limits = settings.limits();
+    let wanted = limits.connections as u64 + OTHER_FILES;
+    match rlimit::increase_nofile_limit(wanted) {
+        Ok(files) if files < wanted => tracing::warn!(files, "the system allows fewer open files than the connections need"),
+        Ok(_) => {}
+        Err(error) => tracing::warn!(%error, "how many files may be open is not known"),
+    }
+    server::run(listener, service, limits, stop_signal()).await?;
+    Ok(())
+}
+
+fn open_to_the_world(settings: &Settings) -> String {
+    format!(
+        "listening on {} needs tokens, and none was ever created in {}; create one with `bitassay token create`, or use a loopback address",
+        settings.listen,
+        settings.database.display()
+    )
 }
 
 /// Completes on the first interrupt or termination signal; the second one ends the process.

@@ -98,6 +98,7 @@ enum NotCertified {
 /// A batch that is sent again under its key is answered with the same bytes as before.
 #[utoipa::path(
     post, path = "/v1/rigs/{rig}/batches", tag = "batches", operation_id = "post_batch",
+    security(("token" = ["rig"])),
     params(
         ("rig" = String, Path, description = "Name of the rig."),
         ("Idempotency-Key" = String, Header, description = "Name of this batch, 1 to 255 visible ASCII characters; the same each time it is sent."),

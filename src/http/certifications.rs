@@ -12,6 +12,7 @@ use serde::Serialize;
 use utoipa::{IntoParams, ToSchema};
 
 use super::{
+    access::Sees,
     negotiation::{Offer, TakesJson, TakesTable},
     problem::{Problem, ProblemDocument},
     wire::{CertificationPath, FromParameters, Parameters, Query, cursor, json, link_next, no_certification, page},
@@ -36,6 +37,7 @@ const CURSOR: &str = "certifications:";
 /// One record, byte for byte as it was first answered.
 #[utoipa::path(
     get, path = "/v1/certifications/{id}", tag = "certifications", operation_id = "get_certification",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     params(("id" = String, Path, description = "Identifier of the certification.")),
     responses(
         (status = 200, description = "The record.", body = Record),
@@ -68,6 +70,7 @@ pub struct Witnesses {
 /// What a certification rests on, enough to check it offline.
 #[utoipa::path(
     get, path = "/v1/certifications/{id}/witness", tag = "certifications", operation_id = "get_witness",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     params(("id" = String, Path, description = "Identifier of the certification.")),
     responses(
         (status = 200, description = "The witnesses, by digest.", body = Witnesses),
@@ -101,6 +104,7 @@ pub struct ExportedBundle {
 /// Keep the answer as it is: `bitassay verify FILE --key KEY` reads it. The record's place in the ledger is the `index` of `ledger.entry`.
 #[utoipa::path(
     get, path = "/v1/certifications/{id}/bundle", tag = "certifications", operation_id = "get_bundle",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     params(("id" = String, Path, description = "Identifier of the certification.")),
     responses(
         (status = 200, description = "The bundle.", body = ExportedBundle),
@@ -207,6 +211,7 @@ pub struct HistoryPage {
 /// The history, newest first. Records that arrive meanwhile do not move the pages that follow.
 #[utoipa::path(
     get, path = "/v1/certifications", tag = "certifications", operation_id = "list_certifications", params(HistoryQuery),
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     responses(
         (status = 200, description = "One page. As CSV, one row a record; the `Link` header leads on.", headers(("Link" = String)),
             content((HistoryPage = "application/json"), (String = "text/csv"))),
@@ -216,17 +221,20 @@ pub struct HistoryPage {
 )]
 pub async fn list(
     Query(query): Query<HistoryQuery>,
+    sees: Sees,
     TakesTable(offer): TakesTable,
     State(service): State<Arc<Service>>,
 ) -> Result<Response<Body>, Problem> {
     let HistoryQuery { rig, verdict, since, until, cursor: before, limit } = &query;
-    let filter = Filter { rig: rig.clone(), verdict: *verdict, since: *since, until: *until, before: *before };
+    let within = sees.within(rig.as_ref())?;
+    let filter = Filter { rig: rig.clone(), within, verdict: *verdict, since: *since, until: *until, before: *before };
     let Page { items, more } = service.history(&filter, *limit).await?;
     let next = items.last().filter(|_| more).map(|last| cursor(CURSOR, last.entry));
     let link = next.as_deref().map(|next| link_next(&query.target(next)));
     let vary = [(header::VARY, "Accept")];
     let body = match offer {
-        Offer::Json => json(StatusCode::OK, page(items.into_iter().map(|item| item.record), next.as_deref())),
+        // A picture is not among what this route offers.
+        Offer::Json | Offer::Svg => json(StatusCode::OK, page(items.into_iter().map(|item| item.record), next.as_deref())),
         Offer::Csv => {
             let table = table(&items).map_err(|error| Problem::internal(error.as_ref()))?;
             (StatusCode::OK, [(header::CONTENT_TYPE, "text/csv; charset=utf-8; header=present")], table).into_response()

@@ -81,6 +81,7 @@ fn text(committed: &Committed, current: Option<bool>) -> Result<String, Problem>
 /// certified by them without a solve. A newer commitment stands in place of the older ones, which stay as they are.
 #[utoipa::path(
     post, path = "/v1/rigs/{rig}/commitments", tag = "commitments", operation_id = "post_commitment",
+    security(("token" = ["operator"])),
     params(("rig" = String, Path, description = "Name of the rig.")),
     request_body(content = CommitmentOrder, content_type = "application/json"),
     responses(
@@ -107,6 +108,7 @@ pub async fn post(
 /// One commitment, as it was first answered.
 #[utoipa::path(
     get, path = "/v1/commitments/{id}", tag = "commitments", operation_id = "get_commitment",
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
     params(("id" = String, Path, description = "Identifier of the commitment.")),
     responses(
         (status = 200, description = "The commitment.", body = Answer),
@@ -143,6 +145,7 @@ impl FromParameters for CommitmentsQuery {
 /// A rig's commitments, newest first; `current` marks the one that batches are certified under now.
 #[utoipa::path(
     get, path = "/v1/rigs/{rig}/commitments", tag = "commitments", operation_id = "list_commitments",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     params(("rig" = String, Path, description = "Name of the rig."), CommitmentsQuery),
     responses(
         (status = 200, description = "One page.", body = CommitmentPage, headers(("Link" = String))),

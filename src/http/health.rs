@@ -23,7 +23,7 @@ pub struct Live {
 }
 
 /// Whether the process answers at all. Touches nothing.
-#[utoipa::path(get, path = "/livez", tag = "health", operation_id = "livez", responses((status = 200, body = Live)))]
+#[utoipa::path(get, path = "/livez", tag = "health", operation_id = "livez", security(()), responses((status = 200, body = Live)))]
 pub async fn live() -> Response<Body> {
     json(StatusCode::OK, r#"{"status":"live"}"#)
 }
@@ -44,7 +44,7 @@ pub struct Ready {
 
 /// Whether batches are taken; each check by name.
 #[utoipa::path(
-    get, path = "/readyz", tag = "health", operation_id = "readyz",
+    get, path = "/readyz", tag = "health", operation_id = "readyz", security(()),
     responses(
         (status = 200, body = Ready),
         (status = 503, description = "Not ready; `checks` says why.", body = ProblemDocument, content_type = "application/problem+json"),

@@ -7,7 +7,7 @@ use std::time::Duration;
 
 use axum::{
     body::{Body, Bytes},
-    extract::Request,
+    extract::{Request, State},
     http::{StatusCode, header},
     middleware::Next,
     response::{IntoResponse, Response},
@@ -20,17 +20,15 @@ use super::problem::Problem;
 pub const LONGEST: usize = 1024 * 1024;
 /// How much is read, and thrown away, for the sake of an answer.
 const PATIENCE: usize = 16 * 1024 * 1024;
-/// How long a client may take to send a body.
-const TIMEOUT: Duration = Duration::from_secs(30);
 
-/// Replaces the body by one that has arrived.
-pub async fn take_in(request: Request, next: Next) -> Response {
+/// Replaces the body by one that has arrived, within the time there is.
+pub async fn take_in(State(limit): State<Duration>, request: Request, next: Next) -> Response {
     let stated = request.headers().get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse::<usize>().ok());
     if stated.is_some_and(|length| length > PATIENCE) {
         return too_large(LONGEST).into_response();
     }
     let (parts, body) = request.into_parts();
-    match tokio::time::timeout(TIMEOUT, read(body)).await {
+    match tokio::time::timeout(limit, read(body)).await {
         Ok(Ok(bytes)) => next.run(Request::from_parts(parts, Body::from(bytes))).await,
         Ok(Err(problem)) => problem.into_response(),
         Err(_) => Problem::new(StatusCode::REQUEST_TIMEOUT, "The body took too long to arrive.").into_response(),

@@ -17,6 +17,7 @@ const BUDGET_LIMIT: usize = 64 * 1024;
 /// Computes a leakage budget: contributions from stated values or counts, and their sum. Nothing is kept.
 #[utoipa::path(
     post, path = "/v1/leakage", tag = "leakage", operation_id = "post_leakage",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     request_body(
         description = "`carrier_dimension` and `contributions`, each with a `source`: coherent, thermal, g2, coincidence, heralded, vacuum, overlap or \
                        side-mode, and what was measured of it.",

@@ -35,6 +35,7 @@ fn text(text: String) -> Response<Body> {
 /// the operator cannot reach them; that is what they are for.
 #[utoipa::path(
     get, path = "/v1/ledger/checkpoint", tag = "ledger", operation_id = "get_checkpoint",
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
     responses(
         (status = 200, description = "A signed note.", body = String, content_type = "text/plain"),
         (status = 503, description = "The ledger is not in order, and `detail` says where; or it is still being gone through.", body = ProblemDocument, content_type = "application/problem+json"),
@@ -49,6 +50,7 @@ pub async fn checkpoint(Query(()): Query<()>, State(service): State<Arc<Service>
 /// A key that is asked for here proves nothing to whoever does not trust the service; learn it once, by another way.
 #[utoipa::path(
     get, path = "/v1/ledger/key", tag = "ledger", operation_id = "get_ledger_key",
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
     responses((status = 200, description = "One line.", body = String, content_type = "text/plain"))
 )]
 pub async fn key(Query(()): Query<()>, State(service): State<Arc<Service>>) -> Response<Body> {
@@ -76,6 +78,7 @@ fn no_entry() -> Problem {
 /// One entry, byte for byte as its leaf was hashed: `(printf '\0'; cat entry) | sha256sum` is the leaf's hash.
 #[utoipa::path(
     get, path = "/v1/ledger/entries/{index}", tag = "ledger", operation_id = "get_ledger_entry",
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
     params(("index" = u64, Path, description = "Place in the tree, from 0.")),
     responses(
         (status = 200, description = "The entry.", body = LedgerEntry),
@@ -158,6 +161,7 @@ impl FromParameters for InclusionQuery {
 /// Proves that an entry is in the tree of a size (RFC 6962, section 2.1.1).
 #[utoipa::path(
     get, path = "/v1/ledger/proofs/inclusion", tag = "ledger", operation_id = "get_inclusion_proof", params(InclusionQuery),
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
     responses(
         (status = 200, description = "The proof.", body = InclusionProof),
         (status = 400, description = "A parameter is missing, unknown or no number.", body = ProblemDocument, content_type = "application/problem+json"),
@@ -198,6 +202,7 @@ impl FromParameters for ConsistencyQuery {
 /// Proves that the tree of one size is the beginning of that of another (RFC 6962, section 2.1.2).
 #[utoipa::path(
     get, path = "/v1/ledger/proofs/consistency", tag = "ledger", operation_id = "get_consistency_proof", params(ConsistencyQuery),
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
     responses(
         (status = 200, description = "The proof.", body = ConsistencyProof),
         (status = 400, description = "A parameter is missing, unknown or no number.", body = ProblemDocument, content_type = "application/problem+json"),

@@ -1,13 +1,17 @@
 //! The service over HTTP: extract, one call to the service, respond. Knows no SQL.
 
+pub mod access;
 mod batches;
 mod certifications;
 mod commitments;
 mod condition;
+mod forecasts;
 mod health;
 mod intake;
 mod leakage;
 mod ledger;
+pub mod limits;
+mod measurements;
 mod negotiation;
 pub mod openapi;
 pub mod problem;

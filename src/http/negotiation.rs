@@ -12,6 +12,7 @@ use super::problem::{Culprit, Problem};
 pub enum Offer {
     Json,
     Csv,
+    Svg,
 }
 
 impl Offer {
@@ -19,6 +20,7 @@ impl Offer {
         match self {
             Self::Json => ("application", "json"),
             Self::Csv => ("text", "csv"),
+            Self::Svg => ("image", "svg+xml"),
         }
     }
 }
@@ -81,6 +83,17 @@ impl<S: Send + Sync> FromRequestParts<S> for TakesTable {
 
     async fn from_request_parts(parts: &mut Parts, _: &S) -> Result<Self, Problem> {
         choose(&parts.headers, &[Offer::Json, Offer::Csv]).map(Self)
+    }
+}
+
+/// The client takes JSON, CSV or a picture.
+pub struct TakesPicture(pub Offer);
+
+impl<S: Send + Sync> FromRequestParts<S> for TakesPicture {
+    type Rejection = Problem;
+
+    async fn from_request_parts(parts: &mut Parts, _: &S) -> Result<Self, Problem> {
+        choose(&parts.headers, &[Offer::Json, Offer::Csv, Offer::Svg]).map(Self)
     }
 }
 

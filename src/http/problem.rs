@@ -14,7 +14,7 @@ use crate::{
     batch::BatchFault,
     fault::Fault,
     ledger::{LedgerError, seal::SealError, writer::WriteError},
-    service::{Check, OrderError, SolveError, SubmitError},
+    service::{Check, ForecastError, OrderError, SolveError, SubmitError},
 };
 
 /// Media type of every error.
@@ -157,6 +157,18 @@ impl Problem {
         Self::new(StatusCode::SERVICE_UNAVAILABLE, detail)
             .named("urn:bitassay:problem:queue-full", "The queue is full")
             .retry_after(retry_after.as_secs().max(1))
+    }
+
+    /// There are too many connections to serve this one.
+    pub fn crowded() -> Self {
+        Self::new(StatusCode::SERVICE_UNAVAILABLE, "There are too many connections at present.").retry_after(5)
+    }
+
+    /// More requests than one client may send.
+    pub fn too_many(wait: Duration) -> Self {
+        let seconds = wait.as_secs() + 1;
+        Self::new(StatusCode::TOO_MANY_REQUESTS, format!("Too many requests; the next is taken in {seconds} s at the latest."))
+            .retry_after(seconds)
     }
 
     /// Not ready, and why.
@@ -312,6 +324,19 @@ impl From<OrderError> for Problem {
             OrderError::Solve(SolveError::Stopped) => LedgerError::Closed.into(),
             OrderError::Ledger(error) => error.into(),
             error @ (OrderError::Solve(SolveError::Panicked) | OrderError::Abandoned(_)) => Self::internal(&error),
+        }
+    }
+}
+
+impl From<ForecastError> for Problem {
+    fn from(error: ForecastError) -> Self {
+        match error {
+            ForecastError::TooLarge(fault) => Self::body(StatusCode::UNPROCESSABLE_ENTITY, fault),
+            ForecastError::Solve(SolveError::QueueFull { waiting, retry_after }) => {
+                Self::queue_full(format!("{waiting} jobs are waiting already. Ask for the forecast again."), retry_after)
+            }
+            ForecastError::Solve(SolveError::Stopped) => LedgerError::Closed.into(),
+            error @ ForecastError::Solve(SolveError::Panicked) => Self::internal(&error),
         }
     }
 }

@@ -30,6 +30,7 @@ const CURSOR: &str = "rigs:";
 /// Declares a rig, or changes what was declared.
 #[utoipa::path(
     put, path = "/v1/rigs/{rig}", tag = "rigs", operation_id = "put_rig",
+    security(("token" = ["operator"])),
     params(
         ("rig" = String, Path, description = "Name of the rig: `[a-z0-9][a-z0-9-]{0,62}`."),
         ("If-Match" = Option<String>, Header, description = "Entity tag of the version that a change starts from; needed for a change."),
@@ -81,6 +82,7 @@ impl FromParameters for VersionQuery {
 /// What is declared about a rig.
 #[utoipa::path(
     get, path = "/v1/rigs/{rig}", tag = "rigs", operation_id = "get_rig",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     params(("rig" = String, Path, description = "Name of the rig."), VersionQuery),
     responses(
         (status = 200, description = "The profile.", body = ProfileDocument, headers(("ETag" = String))),
@@ -163,6 +165,7 @@ impl FromParameters for RigsQuery {
 /// All rigs.
 #[utoipa::path(
     get, path = "/v1/rigs", tag = "rigs", operation_id = "list_rigs", params(RigsQuery),
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
     responses((status = 200, description = "Rigs in order of their names.", body = RigPage, headers(("Link" = String))))
 )]
 pub async fn list(

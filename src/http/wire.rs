@@ -1,6 +1,6 @@
 //! What is taken from requests, and the shapes of answers that several resources share.
 
-use std::str::FromStr;
+use std::{str::FromStr, sync::Arc};
 
 use axum::{
     body::{Body, Bytes, to_bytes},
@@ -13,12 +13,14 @@ use serde::de::DeserializeOwned;
 use uuid::Uuid;
 
 use super::{
+    access::Sees,
     intake::too_large,
     problem::{Culprit, Problem},
 };
 use crate::{
     fault,
     profile::RigName,
+    service::Service,
     submission::{IdempotencyKey, NoKey},
 };
 
@@ -39,14 +41,17 @@ impl<S: Send + Sync> FromRequestParts<S> for RigPath {
     }
 }
 
-/// The `{id}` of a certification's path. What is no identifier names nothing.
+/// The `{id}` of a certification's path, if the caller may see it. What is no identifier names nothing, and what may not be seen is not
+/// there.
 pub struct CertificationPath(pub Uuid);
 
-impl<S: Send + Sync> FromRequestParts<S> for CertificationPath {
+impl FromRequestParts<Arc<Service>> for CertificationPath {
     type Rejection = Problem;
 
-    async fn from_request_parts(parts: &mut Parts, state: &S) -> Result<Self, Problem> {
-        identifier(parts, state).await.map(Self).ok_or_else(no_certification)
+    async fn from_request_parts(parts: &mut Parts, service: &Arc<Service>) -> Result<Self, Problem> {
+        let id = identifier(parts, service).await.ok_or_else(no_certification)?;
+        let Sees(scope) = Sees::from_request_parts(parts, service).await?;
+        if service.may_see(id, &scope).await? { Ok(Self(id)) } else { Err(no_certification()) }
     }
 }
 

@@ -44,6 +44,7 @@ impl FromParameters for YieldQuery {
 /// What a rig's batches add up to.
 #[utoipa::path(
     get, path = "/v1/rigs/{rig}/yield", tag = "rigs", operation_id = "get_yield",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     params(("rig" = String, Path, description = "Name of the rig."), YieldQuery),
     responses(
         (status = 200, description = "The sums.", body = RigYield),

@@ -15,6 +15,8 @@ use crate::{certificate::Verdict, clock::Stamp, committed::Committed, profile::R
 #[derive(Debug, Clone, Default, PartialEq)]
 pub struct Filter {
     pub rig: Option<RigName>,
+    /// Only those of these rigs, whatever else is asked for.
+    pub within: Option<Vec<RigName>>,
     pub verdict: Option<Verdict>,
     /// Recorded at this time or later.
     pub since: Option<Stamp>,
@@ -114,6 +116,16 @@ impl History {
         Ok(sqlx::query_scalar(sql).bind(id.to_string()).fetch_optional(&self.pool).await?)
     }
 
+    /// Whose certification it is.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn rig_of(&self, id: Uuid) -> Result<Option<RigName>, LedgerError> {
+        let sql = "SELECT rig FROM certifications WHERE id = ?";
+        let rig: Option<String> = sqlx::query_scalar(sql).bind(id.to_string()).fetch_optional(&self.pool).await?;
+        Ok(rig.and_then(|rig| RigName::try_from(rig).ok()))
+    }
+
     /// The head of a record.
     ///
     /// # Errors
@@ -211,6 +223,14 @@ impl History {
         let mut query = QueryBuilder::<Sqlite>::new("SELECT entry, record FROM certifications WHERE TRUE");
         if let Some(rig) = &filter.rig {
             query.push(" AND rig = ").push_bind(rig.as_str());
+        }
+        if let Some(rigs) = &filter.within {
+            query.push(" AND rig IN (");
+            let mut list = query.separated(", ");
+            for rig in rigs {
+                list.push_bind(rig.as_str());
+            }
+            query.push(")");
         }
         if let Some(verdict) = filter.verdict {
             query.push(" AND verdict = ").push_bind(word(verdict));

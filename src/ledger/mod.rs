@@ -13,6 +13,7 @@ pub mod proofs;
 pub mod rows;
 pub mod seal;
 pub mod source;
+pub mod tokens;
 pub mod tree;
 pub mod writer;
 
@@ -134,6 +135,7 @@ pub struct Ledger {
     pub writer: Writer,
     pub seal: Arc<Seal>,
     audits: JoinHandle<()>,
+    path: PathBuf,
 }
 
 impl Ledger {
@@ -152,12 +154,7 @@ impl Ledger {
     pub async fn open_at(place: &Place) -> Result<Self, LedgerError> {
         let path = &place.database;
         let cannot_open = |source| LedgerError::Open { path: path.to_owned(), source: Arc::new(source) };
-        let options = SqliteConnectOptions::new()
-            .filename(path)
-            .journal_mode(SqliteJournalMode::Wal)
-            .synchronous(SqliteSynchronous::Full)
-            .foreign_keys(true)
-            .busy_timeout(BUSY_TIMEOUT);
+        let options = options(path);
         let mut connection = options.clone().create_if_missing(true).connect().await.map_err(cannot_open)?;
         check_sqlite(&mut connection).await?;
         MIGRATIONS.run(&mut connection).await.map_err(|source| LedgerError::Migrate { source: Arc::new(source) })?;
@@ -169,7 +166,16 @@ impl Ledger {
         let pool = SqlitePoolOptions::new().max_connections(READERS).connect_with(options.read_only(true)).await.map_err(cannot_open)?;
         let seal = Seal::new(pool.clone(), key, fault.clone());
         let audits = seal.watch(place.audit_interval);
-        Ok(Self { history: History::new(pool), writer: Writer::start(connection, fault), seal, audits })
+        let (history, writer) = (History::new(pool), Writer::start(connection, fault));
+        Ok(Self { history, writer, seal, audits, path: path.to_owned() })
+    }
+
+    /// Bytes of the database file and of its write-ahead log; a file that cannot be looked at counts zero.
+    pub fn sizes(&self) -> (u64, u64) {
+        let size = |path: &Path| std::fs::metadata(path).map_or(0, |data| data.len());
+        let mut log = self.path.clone().into_os_string();
+        log.push("-wal");
+        (size(&self.path), size(Path::new(&log)))
     }
 
     /// Writes what was handed in, then closes all connections.
@@ -214,6 +220,16 @@ async fn prepare(connection: &mut SqliteConnection, key: &Key, fault: &Fault, no
     }
     transaction.commit().await?;
     Ok(())
+}
+
+/// How the ledger's file is opened by whoever writes it.
+fn options(path: &Path) -> SqliteConnectOptions {
+    SqliteConnectOptions::new()
+        .filename(path)
+        .journal_mode(SqliteJournalMode::Wal)
+        .synchronous(SqliteSynchronous::Full)
+        .foreign_keys(true)
+        .busy_timeout(BUSY_TIMEOUT)
 }
 
 /// A connection to a ledger that a service may be using, which writes nothing.

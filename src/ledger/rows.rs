@@ -142,7 +142,7 @@ pub struct Tally {
 }
 
 /// The ledger's word for a verdict or a reason: the same as in a record.
-pub(super) fn word<T: serde::Serialize>(value: T) -> String {
+pub(crate) fn word<T: serde::Serialize>(value: T) -> String {
     match serde_json::to_value(value) {
         Ok(serde_json::Value::String(word)) => word,
         // Plain enums only; the column's CHECK refuses this.

@@ -57,8 +57,16 @@ pub const CERTIFICATION: Source = Source {
     rows: "SELECT id AS subject, recorded_at FROM certifications ORDER BY entry",
 };
 
+/// Changes of tokens; the subject is `token/change`.
+pub const TOKEN: Source = Source {
+    kind: "token",
+    row: "SELECT token || '/' || kind AS subject, recorded_at, change AS number, token, kind AS change, document AS document_sha256 \
+          FROM token_changes WHERE token = substr(?1, 1, instr(?1, '/') - 1) AND kind = substr(?1, instr(?1, '/') + 1)",
+    rows: "SELECT token || '/' || kind AS subject, recorded_at FROM token_changes ORDER BY change",
+};
+
 /// Every table that is logged.
-pub const SOURCES: [Source; 3] = [PROFILE, COMMITMENT, CERTIFICATION];
+pub const SOURCES: [Source; 4] = [PROFILE, COMMITMENT, CERTIFICATION, TOKEN];
 
 /// What is to be logged about one row.
 #[derive(Debug, Clone, PartialEq)]

@@ -2,6 +2,7 @@
 
 use std::sync::{Arc, LazyLock, Mutex};
 
+use prometheus_client::metrics::histogram::Histogram;
 use sqlx::{AssertSqlSafe, Connection, SqliteConnection};
 use tokio::{
     sync::{mpsc, oneshot},
@@ -19,6 +20,7 @@ use super::{
 use crate::{
     clock::Stamp,
     committed::Committed,
+    metrics::group_sizes,
     profile::{Profile, RigName},
 };
 
@@ -157,12 +159,16 @@ pub struct Writer {
     /// `None` once closed.
     inbox: Mutex<Option<mpsc::Sender<Item>>>,
     task: Mutex<Option<JoinHandle<()>>>,
+    /// How many items each transaction had.
+    pub(crate) group_sizes: Histogram,
 }
 
 impl Writer {
     pub(super) fn start(connection: SqliteConnection, fault: Fault) -> Self {
         let (inbox, items) = mpsc::channel(GROUP);
-        Self { inbox: Mutex::new(Some(inbox)), task: Mutex::new(Some(tokio::spawn(run(connection, items, fault)))) }
+        let group_sizes = group_sizes();
+        let task = tokio::spawn(run(connection, items, fault, group_sizes.clone()));
+        Self { inbox: Mutex::new(Some(inbox)), task: Mutex::new(Some(task)), group_sizes }
     }
 
     /// Whether the writer takes items.
@@ -231,9 +237,10 @@ impl Writer {
     }
 }
 
-async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>, fault: Fault) {
+async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>, fault: Fault, group_sizes: Histogram) {
     let mut group = Vec::with_capacity(GROUP);
     while items.recv_many(&mut group, GROUP).await > 0 {
+        group_sizes.observe(group.len() as f64);
         if let Some(detail) = fault.get() {
             let error = LedgerError::Fault { detail: detail.to_owned() };
             group.drain(..).for_each(|item| item.failed(&error).tell());

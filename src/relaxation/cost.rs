@@ -38,7 +38,7 @@ pub fn choose(choice: LevelChoice, scenario: &Scenario, groups: usize) -> Result
 }
 
 /// Estimated steps of one solve.
-fn estimate(level: Level, scenario: &Scenario, groups: usize) -> f64 {
+pub fn estimate(level: Level, scenario: &Scenario, groups: usize) -> f64 {
     let exact: Vec<bool> = scenario.leakage().iter().map(|leakage| *leakage == 0.0).collect();
     let algebra = Algebra::new(scenario.geometry(), &exact);
     let bases = level.bases(&algebra);

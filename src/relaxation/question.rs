@@ -17,6 +17,7 @@ use crate::{
     counts::Table,
     entropy::power::power_entropy_down,
     scenario::{Geometry, LeakageReading, Setting},
+    score::Score,
     witness::witness::Claim,
 };
 
@@ -28,6 +29,8 @@ pub enum Knowledge<'a> {
     Exactly(&'a Table<f64>),
     /// Intervals `[low, high]`, `[x][y][b]`.
     Within(&'a Table<[f64; 2]>),
+    /// Linear scores with their least values.
+    Reaching(&'a [Score]),
 }
 
 /// How far constraints may be relaxed to make the question answerable whatever the numbers are.
@@ -35,7 +38,7 @@ pub enum Knowledge<'a> {
 pub enum Slack {
     /// Not at all.
     None,
-    /// Every probability may miss its interval by `t`; `−t` is maximised. A positive least `t` is a contradiction.
+    /// Every probability may miss its interval, and every score its least value, by `t`; `−t` is maximised. A positive least `t` is a contradiction.
     Behaviour,
     /// Every leakage is at most `t` in place of its declared tolerance; `−t` is maximised.
     Leakage,
@@ -60,6 +63,8 @@ pub struct Posed {
     /// `−p ≤ −low`.
     pub behaviour_rows: Vec<(Setting, usize)>,
     pub behaviour_within: bool,
+    /// Inequalities that stand for scores, `−S ≤ −s`, in the order of the scores. They come first.
+    pub score_rows: usize,
     /// The group (`None` for a sum over all) and preparation of each leakage row, after the behaviour inequalities.
     pub leakage_rows: Vec<(Option<usize>, usize)>,
     /// The first of the rows that keep each group inside its cell, one per vertex: minus its barycentric coordinate is at most zero.
@@ -284,7 +289,7 @@ pub fn pose(moments: &mut Moments, question: &Question) -> Result<Posed, WordErr
         let Setting { x, y } = *setting;
         let last = *b + 1 == geometry.outcomes;
         match question.knowledge {
-            Knowledge::Nothing => {}
+            Knowledge::Nothing | Knowledge::Reaching(_) => {}
             Knowledge::Exactly(_) if last => {}
             Knowledge::Exactly(table) => {
                 behaviour_rows.push((*setting, *b));
@@ -308,6 +313,19 @@ pub fn pose(moments: &mut Moments, question: &Question) -> Result<Posed, WordErr
                 program.inequalities.push(Row { terms: below, right: -low });
             }
         }
+    }
+    let scores = if let Knowledge::Reaching(scores) = question.knowledge { scores } else { &[] };
+    for score in scores {
+        let negated = |c: i64| -(c as f64);
+        let form = probabilities.iter().flat_map(|(setting, b, form)| {
+            let weight = negated(score.coefficients[setting.x][setting.y][*b]);
+            form.iter().map(move |(moment, c)| (*moment, weight * c))
+        });
+        let mut terms = over_all_groups(&form.collect());
+        if question.slack == Slack::Behaviour {
+            terms.push((slack_variable, -1.0));
+        }
+        program.inequalities.push(Row { terms, right: -score.at_least });
     }
     let mut leakage_rows = Vec::new();
     for (x, form) in leakages.iter().enumerate().filter(|(_, form)| !form.is_empty()) {
@@ -360,5 +378,15 @@ pub fn pose(moments: &mut Moments, question: &Question) -> Result<Posed, WordErr
         }
     }
     let behaviour_within = matches!(question.knowledge, Knowledge::Within(_));
-    Ok(Posed { program, groups, behaviour_rows, behaviour_within, leakage_rows, facet_rows, stride: layout.stride, scales })
+    Ok(Posed {
+        program,
+        groups,
+        behaviour_rows,
+        behaviour_within,
+        score_rows: scores.len(),
+        leakage_rows,
+        facet_rows,
+        stride: layout.stride,
+        scales,
+    })
 }

@@ -70,7 +70,9 @@ impl Service {
         };
         let level = order.level(&profile);
         let plan = order.plan(&profile, expected)?;
-        let (commitment, witnesses) = self.solvers.run(move || commit(&plan)).await?.outcome?;
+        let done = self.solvers.run(move || commit(&plan)).await?;
+        self.metrics.solved(done.queued, done.solved);
+        let (commitment, witnesses) = done.outcome?;
         // Only now: a batch that began while the factors were being worked out was not committed to.
         let recorded_at = self.clock.now();
         let committed = Committed {

@@ -171,6 +171,11 @@ impl Solvers {
         Duration::from_millis(milliseconds).clamp(Duration::from_secs(1), Duration::from_secs(120))
     }
 
+    /// Jobs that wait for a thread.
+    pub(super) fn waiting(&self) -> usize {
+        self.load.waiting.load(Ordering::Relaxed)
+    }
+
     /// What is wrong with the solvers, if anything is.
     pub(super) fn fault(&self) -> Option<String> {
         if own(&self.waiting.queue).closed {

@@ -17,6 +17,8 @@
 //! `q` (`d q`). Summing over the groups, with `Σ q_e = 1` and the leakage either limited in the sum or in each group, gives the bound
 //! that `witness.rs` states.
 
+use nalgebra::{DMatrix, DVector};
+use num_bigint::BigInt;
 use num_rational::BigRational;
 use num_traits::{One, Signed, ToPrimitive, Zero};
 use std::collections::BTreeMap;
@@ -26,7 +28,7 @@ use super::{
     witness::{Claim, Constant, FORMAT, Witness},
 };
 use crate::{
-    counts::Table,
+    counts::{Table, fits},
     entropy::power::{POWER_BITS, power_entropy_down},
     exact::{decimal, dyadic, round_up},
     relaxation::{
@@ -35,6 +37,7 @@ use crate::{
         word::{Algebra, Letter, Word, WordError},
     },
     scenario::{Geometry, LeakageReading, Setting},
+    score::Score,
 };
 
 /// Why a witness is not accepted.
@@ -101,6 +104,8 @@ pub enum Place<'a> {
     Behaviour(&'a Table<f64>),
     /// At the worst behaviour within the intervals `[low, high]`, `[x][y][b]`.
     Region(&'a Table<[f64; 2]>),
+    /// At the worst of all behaviours that reach these scores.
+    Scores(&'a [Score]),
 }
 
 /// Confirms a witness document, its constants included.
@@ -457,6 +462,9 @@ impl CheckedWitness {
     /// `max ν·p` over the place.
     fn worst_behaviour(&self, place: Place) -> Result<BigRational, CheckError> {
         let geometry = self.witness.geometry;
+        if let Place::Scores(scores) = place {
+            return self.over_scores(scores);
+        }
         let mut sum = BigRational::zero();
         for setting in geometry.settings() {
             let weights = &self.witness.behaviour[setting.x][setting.y];
@@ -470,9 +478,42 @@ impl CheckedWitness {
                     let intervals = table.get(setting.x).and_then(|t| t.get(setting.y)).ok_or_else(missing)?;
                     self.over_intervals(weights, intervals)?
                 }
+                Place::Scores(_) => return Err(missing()),
             };
         }
         Ok(sum)
+    }
+
+    /// Upper bound on `ν·p` over the behaviours that reach the scores: `Σ_{xy} max_b (ν + Σ_k λ_k c^k)_{xyb} − Σ_k λ_k s_k`, which holds for every
+    /// `λ ≥ 0` (see [`crate::score`]). The λ that is used makes `ν + Σ λ c` as small as possible in the least squares sense, rounded to the
+    /// unit of the multipliers: where ν is a combination of scores, as in a witness that was made for them, nothing is lost.
+    fn over_scores(&self, scores: &[Score]) -> Result<BigRational, CheckError> {
+        if !scores.iter().all(|score| fits(&score.coefficients, self.witness.geometry)) {
+            return Err(CheckError::Inapplicable("the scores have another shape".into()));
+        }
+        let multipliers = self.score_multipliers(scores);
+        let mut sum = BigRational::zero();
+        for setting in self.witness.geometry.settings() {
+            let weight = |(b, nu): (usize, &i64)| {
+                let of_scores = scores.iter().zip(&multipliers).filter_map(|(score, lambda)| Some((score.at(setting).get(b)?, lambda)));
+                BigInt::from(*nu) + of_scores.map(|(c, lambda)| BigInt::from(*c) * lambda).sum::<BigInt>()
+            };
+            let weights = self.witness.behaviour[setting.x][setting.y].iter().enumerate().map(weight);
+            sum += dyadic(weights.max().ok_or(CheckError::Range)?, self.witness.multiplier_bits);
+        }
+        let paid = scores.iter().zip(&multipliers).map(|(score, lambda)| self.unit(*lambda) * decimal(score.at_least));
+        Ok(sum - paid.sum::<BigRational>())
+    }
+
+    /// Multipliers `λ ≥ 0` of scores, over `2^m`. Any would do: this choice is made in floating point.
+    fn score_multipliers(&self, scores: &[Score]) -> Vec<i64> {
+        let cells = self.witness.behaviour.iter().flatten().flatten();
+        let right = DVector::from_iterator(cells.clone().count(), cells.map(|nu| -(*nu as f64)));
+        let coefficients = scores.iter().flat_map(|score| score.coefficients.iter().flatten().flatten().map(|c| *c as f64));
+        let left = DMatrix::from_iterator(right.len(), scores.len(), coefficients);
+        let solved = left.svd(true, true).solve(&right, 1e-9).ok();
+        let whole = |value: f64| value.round().clamp(0.0, MAX_INTEGER as f64) as i64;
+        solved.map_or_else(|| vec![0; scores.len()], |lambda| lambda.iter().map(|value| whole(*value)).collect())
     }
 
     fn at_probabilities(&self, weights: &[i64], probabilities: &[f64]) -> Result<BigRational, CheckError> {
@@ -543,5 +584,10 @@ fn least_likeliest(place: Place, target: Setting) -> Option<BigRational> {
             stated.into_iter().chain([last]).max()
         }
         Place::Region(table) => table.get(target.x)?.get(target.y)?.iter().map(|[low, _]| decimal(*low)).max(),
+        // Whatever the distribution, one outcome has its share.
+        Place::Scores(scores) => {
+            let outcomes = scores.first()?.coefficients.get(target.x)?.get(target.y)?.len();
+            Some(BigRational::new(1.into(), outcomes.into()))
+        }
     }
 }

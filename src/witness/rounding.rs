@@ -11,14 +11,16 @@ use super::{
     witness::{Claim, FORMAT, Span, Witness},
 };
 use crate::{
+    counts::Table,
     entropy::power::power_entropy_down,
     exact::dyadic,
     relaxation::{
         cells::{Cell, cells},
         moments::Moments,
-        question::{Posed, Question, Shape, Slack},
+        question::{Knowledge, Posed, Question, Shape, Slack},
     },
     scenario::LeakageReading,
+    score::Score,
     solver::Candidate,
 };
 
@@ -63,7 +65,7 @@ pub fn witness(moments: &Moments, question: &Question, posed: &Posed, candidate:
         LeakageReading::EveryEmission => posed.groups,
     };
     let mut leakage = vec![vec![0.0; geometry.preparations]; rows];
-    let first = if posed.behaviour_within { 2 * posed.behaviour_rows.len() } else { 0 };
+    let first = posed.score_rows + if posed.behaviour_within { 2 * posed.behaviour_rows.len() } else { 0 };
     for ((group, x), multiplier) in posed.leakage_rows.iter().zip(&candidate.inequality_multipliers[first..]) {
         leakage[group.unwrap_or(0)][*x] = multiplier.max(0.0);
     }
@@ -75,7 +77,8 @@ pub fn witness(moments: &Moments, question: &Question, posed: &Posed, candidate:
 
     let chords = chords(question, posed, candidate, geometry.outcomes);
     let values = behaviour.iter().flatten().flatten().chain(chords.iter().flatten()).chain(leakage.iter().flatten()).copied();
-    let multiplier_bits = bits_for(values.chain(candidate.equality_multipliers.iter().copied()))?;
+    let of_scores = score_multipliers(question, candidate);
+    let multiplier_bits = bits_for(values.chain(of_scores).chain(candidate.equality_multipliers.iter().copied()))?;
     let factor_bits = bits_for(factors.iter().flat_map(|factor| factor.iter().copied()))?.max(multiplier_bits.div_ceil(2));
     let multiplier = |value: f64| scaled(value, multiplier_bits);
     let witness = Witness {
@@ -85,10 +88,7 @@ pub fn witness(moments: &Moments, question: &Question, posed: &Posed, candidate:
         leakage_holds: reading,
         claim: question.claim.clone(),
         multiplier_bits,
-        behaviour: behaviour
-            .iter()
-            .map(|table| table.iter().map(|values| values.iter().map(|v| multiplier(*v)).collect()).collect())
-            .collect(),
+        behaviour: integer_behaviour(question, &behaviour, candidate, multiplier_bits),
         leakage: leakage.iter().map(|row| row.iter().map(|value| multiplier(*value)).collect()).collect(),
         chords: integer_chords(question, &chords, geometry.outcomes, multiplier_bits),
         factor_bits,
@@ -98,6 +98,29 @@ pub fn witness(moments: &Moments, question: &Question, posed: &Posed, candidate:
         factors: factors.chunks(posed.scales.len()).map(|group| group.iter().map(|l| lower_rows(l, factor_bits)).collect()).collect(),
     };
     Ok(complete(witness)?)
+}
+
+/// The largest that a score adds to a multiplier of the behaviour, for each score.
+fn score_multipliers(question: &Question, candidate: &Candidate) -> Vec<f64> {
+    let Knowledge::Reaching(scores) = question.knowledge else { return Vec::new() };
+    let largest = |score: &Score| score.coefficients.iter().flatten().flatten().map(|c| c.unsigned_abs()).max().unwrap_or(0) as f64;
+    let count = scores.len() as f64;
+    scores.iter().zip(&candidate.inequality_multipliers).map(|(score, multiplier)| count * multiplier * largest(score)).collect()
+}
+
+/// Rounds the multipliers of the behaviour. Those of scores are rounded before they multiply the coefficients, so that the result is an exact
+/// multiple of the score.
+fn integer_behaviour(question: &Question, behaviour: &Table<f64>, candidate: &Candidate, bits: u32) -> Table<i64> {
+    let rounded = |values: &Vec<f64>| values.iter().map(|v| scaled(*v, bits)).collect();
+    let mut integers: Table<i64> = behaviour.iter().map(|table| table.iter().map(rounded).collect()).collect();
+    if let Knowledge::Reaching(scores) = question.knowledge {
+        for (score, multiplier) in scores.iter().zip(&candidate.inequality_multipliers) {
+            let multiplier = scaled(multiplier.max(0.0), bits);
+            let cells = integers.iter_mut().flatten().flatten().zip(score.coefficients.iter().flatten().flatten());
+            cells.for_each(|(integer, coefficient)| *integer = integer.saturating_sub(multiplier.saturating_mul(*coefficient)));
+        }
+    }
+    integers
 }
 
 /// The affine function of each cell: the chord through `η_β − τ_j` at the vertices, with `τ` the multipliers of the cell's facets.

@@ -207,7 +207,7 @@ fn gated(threads: usize, queue: usize) -> (Running, Arc<Gate>) {
         at_gate.pass();
         stand_in(request)
     });
-    let running = Running::solving(Solving { certifier, threads, queue });
+    let running = Running::solving(Solving { certifier, threads, queue, ..Solving::default() });
     running.client().put_rig("bench", &profile(), &[]).expect(201);
     (running, gate)
 }

@@ -36,13 +36,23 @@ impl Reply {
 #[derive(Clone)]
 pub struct Client {
     base: String,
+    token: Option<String>,
     agent: ureq::Agent,
 }
 
 impl Client {
     pub fn new(base: String) -> Self {
         let config = ureq::Agent::config_builder().http_status_as_error(false).allow_non_standard_methods(true).build();
-        Self { base, agent: config.into() }
+        Self { base, token: None, agent: config.into() }
+    }
+
+    pub fn base(&self) -> &str {
+        &self.base
+    }
+
+    /// The same, presenting a token with each request.
+    pub fn presenting(&self, token: &str) -> Self {
+        Self { token: Some(token.to_owned()), ..self.clone() }
     }
 
     pub fn call(&self, method: &str, path: &str, headers: &[(&str, &str)], body: Option<&[u8]>) -> Reply {
@@ -52,6 +62,9 @@ impl Client {
     /// As [`Self::call`]; `None` if the server has gone.
     pub fn try_call(&self, method: &str, path: &str, headers: &[(&str, &str)], body: Option<&[u8]>) -> Option<Reply> {
         let mut request = Request::builder().method(method).uri(format!("{}{path}", self.base));
+        if let Some(token) = &self.token {
+            request = request.header("authorization", format!("Bearer {token}"));
+        }
         for (name, value) in headers {
             request = request.header(*name, *value);
         }

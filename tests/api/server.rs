@@ -11,7 +11,7 @@ use bitassay::{
     certificate::{Reason, Verdict},
     certify::{Certification, certify},
     clock::SystemClock,
-    http::server,
+    http::{limits::Limits, server},
     ledger::Ledger,
     request::{Data, Request, RequestDocument, RoundModel},
     service::{Certifier, Service, Solvers},
@@ -38,11 +38,12 @@ pub struct Solving {
     pub certifier: Certifier,
     pub threads: usize,
     pub queue: usize,
+    pub limits: Limits,
 }
 
 impl Default for Solving {
     fn default() -> Self {
-        Self { certifier: Arc::new(stand_in), threads: 2, queue: 64 }
+        Self { certifier: Arc::new(stand_in), threads: 2, queue: 64, limits: Limits::default() }
     }
 }
 
@@ -50,6 +51,10 @@ impl Running {
     /// A server on a new database, with the stand-in.
     pub fn new() -> Self {
         Self::solving(Solving::default())
+    }
+
+    pub fn limited(limits: Limits) -> Self {
+        Self::solving(Solving { limits, ..Solving::default() })
     }
 
     pub fn solving(solving: Solving) -> Self {
@@ -74,7 +79,7 @@ impl Running {
                 let listener = TcpListener::bind("127.0.0.1:0").await.unwrap();
                 started.send(listener.local_addr().unwrap()).unwrap();
                 let signal = async { drop(stopped.await) };
-                server::run(listener, service, signal).await.unwrap();
+                server::run(listener, service, solving.limits, signal).await.unwrap();
             });
         });
         let address = address.recv().unwrap();

@@ -2,6 +2,7 @@
 
 use std::{
     net::SocketAddr,
+    num::NonZeroU32,
     path::Path,
     sync::{Arc, OnceLock, mpsc},
     thread::JoinHandle,
@@ -18,7 +19,7 @@ use axum::{
 use bitassay::{
     certify::certify,
     clock::SystemClock,
-    http::{router::router_beside, server},
+    http::{limits::Limits, server},
     ledger::Ledger,
     service::{Service, Solvers},
 };
@@ -86,6 +87,11 @@ pub struct Served {
     _folder: TempDir,
 }
 
+/// As by default, but for the number of requests of one client, which stands for many here.
+fn limits() -> Limits {
+    Limits { rate: NonZeroU32::MAX, burst: NonZeroU32::MAX, ..Limits::default() }
+}
+
 impl Served {
     pub fn start() -> Self {
         // Beside the build, on the disk: a temporary folder may be in memory.
@@ -101,8 +107,8 @@ impl Served {
                 let service = Service::new(ledger, solvers, Arc::new(SystemClock));
                 let listener = TcpListener::bind("127.0.0.1:0").await.expect("a port");
                 started.send(listener.local_addr().expect("an address")).expect("the bench waits");
-                let app = router_beside(Arc::clone(&service), beside(&bytes).await);
-                server::serve(listener, app, service, async { drop(stopped.await) }).await.expect("a server");
+                let beside = beside(&bytes).await;
+                server::run_beside(listener, service, limits(), beside, async { drop(stopped.await) }).await.expect("a server");
             });
         });
         let address = address.recv().expect("a server");

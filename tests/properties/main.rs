@@ -2,10 +2,12 @@
 
 mod accounts;
 mod coverage;
+mod forecasts;
 mod kept;
 mod models;
 mod monotone;
 mod relabelling;
 mod rig;
 mod rounds;
+mod sandwich;
 mod witnesses;

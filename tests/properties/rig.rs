@@ -43,11 +43,13 @@ pub fn document(counts: Table<u64>, dimension: u32, leakage: f64) -> RequestDocu
         },
         counts: Some(counts),
         behaviour: None,
+        scores: None,
         rounds: RoundModel::Independent,
         failure: Failure::default(),
         level: LevelChoice::Lean,
         entropy: EntropyChoice::Guessing,
         lost_rounds: None,
+        bracket: false,
     }
 }
 
