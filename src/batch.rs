@@ -14,7 +14,7 @@ use crate::{
     fault::{Fault, parse_object},
     profile::Profile,
     request::{LostRounds, Request, RequestDocument, Starts},
-    scenario::{LeakageDocument, Scenario, ScenarioDocument},
+    scenario::{Geometry, LeakageDocument, Scenario, ScenarioDocument},
 };
 
 /// What is wrong with a posted batch.
@@ -111,25 +111,53 @@ impl Posted {
         format!("sha256:{}", hex::encode(hasher.finalize()))
     }
 
-    /// Reads the batch under a profile, and for rounds with memory under the commitment that stands.
+    /// Reads what was posted. Rows of a CSV form are put into a table of the rig's geometry.
     ///
     /// # Errors
-    /// A body of the wrong shape, or one that contradicts the profile or itself. Pointers are into the posted document; in CSV
-    /// form `/lines/7/count` is a field of the seventh line, and an option is a pointer of its name, such as `/leakage`.
-    pub fn read(self, profile: &Profile, committed: Option<&Committed>) -> Result<Batch, BatchFault> {
+    /// A body of the wrong shape. Pointers are into the posted document; in CSV form `/lines/7/count` is a field of the seventh line, and
+    /// an option is a pointer of its name, such as `/leakage`.
+    pub fn read(self, geometry: Geometry) -> Result<Legible, BatchFault> {
         match self {
-            Self::Json(text) => {
-                let document: BatchDocument = parse_object(&text).map_err(BatchFault::Malformed)?;
-                document.under(profile, committed).map_err(BatchFault::Impossible)
-            }
+            Self::Json(text) => Ok(Legible { document: parse_object(&text).map_err(BatchFault::Malformed)?, rows: None }),
             Self::Csv { text, options } => {
                 let rows = rows::Rows::read(&text).map_err(BatchFault::Malformed)?;
                 let CsvOptions { started_at, ended_at, leakage, lost_rounds } = options;
-                let counts = rows.table(profile.scenario().geometry()).map_err(BatchFault::Impossible)?;
-                let document = BatchDocument { counts, started_at, ended_at, leakage, lost_rounds };
-                document.under(profile, committed).map_err(|fault| BatchFault::Impossible(rows.blame(fault)))
+                let counts = rows.table(geometry).map_err(BatchFault::Impossible)?;
+                Ok(Legible { document: BatchDocument { counts, started_at, ended_at, leakage, lost_rounds }, rows: Some(rows) })
             }
         }
+    }
+}
+
+/// A batch that has the shape of one, not held against the rig's profile yet.
+#[derive(Debug)]
+pub struct Legible {
+    document: BatchDocument,
+    /// The rows that it came in.
+    rows: Option<rows::Rows>,
+}
+
+impl Legible {
+    pub fn started_at(&self) -> Stamp {
+        self.document.started_at
+    }
+
+    /// The batch's own leakage, so that a stored budget can be put in the place of its digest.
+    pub fn leakage(&mut self) -> Option<&mut LeakageDocument> {
+        self.document.leakage.as_mut()
+    }
+
+    /// The batch under a profile, which supplies what the batch leaves out, and for rounds with memory under a commitment.
+    ///
+    /// # Errors
+    /// A batch that contradicts the profile or itself; pointers as for [`Posted::read`].
+    pub fn under(self, profile: &Profile, committed: Option<&Committed>) -> Result<Batch, BatchFault> {
+        let Self { document, rows } = self;
+        let blamed = |fault| match &rows {
+            Some(rows) => rows.blame(fault),
+            None => fault,
+        };
+        document.under(profile, committed).map_err(|fault| BatchFault::Impossible(blamed(fault)))
     }
 }
 
@@ -195,12 +223,16 @@ mod tests {
         Posted::Csv { text: text.into(), options: options(None) }
     }
 
+    fn read(posted: Posted) -> Result<Batch, BatchFault> {
+        let profile = profile();
+        posted.read(profile.scenario().geometry())?.under(&profile, None)
+    }
+
     #[test]
     fn both_forms_say_the_same() {
         let json = r#"{"counts": [[[7, 3]], [[0, 10]]], "started_at": "2026-03-01T12:00:00Z", "ended_at": "2026-03-01T12:05:00Z"}"#;
         let rows = "preparation,measurement,outcome,count\n1,0,1,10\n0,0,0,7\n0,0,1,3\n";
-        let profile = profile();
-        assert_eq!(Posted::Json(json.into()).read(&profile, None).unwrap(), csv(rows).read(&profile, None).unwrap());
+        assert_eq!(read(Posted::Json(json.into())).unwrap(), read(csv(rows)).unwrap());
     }
 
     #[test]
@@ -231,7 +263,7 @@ mod tests {
             ("preparation,measurement,outcome,count\n0,0,0,1\n", ""),
         ];
         for (text, pointer) in cases {
-            let (BatchFault::Malformed(fault) | BatchFault::Impossible(fault)) = csv(text).read(&profile(), None).unwrap_err();
+            let (BatchFault::Malformed(fault) | BatchFault::Impossible(fault)) = read(csv(text)).unwrap_err();
             assert_eq!(fault.pointer, pointer, "{text}: {fault}");
         }
     }

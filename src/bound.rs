@@ -16,7 +16,7 @@ use crate::{
     },
     scenario::{Geometry, LeakageReading, Scenario, Setting},
     score::check_scores,
-    solver::{Limits, Status, solve},
+    solver::{Candidate, Limits, Status, solve_generally, solve_structured},
     witness::{
         check::{CheckedBound, CheckedWitness, Place, proves_contradiction},
         rounding,
@@ -49,10 +49,6 @@ pub enum Answer {
     Unverified,
 }
 
-/// A solve that did not end within the solver's tolerances is good enough all the same if rounding its witness costs no more than this
-/// in guessing probability; the bound is what the exact check says in any case.
-const GOOD_ENOUGH: f64 = 2e-6;
-
 /// Upper bound on the guessing probability of a target of the scenario, for every model whose behaviour lies in the place.
 ///
 /// Starts at `level` and falls to coarser ones where a solve does not end well; the least of the bounds that were checked is
@@ -80,7 +76,7 @@ pub fn guessing_probability(scenario: &Scenario, target: Setting, place: Place, 
         }
         let improves = |found: &Found| best.as_ref().is_none_or(|best| found.bound.exact() < best.bound.exact());
         best = found.filter(improves).or(best);
-        if best.as_ref().is_some_and(|best| status == Status::Solved || best.witness.rounding_cost() <= GOOD_ENOUGH) {
+        if best.is_some() && status == Status::Solved {
             break;
         }
     }
@@ -136,6 +132,7 @@ fn least_leakage(geometry: Geometry, place: Place, level: Level, limits: Limits)
 }
 
 /// One solve at one level: how it ended and what could be verified of it.
+#[derive(Clone)]
 struct Attempt {
     status: Status,
     found: Option<Found>,
@@ -151,14 +148,35 @@ fn attempt(geometry: Geometry, question: &Question, place: Place, level: Level, 
     }
     let Ok(mut moments) = Moments::new(Algebra::new(geometry, &exact), level) else { return failed };
     let Ok(posed) = pose(&mut moments, question) else { return failed };
-    let candidate = solve(&posed.program, limits);
-    let at_point = |row: &Row| -row.terms.iter().filter_map(|(variable, c)| Some(c * candidate.values.get(*variable)?)).sum::<f64>();
-    let facets = posed.program.inequalities.iter().skip(posed.facet_rows).map(at_point).collect();
-    let found = rounding::witness(&moments, question, &posed, &candidate).ok().and_then(|witness| {
-        let bound = witness.bound(place, question.leakage, question.leakage_holds).ok()?;
-        Some(Found { witness, bound, level })
-    });
-    Attempt { status: candidate.status, found, facets }
+    let examined = |candidate: Candidate| {
+        let at_point = |row: &Row| -row.terms.iter().filter_map(|(variable, c)| Some(c * candidate.values.get(*variable)?)).sum::<f64>();
+        let facets = posed.program.inequalities.iter().skip(posed.facet_rows).map(at_point).collect();
+        let found = rounding::witness(&moments, question, &posed, &candidate).ok().and_then(|witness| {
+            let bound = witness.bound(place, question.leakage, question.leakage_holds).ok()?;
+            Some(Found { witness, bound, level })
+        });
+        Attempt { status: candidate.status, found, facets }
+    };
+    let first = solve_structured(&posed.program, limits).map(examined);
+    if let Some(first) = first.as_ref().filter(|first| first.is_good()) {
+        return first.clone();
+    }
+    let second = examined(solve_generally(&posed.program, limits));
+    match first {
+        Some(first) if first.value().is_some_and(|value| second.value().is_none_or(|other| value <= other)) => first,
+        Some(_) | None => second,
+    }
+}
+
+impl Attempt {
+    /// Whether another solver is not worth asking.
+    fn is_good(&self) -> bool {
+        self.status == Status::Solved && self.found.is_some()
+    }
+
+    fn value(&self) -> Option<&BigRational> {
+        self.found.as_ref().map(|found| found.bound.exact())
+    }
 }
 
 /// Whether everything in a question has the shape of the geometry; one that has not is left unanswered.

@@ -6,16 +6,42 @@ use serde::{Deserialize, Serialize};
 use serde_json::{Map, Value};
 
 use crate::{
-    certificate::Certificate,
+    certificate::{Certificate, Verdict},
     commitment::Commitment,
     fault::{Fault, parse},
+    statistics::quality::Objection,
     verify::{Discrepancy, verify},
     witness::witness::Witness,
 };
 
 /// What a service adds to a certificate when it records it. Nothing of this can be recomputed.
-const ENVELOPE: [&str; 10] =
-    ["id", "rig", "profile_version", "recorded_at", "started_at", "ended_at", "leakage_source", "commitment", "concerns", "timings"];
+const ENVELOPE: [&str; 11] = [
+    "id",
+    "rig",
+    "profile_version",
+    "recorded_at",
+    "started_at",
+    "ended_at",
+    "leakage_source",
+    "commitment",
+    "concerns",
+    "refuse_on",
+    "timings",
+];
+
+/// What a record's envelope says about its data.
+#[derive(Debug, Default, Deserialize)]
+#[serde(default)]
+struct Quality {
+    concerns: Vec<Named>,
+    refuse_on: Vec<Objection>,
+}
+
+/// A concern by its name.
+#[derive(Debug, Deserialize)]
+struct Named {
+    concern: Objection,
+}
 
 /// Witness documents by the digests of their canonical bytes.
 pub type Witnesses = BTreeMap<String, Witness>;
@@ -103,7 +129,24 @@ impl Bundle {
                 }]);
             }
         }
+        self.check_objections(&certificate).map_err(|discrepancy| vec![discrepancy])?;
         let witnesses: Vec<Witness> = self.witnesses.values().cloned().collect();
         verify(&certificate, self.commitment.as_ref(), &witnesses)
+    }
+
+    /// A record in which something stands that the profile objects to is no certified one. What the record does not show, it cannot be asked
+    /// about: comparisons with the declared distribution and with earlier batches rest on what the service wrote down.
+    fn check_objections(&self, certificate: &Certificate) -> Result<(), Discrepancy> {
+        let Quality { concerns, refuse_on } = parse(Value::Object(self.record.clone()).to_string().as_bytes())?;
+        let shown = certificate.objections();
+        let found = |objection: &&Objection| shown.contains(objection) || concerns.iter().any(|named| named.concern == **objection);
+        match refuse_on.iter().find(found) {
+            Some(_) if certificate.verdict != Verdict::Refused => Err(Discrepancy::Value {
+                pointer: "/verdict".to_owned(),
+                recorded: serde_json::to_value(certificate.verdict).unwrap_or_default().into(),
+                recomputed: serde_json::to_value(Verdict::Refused).unwrap_or_default().into(),
+            }),
+            _ => Ok(()),
+        }
     }
 }

@@ -4,10 +4,12 @@ use serde::{Deserialize, Serialize};
 
 use crate::{
     counts::Table,
+    leakage::budget::BudgetAccount,
     relaxation::level::{Level, LevelChoice},
-    request::{EntropyChoice, LostRounds, RoundModel},
+    request::{EntropyChoice, LostRounds, LostTreatment, RoundModel},
     scenario::{Scenario, Setting},
     score::Score,
+    statistics::quality::{LEAST_ROUNDS, Objection},
 };
 
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
@@ -35,6 +37,38 @@ pub enum Reason {
     Unverified,
     /// The batch began before its commitment was recorded.
     Uncommitted,
+    /// The rig's profile refuses batches whose settings are not drawn as declared.
+    SettingImbalance,
+    /// The rig's profile refuses batches whose outcomes drifted since the newest certified one.
+    OutcomeDrift,
+    /// The rig's profile refuses batches with too few rounds of a setting.
+    FewRounds,
+    /// The rig's profile refuses batches that left lost rounds out.
+    FairSampling,
+}
+
+impl From<Objection> for Reason {
+    fn from(objection: Objection) -> Self {
+        match objection {
+            Objection::SettingImbalance => Self::SettingImbalance,
+            Objection::OutcomeDrift => Self::OutcomeDrift,
+            Objection::FewRounds => Self::FewRounds,
+            Objection::FairSampling => Self::FairSampling,
+        }
+    }
+}
+
+impl Reason {
+    /// What is objected to, if the batch is refused for its data and not for its bound.
+    pub fn objection(self) -> Option<Objection> {
+        match self {
+            Self::SettingImbalance => Some(Objection::SettingImbalance),
+            Self::OutcomeDrift => Some(Objection::OutcomeDrift),
+            Self::FewRounds => Some(Objection::FewRounds),
+            Self::FairSampling => Some(Objection::FairSampling),
+            Self::ZeroBound | Self::OutsideModel | Self::Unverified | Self::Uncommitted => None,
+        }
+    }
 }
 
 /// Where a bound's witness came from. It makes no difference to what the bound means.
@@ -55,8 +89,15 @@ pub enum Origin {
 pub struct FailureTotal {
     pub estimation: f64,
     pub hashing: f64,
+    /// That the leakage is larger than its budget says; left out where it is zero, as for a leakage that is stated.
+    #[serde(default, skip_serializing_if = "is_zero")]
+    pub leakage: f64,
     /// Sum of the above, rounded up.
     pub total: f64,
+}
+
+fn is_zero(value: &f64) -> bool {
+    *value == 0.0
 }
 
 /// The bound of one target setting.
@@ -189,6 +230,9 @@ pub struct Certificate {
     pub reason: Option<Reason>,
     #[cfg_attr(feature = "service", schema(value_type = crate::scenario::ScenarioDocument))]
     pub scenario: Scenario,
+    /// The budget that the leakage comes from, if it is not stated.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub leakage_budget: Option<BudgetAccount>,
     /// Counts as certified, after lost rounds were folded in if that was asked for.
     #[cfg_attr(feature = "service", schema(value_type = Option<Vec<Vec<Vec<u64>>>>))]
     pub counts: Option<Table<u64>>,
@@ -225,4 +269,31 @@ pub struct Certificate {
     pub warnings: Vec<String>,
     /// Software that made the figures.
     pub version: String,
+}
+
+impl Certificate {
+    /// Takes back whatever bits there were; the bounds stay. A refusal that stands already keeps its reason.
+    pub fn refuse(&mut self, objection: Objection) {
+        if self.verdict == Verdict::Refused {
+            return;
+        }
+        self.verdict = Verdict::Refused;
+        self.reason = Some(objection.into());
+        self.certified_bits = 0;
+        self.bits_per_round = 0.0;
+        self.targets.iter_mut().for_each(|target| target.certified_bits = 0);
+        if let Some(block) = &mut self.block {
+            block.certified_bits = 0;
+            block.net_bits_per_round = -block.setting_cost_per_round;
+        }
+    }
+
+    /// What there is to object to that the certificate shows by itself. Whether settings and outcomes are as they were declared or as they
+    /// were before, it does not.
+    pub fn objections(&self) -> Vec<Objection> {
+        let few = self.counts.iter().flatten().flatten().any(|outcomes| outcomes.iter().sum::<u64>() < LEAST_ROUNDS);
+        let left_out = self.lost_rounds.as_ref().is_some_and(|lost| lost.treatment == LostTreatment::FairSampling);
+        let found = [(Objection::FewRounds, few), (Objection::FairSampling, left_out)];
+        found.into_iter().filter(|(_, found)| *found).map(|(objection, _)| objection).collect()
+    }
 }

@@ -16,9 +16,10 @@ use crate::{
     },
     exact::{decimal, round_down},
     fault::Fault,
+    leakage::budget::Budget,
     relaxation::level::{Level, LevelChoice},
     request::{Data, EntropyChoice, Failure, LostRounds, LostTreatment, Request, RoundModel},
-    scenario::{LeakageReading, Setting},
+    scenario::{LeakageReading, Scenario, Setting},
     score::Score,
     solver::Limits,
     statistics::region::{frequencies, region},
@@ -317,11 +318,12 @@ impl Draft {
             None | Some(Evidence::Point(_) | Evidence::Scores(_)) => None,
             Some(Evidence::Region(table)) => Some(table.clone()),
         };
-        let failure = (request.rounds != RoundModel::PlugIn).then(|| FailureTotal::new(request.failure));
+        let failure = (request.rounds != RoundModel::PlugIn).then(|| FailureTotal::new(request.failure, &request.scenario));
         let certificate = Certificate {
             verdict: Verdict::Refused,
             reason: None,
             scenario: request.scenario.clone(),
+            leakage_budget: request.scenario.leakage_budget().map(Budget::account),
             counts: counts.map(|counts| counts.table().clone()),
             counts_digest: counts.map(|counts| counts.digest()),
             behaviour,
@@ -521,15 +523,20 @@ impl TargetCertificate {
 }
 
 impl FailureTotal {
-    pub(crate) fn new(failure: Failure) -> Self {
+    /// What is accepted, and what the scenario's leakage adds.
+    pub(crate) fn new(failure: Failure, scenario: &Scenario) -> Self {
         let Failure { estimation, hashing } = failure;
-        let sum = decimal(estimation) + decimal(hashing);
+        let leakage = scenario.leakage_budget().map_or(0.0, Budget::failure);
+        let sum = decimal(estimation) + decimal(hashing) + decimal(leakage);
         let mut total = (estimation + hashing).next_up();
+        if leakage > 0.0 {
+            total = (total + leakage).next_up();
+        }
         // The decimal that is printed for a double may lie below it.
         while decimal(total) < sum {
             total = total.next_up();
         }
-        Self { estimation, hashing, total }
+        Self { estimation, hashing, leakage, total }
     }
 }
 
@@ -573,6 +580,7 @@ fn assumptions(request: &Request) -> Vec<String> {
             "The commitment was recorded before the first round of the block was played.".to_owned(),
         ]),
     }
+    assumptions.extend(scenario.leakage_budget().map(Budget::sentences).unwrap_or_default());
     if request.lost_rounds.as_ref().is_some_and(|lost| lost.treatment == LostTreatment::FairSampling) {
         assumptions.push(
             "Fair sampling: whether a round is lost does not depend on the settings or on what its outcome would have been.".to_owned(),

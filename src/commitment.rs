@@ -82,6 +82,13 @@ impl TryFrom<CommitmentDocument> for Plan {
     }
 }
 
+impl Plan {
+    /// The level that the choice comes to.
+    pub(crate) fn level(&self) -> Level {
+        self.level
+    }
+}
+
 /// The witness that stands for one target.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 #[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
@@ -181,7 +188,7 @@ pub fn commit(plan: &Plan) -> Result<(Commitment, Vec<Witness>), CommitError> {
         scenario: plan.scenario.clone(),
         rounds: plan.rounds,
         setting_distribution: plan.distribution.clone(),
-        failure: FailureTotal::new(plan.failure),
+        failure: FailureTotal::new(plan.failure, &plan.scenario),
         expected_behaviour: plan.expected.table().clone(),
         power,
         targets: targets.collect(),
@@ -195,6 +202,12 @@ pub fn commit(plan: &Plan) -> Result<(Commitment, Vec<Witness>), CommitError> {
         version: concat!("bitassay ", env!("CARGO_PKG_VERSION")).to_owned(),
     };
     Ok((commitment, found.into_iter().map(|found| found.witness.witness().clone()).collect()))
+}
+
+/// Expected bits of a plan with given witnesses, at the best power up to theirs; zero if nothing is expected.
+pub(crate) fn expected_of(plan: &Plan, power: u32, witnesses: &[&CheckedWitness]) -> f64 {
+    let powers = (0..CURVE_POINTS).map(|half_steps| power_near(largest_power(plan) * 0.5f64.powf(f64::from(half_steps) / 2.0)).min(power));
+    powers.filter_map(|power| expectation(plan, power, witnesses).ok()).map(|(bits, _)| bits).fold(0.0, f64::max)
 }
 
 /// Expected bits at a power, and the factors they come from; one witness for each target.
@@ -390,7 +403,7 @@ impl Commitment {
             return Err(CommitmentFault::Power);
         }
         let FailureTotal { estimation, hashing, .. } = self.failure;
-        if self.failure != FailureTotal::new(Failure { estimation, hashing }) {
+        if self.failure != FailureTotal::new(Failure { estimation, hashing }, &self.scenario) {
             return Err(Fault::new("/failure/total", "it is not the sum of the failure probabilities, rounded up").into());
         }
         if checked.len() != self.scenario.targets().len() || self.targets.len() != checked.len() {

@@ -125,7 +125,7 @@ pub struct Committed {
     pub rig: RigName,
     /// Version of the rig's profile that it was made under; it stands for batches under that version only.
     pub profile_version: u64,
-    /// Batches that began earlier are refused.
+    /// A batch is certified under the newest commitment that had been recorded when it began, and refused if there was none.
     pub recorded_at: Stamp,
     /// The level that was asked for.
     pub level: LevelChoice,

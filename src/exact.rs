@@ -50,8 +50,9 @@ fn as_dyadic(value: &BigRational) -> Option<(i128, u32)> {
 
 /// As [`round_up`], of `numerator / 2^bits`, in a few steps.
 fn round_up_dyadic(numerator: i128, bits: u32) -> f64 {
-    if numerator == 0 {
-        return 0.0;
+    // At most twelve decimal digits: the number and its decimal are the value.
+    if bits <= 8 && numerator.unsigned_abs() < 1 << 20 {
+        return numerator as f64 * 2f64.powi(-(bits as i32));
     }
     // The cast rounds to nearest and the scaling is exact, so the value is at most half a unit above the product. The shortest decimal of
     // the number one unit up is at most half a unit below that number.

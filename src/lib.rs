@@ -61,6 +61,7 @@ pub mod clock;
 pub mod commitment;
 #[cfg(feature = "service")]
 pub mod committed;
+pub mod comparison;
 pub mod counts;
 pub mod entropy;
 pub mod exact;

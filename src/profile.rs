@@ -11,6 +11,7 @@ use crate::{
     relaxation::level::LevelChoice,
     request::{EntropyChoice, Failure, RoundModel, Starts},
     scenario::{Scenario, ScenarioDocument},
+    statistics::quality::Objection,
 };
 
 /// The name of a rig: `[a-z0-9][a-z0-9-]{0,62}`, so that it fits into paths, file names and host names as it is.
@@ -73,6 +74,10 @@ pub struct ProfileDocument {
     /// Probability `π(x,y)` with which the rig chooses each setting, `[x][y]`; adds up to 1.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub setting_distribution: Option<Vec<Vec<f64>>>,
+    /// Concerns about a batch's data for which it is refused, most serious first: the first that applies is the reason. A batch is compared with
+    /// the rig's newest certified one; to accept a rig that has changed, take `outcome-drift` out for one batch.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub refuse_on: Vec<Objection>,
     /// What the outcomes are called at the rig, one label each, all different.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub outcome_labels: Option<Vec<String>>,
@@ -92,6 +97,7 @@ pub struct Profile {
     entropy: EntropyChoice,
     freshness: Freshness,
     setting_distribution: Option<Vec<Vec<f64>>>,
+    refuse_on: Vec<Objection>,
     outcome_labels: Option<Vec<String>>,
     notes: Option<String>,
     /// Follows from scenario and level.
@@ -102,8 +108,18 @@ impl TryFrom<ProfileDocument> for Profile {
     type Error = Fault;
 
     fn try_from(document: ProfileDocument) -> Result<Self, Fault> {
-        let ProfileDocument { scenario, rounds, failure, level, entropy, freshness, setting_distribution, outcome_labels, notes } =
-            document;
+        let ProfileDocument {
+            scenario,
+            rounds,
+            failure,
+            level,
+            entropy,
+            freshness,
+            setting_distribution,
+            refuse_on,
+            outcome_labels,
+            notes,
+        } = document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
         freshness.check().map_err(|fault| fault.under("/freshness"))?;
@@ -113,14 +129,30 @@ impl TryFrom<ProfileDocument> for Profile {
             check_distribution(distribution, scenario.geometry(), NORMALISATION_SLACK)
                 .map_err(|fault| fault.under("/setting_distribution"))?;
         }
+        // A commitment has a distribution of its own.
+        let comparable = setting_distribution.is_some() || rounds == RoundModel::Memory;
+        check_objections(&refuse_on, comparable).map_err(|fault| fault.under("/refuse_on"))?;
         if let Some(labels) = &outcome_labels {
             check_labels(labels, scenario.geometry().outcomes).map_err(|fault| fault.under("/outcome_labels"))?;
         }
         if notes.as_ref().is_some_and(|notes| notes.len() > MAX_NOTES) {
             return Err(Fault::new("/notes", format!("notes have at most {MAX_NOTES} bytes")));
         }
-        Ok(Self { scenario, rounds, failure, level, entropy, freshness, setting_distribution, outcome_labels, notes, starts })
+        Ok(Self { scenario, rounds, failure, level, entropy, freshness, setting_distribution, refuse_on, outcome_labels, notes, starts })
     }
+}
+
+/// Each objection once, and none that could never be raised.
+fn check_objections(objections: &[Objection], distribution_is_known: bool) -> Result<(), Fault> {
+    for (i, objection) in objections.iter().enumerate() {
+        if objections[..i].contains(objection) {
+            return Err(Fault::new(format!("/{i}"), "this concern is listed twice"));
+        }
+        if *objection == Objection::SettingImbalance && !distribution_is_known {
+            return Err(Fault::new(format!("/{i}"), "needs a setting_distribution that the settings can be compared with"));
+        }
+    }
+    Ok(())
 }
 
 fn check_labels(labels: &[String], outcomes: usize) -> Result<(), Fault> {
@@ -140,8 +172,20 @@ fn check_labels(labels: &[String], outcomes: usize) -> Result<(), Fault> {
 
 impl From<Profile> for ProfileDocument {
     fn from(profile: Profile) -> Self {
-        let Profile { scenario, rounds, failure, level, entropy, freshness, setting_distribution, outcome_labels, notes, .. } = profile;
-        Self { scenario: scenario.into(), rounds, failure, level, entropy, freshness, setting_distribution, outcome_labels, notes }
+        let Profile { scenario, rounds, failure, level, entropy, freshness, setting_distribution, refuse_on, outcome_labels, notes, .. } =
+            profile;
+        Self {
+            scenario: scenario.into(),
+            rounds,
+            failure,
+            level,
+            entropy,
+            freshness,
+            setting_distribution,
+            refuse_on,
+            outcome_labels,
+            notes,
+        }
     }
 }
 
@@ -161,6 +205,11 @@ impl Profile {
     /// Declared setting distribution `π(x,y)`, `[x][y]`.
     pub fn setting_distribution(&self) -> Option<&[Vec<f64>]> {
         self.setting_distribution.as_deref()
+    }
+
+    /// Concerns for which a batch is refused.
+    pub fn refuse_on(&self) -> &[Objection] {
+        &self.refuse_on
     }
 
     pub fn entropy(&self) -> EntropyChoice {

@@ -8,7 +8,7 @@ use crate::{
     certificate::{Certificate, FailureTotal, Reason, Verdict},
     clock::Stamp,
     profile::RigName,
-    statistics::quality::Finding,
+    statistics::quality::{Finding, Objection},
 };
 
 /// How long a certification took, in seconds.
@@ -42,8 +42,11 @@ pub struct Record {
     #[serde(flatten)]
     pub certificate: Certificate,
     /// What the reader should know about the data: settings that are not drawn as declared, outcomes that drifted since the rig's newest
-    /// certified batch, settings with few rounds. No certified figure depends on it.
+    /// certified batch, settings with few rounds. No bound depends on it; whether bits are released may, see `refuse_on`.
     pub concerns: Vec<Concern>,
+    /// Concerns for which the rig's profile has a batch refused.
+    #[serde(skip_serializing_if = "Vec::is_empty")]
+    pub refuse_on: Vec<Objection>,
     pub timings: Timings,
 }
 

@@ -3,8 +3,9 @@
 use serde::Serialize;
 
 use crate::{
-    certificate::{Certificate, Reason, Verdict},
+    certificate::{Reason, Verdict},
     record::Record,
+    statistics::quality::Objection,
 };
 
 /// Type of the problem document of a refused batch.
@@ -39,7 +40,7 @@ impl Refusal {
             kind: REFUSED,
             title: "The batch is refused: no bits may be extracted from it",
             status: 422,
-            detail: explanation(&record.certificate),
+            detail: explanation(record),
             reason: record.certificate.reason,
             certification: record.path(),
             smallest_uniform_leakage: record.certificate.outside_model.as_ref().and_then(|outside| outside.smallest_uniform_leakage),
@@ -47,8 +48,10 @@ impl Refusal {
     }
 }
 
-fn explanation(certificate: &Certificate) -> String {
+fn explanation(record: &Record) -> String {
+    let certificate = &record.certificate;
     match certificate.reason {
+        Some(Reason::SettingImbalance | Reason::OutcomeDrift | Reason::FewRounds | Reason::FairSampling) => objections(record),
         Some(Reason::ZeroBound) => {
             let block = certificate.block.as_ref().map(|block| block.min_entropy);
             let min_entropy = block.unwrap_or_else(|| certificate.targets.iter().filter_map(|target| target.min_entropy).sum());
@@ -77,10 +80,21 @@ fn explanation(certificate: &Certificate) -> String {
             format!("The counts cannot come from a carrier of dimension {dimension} with the declared leakage.{explains}")
         }
         Some(Reason::Uncommitted) => {
-            "The batch began before its commitment was recorded: what is fixed after the fact proves nothing.".into()
+            "The batch began before any commitment under the rig's profile was recorded: what is fixed after the fact proves nothing."
+                .into()
         }
         Some(Reason::Unverified) | None => {
             "No bound passed the exact check, so nothing is known about the batch. This says nothing against the rig.".into()
         }
     }
+}
+
+/// Everything that the rig's profile objects to, in words.
+fn objections(record: &Record) -> String {
+    let objected = record.concerns.iter().filter(|concern| record.refuse_on.contains(&concern.finding.objection()));
+    let mut details: Vec<&str> = objected.map(|concern| concern.detail.as_str()).collect();
+    if record.refuse_on.contains(&Objection::FairSampling) {
+        details.extend(record.certificate.warnings.iter().map(|warning| warning.trim_end_matches('.')));
+    }
+    format!("The rig's profile refuses such data, whatever the bound says: {}.", details.join("; "))
 }

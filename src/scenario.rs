@@ -2,7 +2,10 @@
 
 use serde::{Deserialize, Deserializer, Serialize, Serializer, de};
 
-use crate::fault::Fault;
+use crate::{
+    fault::Fault,
+    leakage::budget::{Budget, BudgetDocument},
+};
 
 /// Most preparations, measurements and outcomes a scenario may have.
 pub const MAX_PREPARATIONS: usize = 32;
@@ -43,11 +46,18 @@ pub enum LeakageReading {
     EveryEmission,
 }
 
-/// The leakage of a document: one number for all preparations, or one per preparation.
+/// Largest failure probability of a budget that a leakage may come from: as for any other failure probability that a poster accepts.
+const MAX_BUDGET_FAILURE: f64 = 0.5;
+
+/// The leakage of a document: one number for all preparations, one per preparation, or the budget that it comes from.
 #[derive(Debug, Clone, PartialEq)]
 pub enum LeakageDocument {
     Uniform(f64),
     PerPreparation(Vec<f64>),
+    /// A budget, whose figure holds for every preparation.
+    Budget(Box<BudgetDocument>),
+    /// `sha256:` digest of a budget that a service keeps, which puts the budget in its place.
+    Stored(String),
 }
 
 impl Serialize for LeakageDocument {
@@ -55,6 +65,8 @@ impl Serialize for LeakageDocument {
         match self {
             Self::Uniform(value) => value.serialize(serializer),
             Self::PerPreparation(values) => values.serialize(serializer),
+            Self::Budget(budget) => budget.serialize(serializer),
+            Self::Stored(digest) => digest.serialize(serializer),
         }
     }
 }
@@ -65,7 +77,7 @@ impl<'de> Deserialize<'de> for LeakageDocument {
         impl<'de> de::Visitor<'de> for Visitor {
             type Value = LeakageDocument;
             fn expecting(&self, formatter: &mut std::fmt::Formatter) -> std::fmt::Result {
-                formatter.write_str("a number, or one number per preparation")
+                formatter.write_str("a number, one number per preparation, a leakage budget, or the digest of a stored one")
             }
             fn visit_f64<E: de::Error>(self, value: f64) -> Result<Self::Value, E> {
                 Ok(LeakageDocument::Uniform(value))
@@ -82,6 +94,17 @@ impl<'de> Deserialize<'de> for LeakageDocument {
                     values.push(value);
                 }
                 Ok(LeakageDocument::PerPreparation(values))
+            }
+            fn visit_map<A: de::MapAccess<'de>>(self, members: A) -> Result<Self::Value, A::Error> {
+                let budget = BudgetDocument::deserialize(de::value::MapAccessDeserializer::new(members))?;
+                Ok(LeakageDocument::Budget(Box::new(budget)))
+            }
+            fn visit_str<E: de::Error>(self, text: &str) -> Result<Self::Value, E> {
+                let hexadecimal = |rest: &str| rest.len() == 64 && rest.bytes().all(|byte| matches!(byte, b'0'..=b'9' | b'a'..=b'f'));
+                if text.strip_prefix("sha256:").is_some_and(hexadecimal) {
+                    return Ok(LeakageDocument::Stored(text.to_owned()));
+                }
+                Err(E::custom("a stored budget is named by its digest: sha256: and 64 hexadecimal digits in lower case"))
             }
         }
         deserializer.deserialize_any(Visitor)
@@ -144,6 +167,8 @@ impl Geometry {
 pub struct Scenario {
     geometry: Geometry,
     leakage: Vec<f64>,
+    /// What the leakage comes from, if it is not stated.
+    budget: Option<Box<Budget>>,
     leakage_holds: LeakageReading,
     targets: Vec<Setting>,
 }
@@ -155,7 +180,7 @@ impl TryFrom<ScenarioDocument> for Scenario {
         let ScenarioDocument { preparations, measurements, outcomes, carrier_dimension, leakage, leakage_holds, targets } = document;
         let geometry = Geometry { preparations, measurements, outcomes, carrier_dimension };
         geometry.check()?;
-        let leakage = validated_leakage(leakage, preparations)?;
+        let (leakage, budget) = validated_leakage(leakage, geometry, leakage_holds)?;
         if targets.is_empty() {
             return Err(Fault::new("/targets", "at least one target setting is needed"));
         }
@@ -172,11 +197,17 @@ impl TryFrom<ScenarioDocument> for Scenario {
                 return Err(Fault::new(format!("/targets/{i}"), "this target setting is listed twice"));
             }
         }
-        Ok(Self { geometry, leakage, leakage_holds, targets })
+        Ok(Self { geometry, leakage, budget, leakage_holds, targets })
     }
 }
 
-fn validated_leakage(document: LeakageDocument, preparations: usize) -> Result<Vec<f64>, Fault> {
+/// The tolerance of each preparation, and the budget that it comes from.
+fn validated_leakage(
+    document: LeakageDocument,
+    geometry: Geometry,
+    leakage_holds: LeakageReading,
+) -> Result<(Vec<f64>, Option<Box<Budget>>), Fault> {
+    let preparations = geometry.preparations;
     let in_range = |value: f64, pointer: String| {
         if (0.0..=1.0).contains(&value) {
             // Adding positive zero turns -0.0 into 0.0, so that "exactly zero" has one representation.
@@ -185,7 +216,7 @@ fn validated_leakage(document: LeakageDocument, preparations: usize) -> Result<V
             Err(Fault::new(pointer, format!("a leakage is a weight from 0 to 1, is {value}")))
         }
     };
-    match document {
+    let stated = match document {
         LeakageDocument::Uniform(value) => Ok(vec![in_range(value, "/leakage".into())?; preparations]),
         LeakageDocument::PerPreparation(values) => {
             if values.len() != preparations {
@@ -194,7 +225,34 @@ fn validated_leakage(document: LeakageDocument, preparations: usize) -> Result<V
             }
             values.into_iter().enumerate().map(|(x, value)| in_range(value, format!("/leakage/{x}"))).collect()
         }
+        LeakageDocument::Budget(budget) => {
+            let budget = fitting_budget(*budget, geometry, leakage_holds)?;
+            return Ok((vec![budget.leakage(); preparations], Some(Box::new(budget))));
+        }
+        LeakageDocument::Stored(digest) => {
+            let detail = format!("{digest} stands for a budget that is not at hand: give the budget itself in its place");
+            Err(Fault::new("/leakage", detail))
+        }
+    };
+    Ok((stated?, None))
+}
+
+/// A budget for this carrier and this reading.
+fn fitting_budget(document: BudgetDocument, geometry: Geometry, leakage_holds: LeakageReading) -> Result<Budget, Fault> {
+    let budget = Budget::try_from(document).map_err(|fault| fault.under("/leakage"))?;
+    let dimension = budget.document().carrier_dimension;
+    if dimension != geometry.carrier_dimension {
+        let detail = format!("the budget is for a carrier of dimension {dimension}, the scenario has {}", geometry.carrier_dimension);
+        return Err(Fault::new("/leakage", detail));
     }
+    if leakage_holds == LeakageReading::EveryEmission && budget.holds() != leakage_holds {
+        return Err(Fault::new("/leakage_holds", budget.reading()));
+    }
+    if budget.failure() > MAX_BUDGET_FAILURE {
+        let detail = format!("the budget fails with a probability of {}; at most {MAX_BUDGET_FAILURE} is of any use", budget.failure());
+        return Err(Fault::new("/leakage", detail));
+    }
+    Ok(budget)
 }
 
 impl From<Scenario> for ScenarioDocument {
@@ -206,10 +264,10 @@ impl From<Scenario> for ScenarioDocument {
             measurements,
             outcomes,
             carrier_dimension,
-            leakage: if uniform {
-                LeakageDocument::Uniform(scenario.leakage[0])
-            } else {
-                LeakageDocument::PerPreparation(scenario.leakage)
+            leakage: match scenario.budget {
+                Some(budget) => LeakageDocument::Budget(Box::new(budget.document().clone())),
+                None if uniform => LeakageDocument::Uniform(scenario.leakage[0]),
+                None => LeakageDocument::PerPreparation(scenario.leakage),
             },
             leakage_holds: scenario.leakage_holds,
             targets: scenario.targets,
@@ -227,6 +285,11 @@ impl Scenario {
         &self.leakage
     }
 
+    /// The budget that the leakage comes from, if it is not stated.
+    pub fn leakage_budget(&self) -> Option<&Budget> {
+        self.budget.as_deref()
+    }
+
     pub fn leakage_holds(&self) -> LeakageReading {
         self.leakage_holds
     }
@@ -239,9 +302,13 @@ impl Scenario {
     /// The same scenario with another leakage.
     ///
     /// # Errors
-    /// A leakage outside `[0, 1]` or one whose number does not match the preparations.
+    /// A leakage outside `[0, 1]`, one whose number does not match the preparations, or a budget that is for something else. Pointers are
+    /// into a document with the member `leakage`.
     pub fn with_leakage(self, leakage: LeakageDocument) -> Result<Self, Fault> {
-        let leakage = validated_leakage(leakage, self.geometry.preparations)?;
-        Ok(Self { leakage, ..self })
+        let (leakage, budget) = validated_leakage(leakage, self.geometry, self.leakage_holds).map_err(|fault| {
+            // The reading is not the new leakage's to state.
+            if fault.pointer == "/leakage_holds" { Fault::new("/leakage", fault.detail) } else { fault }
+        })?;
+        Ok(Self { leakage, budget, ..self })
     }
 }

@@ -1,6 +1,7 @@
 //! The service: takes batches in, has them solved, keeps what came out. Knows no HTTP.
 
 mod access;
+mod budgets;
 mod commitments;
 mod forecasts;
 mod kept;
@@ -23,6 +24,7 @@ use uuid::{NoContext, Uuid};
 
 pub use self::{
     access::{AccessError, Caller, Scope},
+    budgets::ProfileError,
     commitments::{Listed, OrderError},
     forecasts::ForecastError,
     solvers::{Certifier, SolveError, Solvers},
@@ -229,11 +231,15 @@ impl Service {
     }
 
     async fn read(&self, profile: &ProfileVersion, posted: Posted) -> Result<(Option<Committed>, Batch), SubmitError> {
+        let mut legible = posted.read(profile.profile.scenario().geometry())?;
+        if let Some(leakage) = legible.leakage() {
+            self.fetch_budget(leakage).await?.map_err(BatchFault::Impossible)?;
+        }
         let committed = match profile.profile.rounds() {
-            RoundModel::Memory => Some(self.standing(profile).await?.ok_or(SubmitError::Uncommitted)?),
+            RoundModel::Memory => Some(self.commitment_for(profile, legible.started_at()).await?.ok_or(SubmitError::Uncommitted)?),
             RoundModel::PlugIn | RoundModel::Independent => None,
         };
-        let batch = posted.read(&profile.profile, committed.as_ref())?;
+        let batch = legible.under(&profile.profile, committed.as_ref())?;
         Ok((committed, batch))
     }
 
@@ -254,11 +260,15 @@ impl Service {
         certified: Certified,
         submission: Submission,
     ) -> Result<Settled, SubmitError> {
-        let Certified { certificate, witnesses, kept, timings } = certified;
+        let Certified { mut certificate, witnesses, kept, timings } = certified;
         let declared = profile.profile.setting_distribution();
         let distribution = committed.as_ref().map(|committed| &committed.commitment.setting_distribution[..]).or(declared);
         let previous = quality::previous(&self.ledger, &self.newest, &profile.rig).await?;
         let concerns = quality::concerns(previous.as_deref(), distribution, &certificate);
+        let refuse_on = profile.profile.refuse_on().to_vec();
+        if let Some(objection) = quality::objection(&refuse_on, &concerns, &certificate) {
+            certificate.refuse(objection);
+        }
         let recorded_at = self.clock.now();
         let record = Record {
             id: new_id(recorded_at),
@@ -271,6 +281,7 @@ impl Service {
             commitment: committed.map(|committed| committed.id),
             certificate,
             concerns,
+            refuse_on,
             timings,
         };
         let entry = Entry::new(&record, &witnesses, &kept, submission)?;

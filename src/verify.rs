@@ -50,7 +50,11 @@ pub fn verify(certificate: &Certificate, commitment: Option<&Commitment>, witnes
         RoundModel::Memory => recompute_block(certificate, commitment, witnesses),
         RoundModel::PlugIn | RoundModel::Independent => recompute(certificate, &by_digest),
     };
-    let recomputed = recomputed.map_err(|discrepancy| vec![discrepancy])?;
+    let mut recomputed = recomputed.map_err(|discrepancy| vec![discrepancy])?;
+    // A refusal takes nothing that was not there: it is believed, with the bounds that it shows.
+    if let Some(objection) = certificate.reason.and_then(Reason::objection) {
+        recomputed.refuse(objection);
+    }
     let mut differences = Vec::new();
     let (recorded, recomputed) = (serde_json::to_value(certificate), serde_json::to_value(&recomputed));
     compare(&recorded.unwrap_or_default(), &recomputed.unwrap_or_default(), String::new(), &mut differences);

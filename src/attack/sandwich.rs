@@ -182,6 +182,10 @@ pub fn outcome(case: &Case, effort: Effort) -> Outcome {
     }
     for pair in outcome.bounds.windows(2) {
         let [coarser, sharper] = pair else { continue };
+        // No level contains `sparse`.
+        if coarser.level == Level::Sparse {
+            continue;
+        }
         let excess = sharper.bound - coarser.bound;
         if excess > sharper.rounding_cost + SOLVER {
             outcome.violations.push(format!("{name}: {:?} is above {:?} by {excess:.1e}", sharper.level, coarser.level));

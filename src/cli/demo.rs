@@ -43,8 +43,8 @@ const DAYS: [Day; 4] = [
 /// Drive a real server as a rig would and show what was certified, what was refused, and why
 ///
 /// Starts the service on a free loopback port with a database file, declares a simulated rig, posts four batches of counts over HTTP (a
-/// good day, a noisier one, a source that leaks more than declared, a bound at zero), then reads back the history and the yield. The
-/// rig and its figures are invented.
+/// good day, a noisier one, a source that leaks more than declared, a bound at zero) and a fifth one under a commitment made before it, with no
+/// assumption that rounds are independent; then reads back the history and the yield. The rig and its figures are invented.
 #[derive(Args)]
 pub struct Demo {
     /// The database; must not exist yet. By default a new file in the directory for temporary files
@@ -116,8 +116,34 @@ impl Visit {
         for (number, day) in DAYS.iter().enumerate() {
             self.post(number, day)?;
         }
+        self.with_memory()?;
         self.history()?;
         self.rig_yield()
+    }
+
+    /// The first day once more, without the assumption that rounds are independent: what certifies is committed to before it begins.
+    fn with_memory(&self) -> anyhow::Result<()> {
+        let mut profile = self.get(&format!("/v1/rigs/{RIG}"))?;
+        profile["rounds"] = json!("memory");
+        let answer = self.agent.put(format!("{}/v1/rigs/{RIG}", self.base)).header("if-match", "\"1\"").send_json(profile)?;
+        ensure!(answer.status() == 200, "the profile was not changed: {}", answer.status());
+        let first = self.get(&format!("/v1/certifications?rig={RIG}&verdict=certified"))?;
+        let first = first["items"].as_array().and_then(|items| items.last()).context("no day was certified")?;
+        let order =
+            json!({ "certification": first["id"], "setting_distribution": vec![vec![0.125; 2]; 4], "rounds": 8 * ROUNDS_PER_SETTING });
+        writeln!(
+            std::io::stdout(),
+            "\nNow without assuming that rounds are independent; what certifies is committed to ahead of the data …"
+        )?;
+        let mut answer = self.agent.post(format!("{}/v1/rigs/{RIG}/commitments", self.base)).send_json(order)?;
+        ensure!(answer.status() == 201, "nothing was committed: {}", answer.status());
+        let committed: Value = answer.body_mut().read_json()?;
+        let expected = committed["commitment"]["expected_bits"].as_f64().unwrap_or(0.0);
+        writeln!(std::io::stdout(), "commitment {}: {expected} bits expected of a batch\n", committed["id"].as_str().unwrap_or("?"))?;
+        // The simulated day takes no time at all; it begins when the commitment is on record.
+        let begun = committed["recorded_at"].clone();
+        let batch = json!({ "counts": counts(&DAYS[0], DAYS.len() as u64)?, "started_at": begun, "ended_at": begun });
+        self.send("clear, again", "as the first day; the same assumptions but one", &batch)
     }
 
     fn get(&self, path: &str) -> anyhow::Result<Value> {
@@ -154,10 +180,15 @@ impl Visit {
             "started_at": format!("2026-05-{:02}T06:00:00Z", number + 1),
             "ended_at": format!("2026-05-{:02}T18:00:00Z", number + 1),
         });
-        write!(std::io::stdout(), "{:<14} ", day.name)?;
+        self.send(day.name, day.story, &batch)
+    }
+
+    /// Posts a batch and prints its row.
+    fn send(&self, name: &str, story: &str, batch: &Value) -> anyhow::Result<()> {
+        write!(std::io::stdout(), "{name:<14} ")?;
         // The row is finished when the answer is in.
         std::io::stdout().flush()?;
-        let request = self.agent.post(format!("{}/v1/rigs/{RIG}/batches", self.base)).header("idempotency-key", day.name);
+        let request = self.agent.post(format!("{}/v1/rigs/{RIG}/batches", self.base)).header("idempotency-key", name.replace(", ", "-"));
         let mut answer = request.send_json(batch)?;
         let status = answer.status();
         let body: Value = answer.body_mut().read_json()?;
@@ -173,7 +204,7 @@ impl Visit {
         };
         let per_round = record["bits_per_round"].as_f64().unwrap_or(0.0);
         let (verdict, bits) = (record["verdict"].as_str().unwrap_or("?"), record["certified_bits"].as_u64().unwrap_or(0));
-        writeln!(std::io::stdout(), "{:>6} {verdict:>10} {bits:>12} {per_round:>10.6}   {}{why}", status.as_u16(), day.story)?;
+        writeln!(std::io::stdout(), "{:>6} {verdict:>10} {bits:>12} {per_round:>10.6}   {story}{why}", status.as_u16())?;
         Ok(())
     }
 
@@ -184,11 +215,15 @@ impl Visit {
             let bound = record["targets"][0]["guessing_probability_bound"].as_f64();
             writeln!(
                 std::io::stdout(),
-                "  {}  {:<10} {:<14} guessing probability {}",
+                "  {}  {:<10} {:<14} {}",
                 record["id"].as_str().unwrap_or("?"),
                 record["verdict"].as_str().unwrap_or("?"),
                 record["reason"].as_str().unwrap_or("-"),
-                bound.map_or_else(|| "not bounded".to_owned(), |bound| format!("at most {bound:.7}")),
+                match (bound, record["block"]["min_entropy"].as_f64()) {
+                    (Some(bound), _) => format!("guessing probability at most {bound:.7}"),
+                    (None, Some(bits)) => format!("min-entropy of the block at least {bits:.0} bits"),
+                    (None, None) => "guessing probability not bounded".to_owned(),
+                },
             )?;
         }
         Ok(())

@@ -3,6 +3,7 @@
 mod attack;
 mod backup;
 mod certify;
+mod compare;
 mod demo;
 mod document;
 mod export;
@@ -39,6 +40,7 @@ enum Command {
     Verify(verify::Verify),
     Attack(attack::Attack),
     Leakage(leakage::Leakage),
+    Compare(compare::Compare),
     Forecast(forecast::Forecast),
     Export(export::Export),
     Backup(backup::Backup),
@@ -56,6 +58,7 @@ pub fn run() -> ExitCode {
         Command::Verify(command) => command.run(),
         Command::Attack(command) => command.run(),
         Command::Leakage(command) => command.run(),
+        Command::Compare(command) => command.run(),
         Command::Forecast(command) => command.run(),
         Command::Export(command) => command.run(),
         Command::Backup(command) => command.run(),

@@ -294,7 +294,7 @@ impl Point {
     pub fn value(&self, quantity: Swept) -> Option<f64> {
         match (quantity, &self.leakage) {
             (Swept::Leakage, LeakageDocument::Uniform(value)) => Some(*value),
-            (Swept::Leakage, LeakageDocument::PerPreparation(_)) => None,
+            (Swept::Leakage, LeakageDocument::PerPreparation(_) | LeakageDocument::Budget(_) | LeakageDocument::Stored(_)) => None,
             (Swept::Visibility, _) => Some(self.visibility),
             (Swept::Rounds, _) => self.total_rounds.map(|rounds| rounds as f64),
         }

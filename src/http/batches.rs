@@ -35,10 +35,10 @@ const BATCH_LIMIT: usize = LONGEST;
 #[into_params(parameter_in = Query)]
 pub struct BatchQuery {
     /// CSV only, and needed there: when the first round was played, RFC 3339.
-    #[param(value_type = Option<String>)]
+    #[param(value_type = Option<String>, format = DateTime)]
     started_at: Option<Stamp>,
     /// CSV only, and needed there: when the last round was played, RFC 3339.
-    #[param(value_type = Option<String>)]
+    #[param(value_type = Option<String>, format = DateTime)]
     ended_at: Option<Stamp>,
     /// CSV only: leakage measured for this batch, written as in JSON.
     #[param(value_type = Option<String>)]

@@ -15,7 +15,7 @@ use super::{
     access::Sees,
     negotiation::{Offer, TakesJson, TakesTable},
     problem::{Problem, ProblemDocument},
-    wire::{CertificationPath, FromParameters, Parameters, Query, cursor, json, link_next, no_certification, page},
+    wire::{CertificationPath, FromParameters, Parameters, Query, by_digest, cursor, json, link_next, no_certification, page},
 };
 use crate::{
     bundle::Standing,
@@ -126,8 +126,7 @@ pub async fn bundle(
 /// The documents are texts that were kept as they are, so that their digests still hold.
 fn members(Evidence { commitment, witnesses }: Evidence) -> String {
     let commitment = commitment.map_or_else(String::new, |document| format!("\"commitment\":{document},"));
-    let members: Vec<String> = witnesses.into_iter().map(|(digest, document)| format!("\"{digest}\":{document}")).collect();
-    format!("{commitment}\"witnesses\":{{{}}}", members.join(","))
+    format!("{commitment}\"witnesses\":{}", by_digest(witnesses))
 }
 
 #[derive(IntoParams)]
@@ -140,10 +139,10 @@ pub struct HistoryQuery {
     #[param(value_type = Option<Verdict>)]
     verdict: Option<Verdict>,
     /// Only those recorded at this time or later, RFC 3339.
-    #[param(value_type = Option<String>)]
+    #[param(value_type = Option<String>, format = DateTime)]
     since: Option<Stamp>,
     /// Only those recorded before this time, RFC 3339.
-    #[param(value_type = Option<String>)]
+    #[param(value_type = Option<String>, format = DateTime)]
     until: Option<Stamp>,
     /// Where the page begins: the `next` of the page before.
     #[param(value_type = Option<String>)]

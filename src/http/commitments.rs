@@ -15,14 +15,18 @@ use uuid::Uuid;
 use super::{
     negotiation::TakesJson,
     problem::{Problem, ProblemDocument},
-    wire::{CommitmentPath, FromParameters, Parameters, Payload, Query, RigPath, cursor, json, link_next, no_commitment, no_rig, page},
+    wire::{
+        CommitmentPath, FromParameters, Parameters, Payload, Query, RigPath, by_digest, cursor, json, link_next, no_commitment, no_rig,
+        page,
+    },
 };
 use crate::{
     clock::Stamp,
     commitment::Commitment,
     committed::{CommitmentOrder, Committed},
     relaxation::level::LevelChoice,
-    service::{Listed, Service},
+    service::{Evidence, Listed, Service},
+    witness::witness::Witness,
 };
 
 const ORDER_LIMIT: usize = 256 * 1024;
@@ -36,14 +40,14 @@ struct Head<'a> {
     rig: &'a str,
     /// Version of the rig's profile that it was made under; it stands for batches under that version only.
     profile_version: u64,
-    /// Batches that began earlier are refused.
+    /// A batch is certified under the newest commitment that had been recorded when it began, and refused if there was none.
     #[schema(value_type = String, format = DateTime)]
     recorded_at: Stamp,
     /// The level that was asked for.
     level: LevelChoice,
     /// `sha256:` digest of the commitment's canonical text, which is the one that is answered.
     digest: &'a str,
-    /// In lists only: whether batches are certified under it now.
+    /// In lists only: whether batches that begin now are certified under it.
     #[serde(skip_serializing_if = "Option::is_none")]
     current: Option<bool>,
 }
@@ -78,7 +82,8 @@ fn text(committed: &Committed, current: Option<bool>) -> Result<String, Problem>
 /// Fixes ahead of the data what batches of rounds with memory are certified by.
 ///
 /// Witnesses, a power and factors are worked out once, for the behaviour that is expected; batches that begin afterwards are
-/// certified by them without a solve. A newer commitment stands in place of the older ones, which stay as they are.
+/// certified by them without a solve. A batch is certified under the newest commitment that had been recorded when it began; older ones stay as
+/// they are.
 #[utoipa::path(
     post, path = "/v1/rigs/{rig}/commitments", tag = "commitments", operation_id = "post_commitment",
     security(("token" = ["operator"])),
@@ -125,6 +130,38 @@ pub async fn get(
     Ok(json(StatusCode::OK, text(&committed, None)?))
 }
 
+/// What a commitment rests on.
+#[derive(Serialize, ToSchema)]
+pub struct CommitmentWitnesses {
+    /// Identifier of the commitment.
+    id: Uuid,
+    commitment: Commitment,
+    /// Each witness under its `sha256:` digest; exact integers, enough to derive the factors offline.
+    #[schema(value_type = std::collections::BTreeMap<String, Object>)]
+    witnesses: std::collections::BTreeMap<String, Witness>,
+}
+
+/// A commitment and its witnesses, enough to check it offline, before there is any data.
+#[utoipa::path(
+    get, path = "/v1/commitments/{id}/witness", tag = "commitments", operation_id = "get_commitment_witness",
+    security(("token" = ["operator"]), ("token" = ["auditor"])),
+    params(("id" = String, Path, description = "Identifier of the commitment.")),
+    responses(
+        (status = 200, description = "The commitment, and its witnesses by digest.", body = CommitmentWitnesses),
+        (status = 404, description = "No such commitment.", body = ProblemDocument, content_type = "application/problem+json"),
+    )
+)]
+pub async fn witness(
+    CommitmentPath(id): CommitmentPath,
+    Query(()): Query<()>,
+    TakesJson: TakesJson,
+    State(service): State<Arc<Service>>,
+) -> Result<Response<Body>, Problem> {
+    let Evidence { commitment, witnesses } = service.evidence_of_commitment(id).await?.ok_or_else(no_commitment)?;
+    let commitment = commitment.unwrap_or_else(|| "null".into());
+    Ok(json(StatusCode::OK, format!("{{\"id\":\"{id}\",\"commitment\":{commitment},\"witnesses\":{}}}", by_digest(witnesses))))
+}
+
 #[derive(IntoParams)]
 #[into_params(parameter_in = Query)]
 pub struct CommitmentsQuery {
@@ -142,7 +179,7 @@ impl FromParameters for CommitmentsQuery {
     }
 }
 
-/// A rig's commitments, newest first; `current` marks the one that batches are certified under now.
+/// A rig's commitments, newest first; `current` marks the one for batches that begin now.
 #[utoipa::path(
     get, path = "/v1/rigs/{rig}/commitments", tag = "commitments", operation_id = "list_commitments",
     security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),

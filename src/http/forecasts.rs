@@ -26,6 +26,7 @@ const FORECAST_LIMIT: usize = 256 * 1024;
 /// and nothing may be released on a forecast.
 #[utoipa::path(
     post, path = "/v1/forecasts", tag = "forecasts", operation_id = "post_forecast",
+    security(("token" = ["rig"]), ("token" = ["operator"]), ("token" = ["auditor"])),
     request_body(description = "A scenario, an expected behaviour or earlier counts, and what is varied.", content = ForecastDocument, content_type = "application/json"),
     responses(
         (status = 200, description = "The forecast; as CSV one row a point, as SVG a picture of it.",

@@ -121,9 +121,14 @@ impl PartialSchema for LeakageDocument {
     fn schema() -> RefOr<Schema> {
         let number = || ObjectBuilder::new().schema_type(Type::Number).minimum(Some(0)).maximum(Some(1));
         OneOfBuilder::new()
-            .description(Some("Leakage tolerance: one number for all preparations, or one per preparation."))
+            .description(Some(
+                "Leakage tolerance: one number for all preparations, one per preparation, a leakage budget as `POST /v1/leakage` takes it, or the \
+                 digest of one that is kept.",
+            ))
             .item(number())
             .item(ArrayBuilder::new().items(number()))
+            .item(ObjectBuilder::new().schema_type(Type::Object))
+            .item(ObjectBuilder::new().schema_type(Type::String).pattern(Some("^sha256:[0-9a-f]{64}$")))
             .into()
     }
 }

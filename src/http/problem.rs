@@ -14,7 +14,7 @@ use crate::{
     batch::BatchFault,
     fault::Fault,
     ledger::{LedgerError, seal::SealError, writer::WriteError},
-    service::{Check, ForecastError, OrderError, SolveError, SubmitError},
+    service::{Check, ForecastError, OrderError, ProfileError, SolveError, SubmitError},
 };
 
 /// Media type of every error.
@@ -247,6 +247,15 @@ impl From<SealError> for Problem {
                     .named("urn:bitassay:problem:storage", "The ledger cannot be used at present")
                     .retry_after(10)
             }
+        }
+    }
+}
+
+impl From<ProfileError> for Problem {
+    fn from(error: ProfileError) -> Self {
+        match error {
+            ProfileError::Document(fault) => Self::body(StatusCode::UNPROCESSABLE_ENTITY, fault),
+            ProfileError::Ledger(error) => error.into(),
         }
     }
 }

@@ -28,13 +28,15 @@ const PROFILE_LIMIT: usize = 256 * 1024;
 const CURSOR: &str = "rigs:";
 
 /// Declares a rig, or changes what was declared.
+///
+/// A leakage budget that is named by its digest is answered, and recorded, with the budget itself in its place.
 #[utoipa::path(
     put, path = "/v1/rigs/{rig}", tag = "rigs", operation_id = "put_rig",
     security(("token" = ["operator"])),
     params(
         ("rig" = String, Path, description = "Name of the rig: `[a-z0-9][a-z0-9-]{0,62}`."),
-        ("If-Match" = Option<String>, Header, description = "Entity tag of the version that a change starts from; needed for a change."),
-        ("If-None-Match" = Option<String>, Header, description = "`*`: create only."),
+        ("If-Match" = Option<String>, Header, pattern = r#"^(\*|"[0-9]{1,18}"(, ?"[0-9]{1,18}")*)$"#, description = "Entity tag of the version that a change starts from; needed for a change."),
+        ("If-None-Match" = Option<String>, Header, pattern = r"^\*$", description = "`*`: create only."),
     ),
     request_body(content = ProfileDocument, content_type = "application/json"),
     responses(
@@ -55,7 +57,7 @@ pub async fn put(
     payload: Payload<PROFILE_LIMIT>,
 ) -> Result<Response<Body>, Problem> {
     let document: ProfileDocument = payload.object("A profile")?;
-    let profile = Profile::try_from(document).map_err(|fault| Problem::body(StatusCode::UNPROCESSABLE_ENTITY, fault))?;
+    let profile = service.read_profile(document).await?;
     let location = format!("/v1/rigs/{rig}");
     let text = serde_json::to_string(&profile).map_err(|error| Problem::internal(&error))?;
     let (kept, version) = service.keep_profile(rig, profile, expectation).await?;

@@ -66,6 +66,19 @@ impl<S: Send + Sync> FromRequestParts<S> for CommitmentPath {
     }
 }
 
+/// The `{digest}` of a budget's path, as it stands there.
+pub struct BudgetPath(pub String);
+
+impl<S: Send + Sync> FromRequestParts<S> for BudgetPath {
+    type Rejection = Problem;
+
+    async fn from_request_parts(parts: &mut Parts, state: &S) -> Result<Self, Problem> {
+        let Path(text) =
+            Path::<String>::from_request_parts(parts, state).await.map_err(|error| Problem::parameter("digest", error.body_text()))?;
+        Ok(Self(text))
+    }
+}
+
 /// The path's identifier, in the one way that it is written.
 async fn identifier<S: Send + Sync>(parts: &mut Parts, state: &S) -> Option<Uuid> {
     let Path(text) = Path::<String>::from_request_parts(parts, state).await.ok()?;
@@ -269,6 +282,12 @@ pub fn page(items: impl Iterator<Item = String>, next: Option<&str>) -> String {
     let items: Vec<String> = items.collect();
     let next = next.map_or_else(|| "null".into(), |cursor| format!("\"{cursor}\""));
     format!("{{\"items\":[{}],\"next\":{next}}}", items.join(","))
+}
+
+/// Documents by their digests, as an object; each is a text that goes in as it was kept, so that its digest still holds.
+pub fn by_digest(documents: Vec<(String, String)>) -> String {
+    let members: Vec<String> = documents.into_iter().map(|(digest, document)| format!("\"{digest}\":{document}")).collect();
+    format!("{{{}}}", members.join(","))
 }
 
 /// The header that leads to the next page, for clients that follow links.

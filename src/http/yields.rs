@@ -27,7 +27,7 @@ pub struct YieldQuery {
     #[param(minimum = 1, maximum = 100_000, default = 100)]
     batches: Option<u32>,
     /// In place of `batches`: those recorded at this time or later, RFC 3339.
-    #[param(value_type = Option<String>)]
+    #[param(value_type = Option<String>, format = DateTime)]
     since: Option<Stamp>,
 }
 

@@ -180,6 +180,36 @@ pub struct ContributionReport {
     pub assumptions: Vec<String>,
 }
 
+/// What a record says of the budget that its leakage comes from. All of it follows from the budget document.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[serde(deny_unknown_fields)]
+pub struct BudgetAccount {
+    /// `sha256:` digest of the budget document's canonical bytes.
+    pub digest: String,
+    /// Weight outside the carrier, in `[0, 1]`, rounded up: the leakage of every preparation.
+    pub leakage: f64,
+    /// The strongest reading for which the figure may be used.
+    pub leakage_holds: LeakageReading,
+    /// Probability that any limit is violated, rounded up.
+    pub failure: f64,
+    pub contributions: Vec<AccountedContribution>,
+}
+
+/// One term of a budget, in a record.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[serde(deny_unknown_fields)]
+pub struct AccountedContribution {
+    pub source: String,
+    /// Weight outside this contribution's carrier, rounded up.
+    pub leakage: f64,
+    /// Part of the sum of all contributions, in `[0, 1]`, to nearest; 0 if the sum is.
+    pub share: f64,
+    /// Probability that a limit of this contribution is violated, rounded up.
+    pub failure: f64,
+}
+
 impl Budget {
     pub fn document(&self) -> &BudgetDocument {
         &self.document
@@ -225,6 +255,30 @@ impl Budget {
         }
     }
 
+    pub fn account(&self) -> BudgetAccount {
+        let BudgetReport { leakage, leakage_holds, failure, contributions, digest, .. } = self.report();
+        let accounted = |term: ContributionReport| {
+            let ContributionReport { source, leakage, share, failure, .. } = term;
+            AccountedContribution { source, leakage, share, failure }
+        };
+        BudgetAccount { digest, leakage, leakage_holds, failure, contributions: contributions.into_iter().map(accounted).collect() }
+    }
+
+    /// What the figure rests on, as sentences of a record, once each.
+    pub fn sentences(&self) -> Vec<String> {
+        let of_sum = self.assumptions().into_iter().map(|assumption| format!("Leakage budget: {assumption}."));
+        let terms = self.document.contributions.iter().zip(&self.estimates);
+        let of_terms =
+            terms.flat_map(|(term, estimate)| estimate.assumptions.iter().map(|a| format!("Leakage budget, {}: {a}.", term.source())));
+        let mut sentences: Vec<String> = Vec::new();
+        for sentence in of_sum.chain(of_terms) {
+            if !sentences.contains(&sentence) {
+                sentences.push(sentence);
+            }
+        }
+        sentences
+    }
+
     fn sum(&self) -> BigRational {
         self.estimates.iter().map(|estimate| decimal(estimate.leakage)).sum()
     }
@@ -240,7 +294,8 @@ impl Budget {
         assumptions
     }
 
-    fn reading(&self) -> String {
+    /// What the figure may be used for, in words.
+    pub fn reading(&self) -> String {
         match self.holds() {
             LeakageReading::EveryEmission => {
                 "The figure bounds the weight outside the carrier of every pure state that is emitted, and so the mean as well: it may be used \

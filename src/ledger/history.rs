@@ -7,7 +7,7 @@ use uuid::Uuid;
 
 use super::{
     LedgerError,
-    rows::{Answered, KeptRow, NumberedCommitment, ProfileVersion, Read, Recorded, Tally, word},
+    rows::{Answered, KeptBudget, KeptRow, NumberedCommitment, ProfileVersion, Read, Recorded, Tally, word},
 };
 use crate::{certificate::Verdict, clock::Stamp, committed::Committed, profile::RigName, record::Summary, submission::IdempotencyKey};
 
@@ -169,6 +169,26 @@ impl History {
         row.map(|row| Committed::read(&row)).transpose()
     }
 
+    /// The newest commitment of a rig that was made under a version of its profile and recorded at a time or before.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn commitment_at(&self, rig: &RigName, profile_version: u64, time: Stamp) -> Result<Option<Committed>, LedgerError> {
+        let sql = "SELECT * FROM commitments WHERE rig = ? AND profile_version = ? AND recorded_at <= ? ORDER BY commitment DESC LIMIT 1";
+        let query = sqlx::query(sql).bind(rig.as_str()).bind(clamped(profile_version)).bind(time.microseconds());
+        query.fetch_optional(&self.pool).await?.map(|row| Committed::read(&row)).transpose()
+    }
+
+    /// Digest and document of each witness of a commitment.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn commitment_witnesses(&self, id: Uuid) -> Result<Vec<(String, String)>, LedgerError> {
+        let sql = "SELECT w.digest, w.document FROM commitments JOIN commitment_witnesses USING (commitment) \
+                   JOIN witnesses w ON w.digest = commitment_witnesses.digest WHERE id = ? ORDER BY w.digest";
+        Ok(sqlx::query_as(sql).bind(id.to_string()).fetch_all(&self.pool).await?)
+    }
+
     /// A rig's commitments, newest first, those before the number `before`.
     ///
     /// # Errors
@@ -194,6 +214,28 @@ impl History {
                    ORDER BY w.digest";
         let witnesses = sqlx::query_as(sql).bind(clamped(number)).fetch_all(&self.pool).await?;
         Ok(Some((committed, witnesses)))
+    }
+
+    /// The leakage budget of a digest.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn budget(&self, digest: &str) -> Result<Option<KeptBudget>, LedgerError> {
+        let sql = "SELECT budget, recorded_at, document FROM leakage_budgets WHERE digest = ?";
+        let row = sqlx::query(sql).bind(digest).fetch_optional(&self.pool).await?;
+        row.map(|row| KeptBudget::read(&row)).transpose()
+    }
+
+    /// Leakage budgets, newest first, those before the number `before`.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn budgets(&self, before: Option<u64>, limit: u32) -> Result<Page<KeptBudget>, LedgerError> {
+        let sql = "SELECT budget, recorded_at, document FROM leakage_budgets WHERE budget < ? ORDER BY budget DESC LIMIT ?";
+        let before = clamped(before.unwrap_or(u64::MAX));
+        let rows = sqlx::query(sql).bind(before).bind(i64::from(limit) + 1).fetch_all(&self.pool).await?;
+        let items = rows.iter().map(KeptBudget::read).collect::<Result<_, _>>()?;
+        Ok(Page::of(items, limit))
     }
 
     /// All witnesses that are kept for later batches, in the order in which they came.

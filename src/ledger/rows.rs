@@ -11,6 +11,7 @@ use crate::{
     clock::Stamp,
     commitment::Commitment,
     committed::Committed,
+    leakage::budget::BudgetDocument,
     profile::{Profile, RigName},
     record::Record,
     refusal::Refusal,
@@ -112,6 +113,25 @@ pub struct NumberedCommitment {
     pub committed: Committed,
 }
 
+/// A leakage budget that is kept.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct KeptBudget {
+    pub number: u64,
+    pub recorded_at: Stamp,
+    /// The canonical text, byte for byte as it was digested.
+    pub document: String,
+}
+
+impl KeptBudget {
+    /// The budget as a document.
+    ///
+    /// # Errors
+    /// A text that cannot be read.
+    pub fn budget(&self) -> Result<BudgetDocument, LedgerError> {
+        serde_json::from_str(&self.document).map_err(|source| LedgerError::Unreadable { what: "leakage budget", source: Arc::new(source) })
+    }
+}
+
 /// The answer that a submission was given, to be given again.
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct Answered {
@@ -201,6 +221,16 @@ impl Read for Committed {
 impl Read for NumberedCommitment {
     fn read(row: &SqliteRow) -> Result<Self, LedgerError> {
         Ok(Self { number: unsigned(row.try_get("commitment")?, "commitment number")?, committed: Committed::read(row)? })
+    }
+}
+
+impl Read for KeptBudget {
+    fn read(row: &SqliteRow) -> Result<Self, LedgerError> {
+        Ok(Self {
+            number: unsigned(row.try_get("budget")?, "budget number")?,
+            recorded_at: time(row.try_get("recorded_at")?)?,
+            document: row.try_get("document")?,
+        })
     }
 }
 

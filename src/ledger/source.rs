@@ -57,6 +57,13 @@ pub const CERTIFICATION: Source = Source {
     rows: "SELECT id AS subject, recorded_at FROM certifications ORDER BY entry",
 };
 
+/// Leakage budgets; the subject is the digest.
+pub const BUDGET: Source = Source {
+    kind: "leakage-budget",
+    row: "SELECT digest AS subject, recorded_at, budget AS number, digest, document AS document_sha256 FROM leakage_budgets WHERE digest = ?1",
+    rows: "SELECT digest AS subject, recorded_at FROM leakage_budgets ORDER BY budget",
+};
+
 /// Changes of tokens; the subject is `token/change`.
 pub const TOKEN: Source = Source {
     kind: "token",
@@ -66,7 +73,7 @@ pub const TOKEN: Source = Source {
 };
 
 /// Every table that is logged.
-pub const SOURCES: [Source; 4] = [PROFILE, COMMITMENT, CERTIFICATION, TOKEN];
+pub const SOURCES: [Source; 5] = [BUDGET, PROFILE, COMMITMENT, CERTIFICATION, TOKEN];
 
 /// What is to be logged about one row.
 #[derive(Debug, Clone, PartialEq)]

@@ -14,7 +14,7 @@ use super::{
     history::answered_within,
     rows::{Answered, Entry, KeptRow, word},
     seal::Fault,
-    source::{CERTIFICATION, COMMITMENT, PROFILE},
+    source::{BUDGET, CERTIFICATION, COMMITMENT, PROFILE},
     tree,
 };
 use crate::{
@@ -79,12 +79,14 @@ pub struct Settled {
 type ProfileAnswer = Result<(Kept, u64), WriteError>;
 type EntryAnswer = Result<Settled, WriteError>;
 type CommitmentAnswer = Result<(), LedgerError>;
+type BudgetAnswer = Result<bool, LedgerError>;
 type KeptAnswer = Result<(), LedgerError>;
 
 enum Item {
     Profile { rig: RigName, profile: Box<Profile>, expectation: Expectation, recorded_at: Stamp, answer: oneshot::Sender<ProfileAnswer> },
     Entry { entry: Box<Entry>, answer: oneshot::Sender<EntryAnswer> },
     Commitment { committed: Box<Committed>, witnesses: Vec<(String, String)>, answer: oneshot::Sender<CommitmentAnswer> },
+    Budget { digest: String, document: String, recorded_at: Stamp, answer: oneshot::Sender<BudgetAnswer> },
     Kept { added: Vec<KeptRow>, dropped: Vec<String>, answer: oneshot::Sender<KeptAnswer> },
 }
 
@@ -93,6 +95,7 @@ enum Outcome {
     Profile(oneshot::Sender<ProfileAnswer>, ProfileAnswer),
     Entry(oneshot::Sender<EntryAnswer>, EntryAnswer),
     Commitment(oneshot::Sender<CommitmentAnswer>, CommitmentAnswer),
+    Budget(oneshot::Sender<BudgetAnswer>, BudgetAnswer),
     Kept(oneshot::Sender<KeptAnswer>, KeptAnswer),
 }
 
@@ -103,6 +106,7 @@ impl Outcome {
             Self::Profile(answer, outcome) => drop(answer.send(outcome)),
             Self::Entry(answer, outcome) => drop(answer.send(outcome)),
             Self::Commitment(answer, outcome) => drop(answer.send(outcome)),
+            Self::Budget(answer, outcome) => drop(answer.send(outcome)),
             Self::Kept(answer, outcome) => drop(answer.send(outcome)),
         }
     }
@@ -113,6 +117,7 @@ impl Outcome {
             Self::Profile(_, Err(WriteError::Ledger(error)))
             | Self::Entry(_, Err(WriteError::Ledger(error)))
             | Self::Commitment(_, Err(error))
+            | Self::Budget(_, Err(error))
             | Self::Kept(_, Err(error)) => Some(error),
             _ => None,
         }
@@ -123,6 +128,7 @@ impl Outcome {
             Self::Profile(answer, _) => Self::Profile(answer, Err(error.clone().into())),
             Self::Entry(answer, _) => Self::Entry(answer, Err(error.clone().into())),
             Self::Commitment(answer, _) => Self::Commitment(answer, Err(error.clone())),
+            Self::Budget(answer, _) => Self::Budget(answer, Err(error.clone())),
             Self::Kept(answer, _) => Self::Kept(answer, Err(error.clone())),
         }
     }
@@ -134,6 +140,7 @@ impl Item {
             Self::Profile { answer, .. } => Outcome::Profile(answer, Err(error.clone().into())),
             Self::Entry { answer, .. } => Outcome::Entry(answer, Err(error.clone().into())),
             Self::Commitment { answer, .. } => Outcome::Commitment(answer, Err(error.clone())),
+            Self::Budget { answer, .. } => Outcome::Budget(answer, Err(error.clone())),
             Self::Kept { answer, .. } => Outcome::Kept(answer, Err(error.clone())),
         }
     }
@@ -147,6 +154,9 @@ impl Item {
             Self::Entry { entry, answer } => Outcome::Entry(answer, write_entry(connection, *entry).await),
             Self::Commitment { committed, witnesses, answer } => {
                 Outcome::Commitment(answer, write_commitment(connection, &committed, &witnesses).await)
+            }
+            Self::Budget { digest, document, recorded_at, answer } => {
+                Outcome::Budget(answer, write_budget(connection, &digest, &document, recorded_at).await)
             }
             Self::Kept { added, dropped, answer } => Outcome::Kept(answer, write_kept(connection, &added, &dropped).await),
         }
@@ -212,6 +222,16 @@ impl Writer {
         let (answer, outcome) = oneshot::channel();
         let item = Item::Commitment { committed: Box::new(committed), witnesses, answer };
         self.sender()?.send(item).await.map_err(|_| LedgerError::Closed)?;
+        outcome.await.map_err(|_| LedgerError::Closed)?
+    }
+
+    /// Keeps a leakage budget under its digest; durable when answered. The answer says whether it was not there before.
+    ///
+    /// # Errors
+    /// The database's.
+    pub async fn keep_budget(&self, digest: String, document: String, recorded_at: Stamp) -> BudgetAnswer {
+        let (answer, outcome) = oneshot::channel();
+        self.sender()?.send(Item::Budget { digest, document, recorded_at, answer }).await.map_err(|_| LedgerError::Closed)?;
         outcome.await.map_err(|_| LedgerError::Closed)?
     }
 
@@ -408,6 +428,18 @@ async fn write_commitment(connection: &mut SqliteConnection, committed: &Committ
     }
     tree::log(connection, &COMMITMENT, &committed.id.to_string()).await?;
     Ok(())
+}
+
+async fn write_budget(connection: &mut SqliteConnection, digest: &str, document: &str, recorded_at: Stamp) -> BudgetAnswer {
+    let sql = "INSERT INTO leakage_budgets (budget, digest, recorded_at, document) \
+               SELECT (SELECT COALESCE(MAX(budget), -1) + 1 FROM leakage_budgets), ?1, ?2, ?3 \
+               WHERE NOT EXISTS (SELECT 1 FROM leakage_budgets WHERE digest = ?1)";
+    let written = sqlx::query(sql).bind(digest).bind(recorded_at.microseconds()).bind(document).execute(&mut *connection).await?;
+    let new = written.rows_affected() > 0;
+    if new {
+        tree::log(connection, &BUDGET, digest).await?;
+    }
+    Ok(new)
 }
 
 async fn write_kept(connection: &mut SqliteConnection, added: &[KeptRow], dropped: &[String]) -> KeptAnswer {

@@ -4,8 +4,9 @@ use std::sync::Arc;
 
 use uuid::Uuid;
 
-use super::{Service, SolveError, Working, new_id};
+use super::{Evidence, Service, SolveError, Working, new_id};
 use crate::{
+    clock::Stamp,
     commitment::{CommitError, commit},
     committed::{CommitmentOrder, Committed, Expected, earlier_frequencies},
     counts::Table,
@@ -48,7 +49,7 @@ pub struct Listed {
 }
 
 impl Service {
-    /// Makes a commitment and records it; batches that begin afterwards are certified under it until a newer one stands.
+    /// Makes a commitment and records it; batches that begin afterwards are certified under it until a newer one is recorded.
     ///
     /// Once begun, the work goes on even if the operator hangs up; the list of commitments then shows it.
     ///
@@ -95,7 +96,17 @@ impl Service {
         Ok(earlier_frequencies(&record, rig, geometry)?)
     }
 
-    /// The commitment that stands for a rig's profile.
+    /// The commitment that a batch is certified under: the newest one under the profile that had been recorded when the batch began. Nothing but
+    /// the time of its beginning decides, so nobody can choose among commitments by what the data show. For a batch that began before all of
+    /// them it is the newest, under which it is refused; `None` if there is none.
+    pub(super) async fn commitment_for(&self, profile: &ProfileVersion, started_at: Stamp) -> Result<Option<Committed>, LedgerError> {
+        match self.ledger.history.commitment_at(&profile.rig, profile.version, started_at).await? {
+            Some(committed) => Ok(Some(committed)),
+            None => self.standing(profile).await,
+        }
+    }
+
+    /// The newest commitment under a rig's profile.
     pub(super) async fn standing(&self, profile: &ProfileVersion) -> Result<Option<Committed>, LedgerError> {
         self.ledger.history.newest_commitment(&profile.rig, profile.version).await
     }
@@ -106,6 +117,16 @@ impl Service {
     /// The ledger's.
     pub async fn commitment(&self, id: Uuid) -> Result<Option<Committed>, LedgerError> {
         self.ledger.history.commitment(id).await
+    }
+
+    /// What a commitment rests on, itself included; `None` if there is no such commitment.
+    ///
+    /// # Errors
+    /// The ledger's.
+    pub async fn evidence_of_commitment(&self, id: Uuid) -> Result<Option<Evidence>, LedgerError> {
+        let Some(committed) = self.commitment(id).await? else { return Ok(None) };
+        let witnesses = self.ledger.history.commitment_witnesses(id).await?;
+        Ok(Some(Evidence { commitment: Some(committed.document), witnesses }))
     }
 
     /// A rig's commitments, newest first, beginning before a number; `None` if there is no such rig.

@@ -12,11 +12,9 @@ use crate::{
     ledger::{Ledger, LedgerError, history::Filter},
     profile::RigName,
     record::Concern,
-    statistics::quality::{Expectations, examine},
+    statistics::quality::{Expectations, LEAST_ROUNDS, Objection, examine},
 };
 
-/// Rounds that a setting should have at least; tests and intervals mean little below.
-const LEAST_ROUNDS: u64 = 100;
 /// Chance of any warning about a batch in which everything is as declared. Common practice.
 const SIGNIFICANCE: f64 = 1e-3;
 
@@ -55,4 +53,13 @@ pub(super) fn concerns(previous: Option<&Table<u64>>, distribution: Option<&[Vec
     // Distribution and counts fit the geometry of a valid profile or commitment.
     let findings = examine(&counts, &expectations).unwrap_or_default();
     findings.into_iter().map(|finding| Concern { detail: finding.to_string(), finding }).collect()
+}
+
+/// The first thing that a profile objects to, if there is any.
+pub fn objection(refuse_on: &[Objection], concerns: &[Concern], certificate: &Certificate) -> Option<Objection> {
+    let of_certificate = certificate.objections();
+    let found = |objection: &&Objection| {
+        of_certificate.contains(objection) || concerns.iter().any(|concern| concern.finding.objection() == **objection)
+    };
+    refuse_on.iter().find(found).copied()
 }

@@ -22,14 +22,18 @@ use super::{
 };
 use crate::relaxation::program::{Program, Row};
 
-/// The solver stops where neither a residual nor the sum of what complementarity leaves exceeds this.
+/// The solver stops where neither a residual, nor the sum of what complementarity leaves, nor what residuals cost exceeds this.
 const TOLERANCE: f64 = 1e-9;
+/// Less than this counts as solved.
+const SOLVED: f64 = 2e-6;
 /// More than this is no candidate.
-const USEFUL: f64 = 1e-6;
+const USEFUL: f64 = 1e-2;
 /// Scale of the first iterates.
 const START: f64 = 1.0;
 /// Iterations without progress after which it gives up, and the shortest step that is one.
-const MOST_STALLED: u32 = 5;
+const MOST_STALLED: u32 = 4;
+/// Progress is a factor of this in a measure.
+const PROGRESS: f64 = 0.9;
 const SHORTEST_STEP: f64 = 1e-6;
 /// The most entries that the matrices of all groups may have together: 0.4 GB, and a few times that with their factors.
 const MOST_ENTRIES: usize = 50_000_000;
@@ -102,27 +106,31 @@ impl<'a> Iteration<'a> {
 
     fn run(mut self, limits: Limits) -> Option<Candidate> {
         let mut best: Option<(f64, Point)> = None;
-        let mut status = Status::Inaccurate;
         let mut iterations = 0;
         let mut stalled = 0;
+        let mut least = [f64::INFINITY; 3];
         let start = Instant::now();
         loop {
             let residuals = self.residuals();
             let infeasible = residuals.largest();
             let complementarity = self.gap() * self.degree;
-            let missing = infeasible.max(complementarity);
+            let missing = infeasible.max(complementarity).max(self.proved_too_much(&residuals));
             if best.as_ref().is_none_or(|(least, _)| missing < *least) {
                 best = Some((missing, self.point.clone()));
+            }
+            // What is missing may grow for a while where multipliers grow faster than residuals fall.
+            let measures = [missing, infeasible, complementarity];
+            if measures.iter().zip(&least).any(|(measure, least)| *measure < PROGRESS * least) {
                 stalled = 0;
             } else {
                 stalled += 1;
             }
+            least.iter_mut().zip(measures).for_each(|(least, measure)| *least = least.min(measure));
             if missing <= TOLERANCE {
-                status = Status::Solved;
                 break;
             }
             // Going on cannot help where complementarity is no longer what is missing.
-            let hopeless = stalled > MOST_STALLED || complementarity < 0.01 * infeasible && complementarity < 0.1 * USEFUL;
+            let hopeless = stalled > MOST_STALLED || complementarity < 0.01 * infeasible && complementarity < 0.1 * SOLVED;
             let late = limits.seconds.is_nan() || start.elapsed().as_secs_f64() >= limits.seconds;
             if hopeless || late || iterations >= limits.iterations {
                 break;
@@ -133,7 +141,8 @@ impl<'a> Iteration<'a> {
                 break;
             }
         }
-        let (_, point) = best.filter(|(missing, _)| iterations > 0 && *missing <= USEFUL)?;
+        let (missing, point) = best.filter(|(missing, _)| iterations > 0 && *missing <= USEFUL)?;
+        let status = if missing <= SOLVED { Status::Solved } else { Status::Inaccurate };
         Some(candidate(point, status, iterations))
     }
 
@@ -141,6 +150,15 @@ impl<'a> Iteration<'a> {
     fn gap(&self) -> f64 {
         let Point { s, u, slack, z, .. } = &self.point;
         (inner_all(slack, z) + dot(s, u)) / self.degree
+    }
+
+    /// By how much the multipliers miss the optimum because the variables miss their constraints, at most: residuals times multipliers. Where the
+    /// constraints have no interior, multipliers grow without bound, and small residuals are no comfort.
+    fn proved_too_much(&self, residuals: &Residuals) -> f64 {
+        let Point { y, u, z, .. } = &self.point;
+        let weighted = |multipliers: &[f64], residuals: &[f64]| multipliers.iter().zip(residuals).map(|(m, r)| (m * r).abs()).sum::<f64>();
+        let blocks = z.iter().zip(&residuals.blocks).map(|(z, residual)| weighted(z.as_slice(), residual.as_slice())).sum::<f64>();
+        weighted(y, &residuals.equalities) + weighted(u, &residuals.inequalities) + blocks
     }
 
     fn residuals(&self) -> Residuals {

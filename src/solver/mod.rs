@@ -80,7 +80,17 @@ pub struct Candidate {
 /// assert!((candidate.values[0] - 3.0).abs() < 1e-6);
 /// ```
 pub fn solve(program: &Program, limits: Limits) -> Candidate {
-    interior::solve(program, limits).unwrap_or_else(|| clarabel::solve(program, limits))
+    solve_structured(program, limits).unwrap_or_else(|| solve_generally(program, limits))
+}
+
+/// The same with the solver that is made for programmes over moments alone; `None` where it has no useful answer.
+pub fn solve_structured(program: &Program, limits: Limits) -> Option<Candidate> {
+    interior::solve(program, limits)
+}
+
+/// The same with the general solver alone, which is slower and gets further where constraints have no interior.
+pub fn solve_generally(program: &Program, limits: Limits) -> Candidate {
+    clarabel::solve(program, limits)
 }
 
 /// Numbers that look random and are the same in every run.

@@ -22,6 +22,24 @@ use crate::{
     scenario::Setting,
 };
 
+/// Rounds that a setting should have at least; tests and intervals mean little below.
+pub const LEAST_ROUNDS: u64 = 100;
+
+/// What a rig's profile may have a batch refused for, whatever its bound says.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
+#[serde(rename_all = "kebab-case")]
+pub enum Objection {
+    /// The numbers of rounds per setting do not fit the declared, or committed, setting distribution.
+    SettingImbalance,
+    /// The outcomes are distributed otherwise than in the rig's newest certified batch.
+    OutcomeDrift,
+    /// A setting has fewer rounds than [`LEAST_ROUNDS`].
+    FewRounds,
+    /// Lost rounds were left out on the assumption of fair sampling.
+    FairSampling,
+}
+
 /// Outcome of one likelihood-ratio test.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
@@ -55,6 +73,17 @@ pub enum Finding {
     OutcomeDrift { setting: Setting, test: LikelihoodRatio, corrected_p_value: f64 },
     /// A setting has fewer rounds than asked for.
     FewRounds { setting: Setting, rounds: u64, least: u64 },
+}
+
+impl Finding {
+    /// What a profile may say about such a finding.
+    pub fn objection(&self) -> Objection {
+        match self {
+            Self::SettingImbalance { .. } => Objection::SettingImbalance,
+            Self::OutcomeDrift { .. } => Objection::OutcomeDrift,
+            Self::FewRounds { .. } => Objection::FewRounds,
+        }
+    }
 }
 
 impl fmt::Display for Finding {

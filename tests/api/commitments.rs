@@ -1,6 +1,6 @@
 //! `/v1/rigs/{rig}/commitments` and `/v1/commitments`, and batches of rounds with memory
 
-use std::sync::Arc;
+use std::{collections::BTreeMap, sync::Arc};
 
 use bitassay::{
     bundle::Bundle,
@@ -8,6 +8,7 @@ use bitassay::{
     commitment::Commitment,
     request::{Request, RoundModel},
     verify::Discrepancy,
+    witness::witness::Witness,
 };
 use serde_json::{Value, json};
 
@@ -68,6 +69,13 @@ fn what_was_committed_certifies_the_batches_that_follow() {
     let path = format!("/v1/commitments/{}", committed["id"].as_str().unwrap());
     assert_eq!(reply.header("location"), Some(path.as_str()));
     assert_eq!(client.get(&path).expect(200).body, reply.body);
+    let evidence = client.get(&format!("{path}/witness")).expect(200).json();
+    assert_eq!((&evidence["id"], &evidence["commitment"]), (&committed["id"], &committed["commitment"]));
+    let witnesses: BTreeMap<String, Witness> = serde_json::from_value(evidence["witnesses"].clone()).unwrap();
+    assert!(witnesses.iter().all(|(digest, witness)| witness.digest() == *digest));
+    let rests_on: Commitment = serde_json::from_value(evidence["commitment"].clone()).unwrap();
+    assert_eq!(rests_on.confirm(&witnesses.values().collect::<Vec<_>>()), Ok(()));
+    client.get("/v1/commitments/00000000-0000-0000-0000-000000000000/witness").expect(404);
     assert_eq!((&committed["rig"], &committed["profile_version"], &committed["level"]), (&json!("bench"), &json!(1), &json!("lean")));
     assert_eq!(committed.get("current"), None);
     let commitment: Commitment = serde_json::from_value(committed["commitment"].clone()).unwrap();
@@ -175,12 +183,21 @@ fn a_newer_commitment_stands_for_later_batches() {
     assert_eq!(found, [(&second["id"], &json!(true)), (&first["id"], &json!(false))]);
     assert_eq!(listed["items"][1]["commitment"], first["commitment"]);
 
-    // The same batch sent again is answered as before; a new one has to fit what stands now.
+    // The same batch sent again is answered as before. A new one is certified under what was recorded when it began, to the microsecond,
+    // and has to fit that, whatever else there is.
     let again = client.post_batch("bench", "first", &early).expect(201);
     assert_eq!((again.header("idempotency-replayed"), &again.body), (Some("true"), &answered.body));
-    assert_eq!(client.post_batch("bench", "another", &early).expect(422).json()["pointer"], "/counts");
-    let between = client.post_batch("bench", "between", &batch(2 * ROUNDS, &first["recorded_at"])).expect(422);
-    assert_eq!(between.json()["reason"], "uncommitted");
+    let moment: Stamp = second["recorded_at"].as_str().unwrap().parse().unwrap();
+    let before = json!(Stamp::from_microseconds(moment.microseconds() - 1).unwrap());
+    let between = client.post_batch("bench", "between", &batch(ROUNDS, &before)).expect(201);
+    assert_eq!((&between.json()["commitment"], &between.json()["block"]["commitment"]), (&first["id"], &first["digest"]));
+    assert_eq!(bundle(&client, &between).verify(), Ok(()));
+    assert_eq!(client.post_batch("bench", "too-many", &batch(2 * ROUNDS, &before)).expect(422).json()["pointer"], "/counts");
+    assert_eq!(client.post_batch("bench", "too-few", &batch(ROUNDS, &second["recorded_at"])).expect(422).json()["pointer"], "/counts");
+    let first_moment: Stamp = first["recorded_at"].as_str().unwrap().parse().unwrap();
+    let too_early = json!(Stamp::from_microseconds(first_moment.microseconds() - 1).unwrap());
+    let refused = client.post_batch("bench", "too-early", &batch(2 * ROUNDS, &too_early)).expect(422);
+    assert_eq!(refused.json()["reason"], "uncommitted");
     let record = client.post_batch("bench", "second", &batch(2 * ROUNDS, &second["recorded_at"])).expect(201).json();
     assert_eq!(record["commitment"], second["id"]);
     assert_eq!(client.get(&format!("/v1/commitments/{}", first["id"].as_str().unwrap())).expect(200).json(), first);

@@ -94,7 +94,7 @@ fn bad_input_ends_with_2_and_one_line_that_names_the_culprit() {
     assert_eq!(status(&missing), 2);
 }
 
-/// The demo shows each verdict, and does not touch a database that exists.
+/// The demo shows each verdict and a commitment, and does not touch a database that exists.
 #[test]
 fn the_demo_certifies_and_refuses() {
     let folder = tempfile::tempdir().unwrap();
@@ -103,7 +103,13 @@ fn the_demo_certifies_and_refuses() {
     let shown = run(&arguments, "");
     let text = String::from_utf8_lossy(&shown.stdout).into_owned();
     assert_eq!(status(&shown), 0, "{}", String::from_utf8_lossy(&shown.stderr));
-    for (day, expected) in [("clear", "certified"), ("salt-spray", "certified"), ("bright-pulses", "refused"), ("fog", "refused")] {
+    for (day, expected) in [
+        ("clear", "certified"),
+        ("salt-spray", "certified"),
+        ("bright-pulses", "refused"),
+        ("fog", "refused"),
+        ("clear, again", "certified"),
+    ] {
         let row = text.lines().find(|line| line.starts_with(day)).unwrap_or_else(|| panic!("{text}"));
         assert!(row.contains(expected), "{row}");
     }

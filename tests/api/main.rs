@@ -16,6 +16,7 @@ mod kept;
 mod leakage;
 mod ledger;
 mod measurements;
+mod objections;
 mod openapi;
 mod rigs;
 mod server;

@@ -1,6 +1,7 @@
 //! What must hold whatever the numbers are.
 
 mod accounts;
+mod comparison;
 mod coverage;
 mod forecasts;
 mod kept;
