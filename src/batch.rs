@@ -13,9 +13,8 @@ use crate::{
     counts::Table,
     fault::{Fault, parse_object},
     profile::Profile,
-    relaxation::cost::choose,
-    request::{LostRounds, Request, RequestDocument},
-    scenario::{Geometry, LeakageDocument, ScenarioDocument},
+    request::{LostRounds, Request, RequestDocument, Starts},
+    scenario::{Geometry, LeakageDocument, Scenario, ScenarioDocument},
 };
 
 /// What is wrong with a posted batch.
@@ -178,14 +177,17 @@ impl BatchDocument {
             return Ok(Batch { started_at, ended_at, leakage_source: LeakageSource::Profile, task: Task::Done(Box::new(certificate)) });
         }
         let leakage_source = if leakage.is_some() { LeakageSource::Batch } else { LeakageSource::Profile };
-        let mut scenario = profile.scenario().clone();
+        let (mut scenario, mut starts) = (profile.scenario().clone(), profile.starts());
         if let Some(leakage) = leakage {
             scenario = scenario.with_leakage(leakage)?;
-            // A leakage that is not exactly zero makes a solve larger, possibly too large.
-            choose(profile.level(), &scenario, scenario.geometry().outcomes).map_err(|fault| Fault::new("/leakage", fault.detail))?;
+            let leaks = |scenario: &Scenario| scenario.leakage().iter().map(|epsilon| *epsilon > 0.0).collect::<Vec<_>>();
+            if leaks(&scenario) != leaks(profile.scenario()) {
+                // A leakage that is not exactly zero makes a solve larger, possibly too large.
+                starts = Starts::of(profile.level(), &scenario).map_err(|fault| Fault::new("/leakage", fault.detail))?;
+            }
         }
         // Scenario, rounds and failure come from a valid profile: what can still be wrong is in the batch, under its own name.
-        let request = Request::try_from(RequestDocument {
+        let document = RequestDocument {
             scenario: ScenarioDocument::from(scenario),
             counts: Some(counts),
             behaviour: None,
@@ -196,7 +198,8 @@ impl BatchDocument {
             entropy: profile.entropy(),
             lost_rounds,
             bracket: false,
-        })?;
+        };
+        let request = Request::read(document, Some(starts))?;
         Ok(Batch { started_at, ended_at, leakage_source, task: Task::Solve(Box::new(request)) })
     }
 }

@@ -6,7 +6,7 @@ use num_rational::BigRational;
 
 use crate::{
     attack::{Effort, Hints, attack, objective::Objective},
-    bound::{Answer, guessing_probability, power_entropy},
+    bound::{Answer, Found, guessing_probability, power_entropy},
     certificate::{Bracket, Certificate, FailureTotal, Origin, OutsideModel, PowerCertificate, Reason, TargetCertificate, Verdict},
     commitment::Commitment,
     counts::{Counts, Table},
@@ -26,7 +26,7 @@ use crate::{
     witness::{
         check::{CheckedBound, CheckedWitness, Place, proves_contradiction},
         pool::{Kept, MadeFor, Pool, Spot, Subject},
-        witness::Witness,
+        witness::{Claim, Witness},
     },
 };
 
@@ -48,7 +48,7 @@ pub fn certify(request: &Request) -> Certification {
                 return draft.outside(&contradiction.found.witness, least);
             }
             Answer::Bounded(found) => {
-                draft.add(request, *target, found.level, &found.witness, &found.bound, Some(Origin::Fresh));
+                draft.add(request, *target, &Grounds::fresh(&found));
                 if request.bracket {
                     draft.attack(request, *target, &evidence, &found.witness);
                 }
@@ -56,8 +56,7 @@ pub fn certify(request: &Request) -> Certification {
                 if let Some(level) = request.power_start.filter(|_| found.bound.rounded_up() < 1.0)
                     && let Some(found) = power_entropy(request.scenario(), *target, evidence.place(), power, level, Limits::default())
                 {
-                    let origin = Some(Origin::Fresh);
-                    draft.add_power(request, *target, &evidence, found.level, &found.witness, &found.bound, origin);
+                    draft.add_power(request, *target, &evidence, &Grounds::fresh(&found));
                 }
             }
             Answer::Unverified => draft.add_unverified(request, *target),
@@ -86,37 +85,32 @@ pub fn certify_from(pool: &Pool, request: &Request, acceptable_loss: f64) -> Opt
     let evidence = evidence(request);
     let Evidence::Region(region) = &evidence else { return None };
     let scenario = request.scenario();
-    let spot = Spot::new(scenario, region, request.start);
+    let spot = Spot::new(scenario, region);
     if pool.contradicts(&spot) {
         return None;
     }
     let mut draft = Draft::new(request, Some(&evidence));
     let (mut kept, mut loss) = (Vec::new(), 0f64);
-    let mut best = |subject, power| {
-        let best = pool.best(subject, &spot, power).filter(|best| best.loss <= acceptable_loss)?;
+    let mut best = |subject, level, power| {
+        let best = pool.best(subject, &spot, level, power).filter(|best| best.loss <= acceptable_loss)?;
         let bound = best.kept.witness().bound(evidence.place(), scenario.leakage(), scenario.leakage_holds()).ok()?;
         loss = loss.max(best.loss);
         kept.push(Arc::clone(&best.kept));
         Some((best.kept, bound))
     };
     for target in scenario.targets() {
-        let (guess, bound) = best(Subject::Guess(*target), None)?;
+        let (guess, bound) = best(Subject::Guess(*target), request.start, None)?;
         if proves_contradiction(guess.witness(), &bound, evidence.place()) {
             return None;
         }
-        draft.add(request, *target, guess.level(), guess.witness(), &bound, Some(Origin::Kept));
-        if request.power_start.is_some() && bound.rounded_up() < 1.0 {
-            let PowerTerms { power, failure } = power_terms(request, *target);
-            let (of_power, bound) = match (best(Subject::Power(*target), Some(power)), failure) {
-                (Some(best), _) => best,
-                // Nothing is drawn from it: not worth a solve.
-                (None, None) => continue,
-                (None, Some(_)) => return None,
-            };
-            let added = draft.add_power(request, *target, &evidence, of_power.level(), of_power.witness(), &bound, Some(Origin::Kept));
-            if !added {
-                return None;
-            }
+        draft.add(request, *target, &Grounds::kept(&guess, &bound));
+        let Some(level) = request.power_start.filter(|_| bound.rounded_up() < 1.0) else { continue };
+        let PowerTerms { power, failure } = power_terms(request, *target);
+        let added = best(Subject::Power(*target), level, Some(power))
+            .map(|(of_power, bound)| draft.add_power(request, *target, &evidence, &Grounds::kept(&of_power, &bound)));
+        // One that is only shown is not worth a solve; one that is more than the data allow is.
+        if added == Some(false) || (added.is_none() && failure.is_some()) {
+            return None;
         }
     }
     Some(FromPool { certificate: draft.conclude().certificate, kept, loss })
@@ -139,7 +133,9 @@ pub fn keepable(request: &Request, certification: &Certification) -> Vec<(Witnes
     let made = |witness: &Witness| {
         let level = level_of(&witness.digest()).into_iter().find(|level| witness.is_of_level(*level))?;
         let (leakage, leakage_holds) = (scenario.leakage().to_vec(), scenario.leakage_holds());
-        Some((witness.clone(), MadeFor { region: region.clone(), leakage, leakage_holds, asked: request.start, level }))
+        let of_power = matches!(witness.claim, Claim::Power { .. });
+        let asked = request.power_start.filter(|_| of_power).unwrap_or(request.start);
+        Some((witness.clone(), MadeFor { region: region.clone(), leakage, leakage_holds, asked, level }))
     };
     certification.witnesses.iter().filter_map(made).collect()
 }
@@ -286,6 +282,24 @@ fn power_failure(request: &Request) -> f64 {
     }
 }
 
+/// What a bound rests on.
+pub(crate) struct Grounds<'a> {
+    pub(crate) level: Level,
+    pub(crate) witness: &'a CheckedWitness,
+    pub(crate) bound: &'a CheckedBound,
+    pub(crate) origin: Option<Origin>,
+}
+
+impl<'a> Grounds<'a> {
+    fn fresh(found: &'a Found) -> Self {
+        Self { level: found.level, witness: &found.witness, bound: &found.bound, origin: Some(Origin::Fresh) }
+    }
+
+    fn kept(kept: &'a Kept, bound: &'a CheckedBound) -> Self {
+        Self { level: kept.level(), witness: kept.witness(), bound, origin: Some(Origin::Kept) }
+    }
+}
+
 /// A certificate in the making.
 pub(crate) struct Draft {
     certificate: Certificate,
@@ -341,15 +355,8 @@ impl Draft {
         witness.digest().to_owned()
     }
 
-    pub(crate) fn add(
-        &mut self,
-        request: &Request,
-        target: Setting,
-        level: Level,
-        witness: &CheckedWitness,
-        bound: &CheckedBound,
-        origin: Option<Origin>,
-    ) {
+    pub(crate) fn add(&mut self, request: &Request, target: Setting, grounds: &Grounds) {
+        let &Grounds { level, witness, bound, origin } = grounds;
         let digest = self.keep(witness, origin);
         let mut entry = TargetCertificate::without_bound(target, request.rounds_at(target));
         entry.level = Some(level);
@@ -396,16 +403,8 @@ impl Draft {
 
     /// Adds a power entropy to the target that was added last. One that exceeds what the data allow anyway proves that there is no model, and
     /// is no entropy: it is left out. Answers whether it was added.
-    pub(crate) fn add_power(
-        &mut self,
-        request: &Request,
-        target: Setting,
-        evidence: &Evidence,
-        level: Level,
-        witness: &CheckedWitness,
-        bound: &CheckedBound,
-        origin: Option<Origin>,
-    ) -> bool {
+    pub(crate) fn add_power(&mut self, request: &Request, target: Setting, evidence: &Evidence, grounds: &Grounds) -> bool {
+        let &Grounds { level, witness, bound, origin } = grounds;
         let PowerTerms { power, failure } = power_terms(request, target);
         let entropy_per_round = entropy_in_bits(bound.exact());
         let intervals: Vec<[f64; 2]> = match evidence {

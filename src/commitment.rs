@@ -220,10 +220,13 @@ fn checked(found: &[Found]) -> Vec<&CheckedWitness> {
     found.iter().map(|found| &found.witness).collect()
 }
 
+/// The most bits that may be expected, with the power and the factors they come from.
+type Best = Result<(f64, u32, Table<f64>), CommitError>;
+
 /// The expected bits along powers that fall from the largest one, and the most of them, if there are any, with power and factors.
-fn follow_down(plan: &Plan, witnesses: &[&CheckedWitness]) -> (Vec<CurvePoint>, Result<(f64, u32, Table<f64>), CommitError>) {
+fn follow_down(plan: &Plan, witnesses: &[&CheckedWitness]) -> (Vec<CurvePoint>, Best) {
     let mut curve = Vec::new();
-    let mut best: Result<(f64, u32, Table<f64>), CommitError> = Err(CommitError::Nothing);
+    let mut best: Best = Err(CommitError::Nothing);
     for half_steps in 0..CURVE_POINTS {
         let power = power_near(largest_power(plan) * 0.5f64.powf(f64::from(half_steps) / 2.0));
         match (expectation(plan, power, witnesses), &best) {

@@ -8,8 +8,8 @@ use crate::{
     counts::{NORMALISATION_SLACK, check_distribution},
     fault::Fault,
     freshness::Freshness,
-    relaxation::{cost::choose, level::LevelChoice},
-    request::{EntropyChoice, Failure, RoundModel},
+    relaxation::level::LevelChoice,
+    request::{EntropyChoice, Failure, RoundModel, Starts},
     scenario::{Scenario, ScenarioDocument},
     statistics::quality::Objection,
 };
@@ -100,6 +100,8 @@ pub struct Profile {
     refuse_on: Vec<Objection>,
     outcome_labels: Option<Vec<String>>,
     notes: Option<String>,
+    /// Follows from scenario and level.
+    starts: Starts,
 }
 
 impl TryFrom<ProfileDocument> for Profile {
@@ -122,7 +124,7 @@ impl TryFrom<ProfileDocument> for Profile {
         failure.check().map_err(|fault| fault.under("/failure"))?;
         freshness.check().map_err(|fault| fault.under("/freshness"))?;
         // Too large for every level is said now, and not when a batch comes in.
-        choose(level, &scenario, scenario.geometry().outcomes)?;
+        let starts = Starts::of(level, &scenario)?;
         if let Some(distribution) = &setting_distribution {
             check_distribution(distribution, scenario.geometry(), NORMALISATION_SLACK)
                 .map_err(|fault| fault.under("/setting_distribution"))?;
@@ -136,7 +138,7 @@ impl TryFrom<ProfileDocument> for Profile {
         if notes.as_ref().is_some_and(|notes| notes.len() > MAX_NOTES) {
             return Err(Fault::new("/notes", format!("notes have at most {MAX_NOTES} bytes")));
         }
-        Ok(Self { scenario, rounds, failure, level, entropy, freshness, setting_distribution, refuse_on, outcome_labels, notes })
+        Ok(Self { scenario, rounds, failure, level, entropy, freshness, setting_distribution, refuse_on, outcome_labels, notes, starts })
     }
 }
 
@@ -170,8 +172,9 @@ fn check_labels(labels: &[String], outcomes: usize) -> Result<(), Fault> {
 
 impl From<Profile> for ProfileDocument {
     fn from(profile: Profile) -> Self {
-        let Profile { scenario, rounds, failure, level, entropy, freshness, setting_distribution, refuse_on, outcome_labels, notes } =
-            profile;
+        let Profile {
+            scenario, rounds, failure, level, entropy, freshness, setting_distribution, refuse_on, outcome_labels, notes, ..
+        } = profile;
         Self {
             scenario: scenario.into(),
             rounds,
@@ -216,6 +219,11 @@ impl Profile {
 
     pub fn freshness(&self) -> Freshness {
         self.freshness
+    }
+
+    /// The levels that the choice comes to.
+    pub fn starts(&self) -> Starts {
+        self.starts
     }
 
     pub fn level(&self) -> LevelChoice {

@@ -143,15 +143,39 @@ pub struct Request {
     pub(crate) bracket: bool,
 }
 
+/// The levels that a choice comes to in a scenario. To find them out means to go through all words of each level, so they are kept with a profile.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub struct Starts {
+    guessing: Level,
+    /// Power entropies have more groups; `None` where no level is affordable.
+    power: Option<Level>,
+}
+
+impl Starts {
+    /// # Errors
+    /// As [`choose`].
+    pub fn of(level: LevelChoice, scenario: &Scenario) -> Result<Self, Fault> {
+        let guessing = choose(level, scenario, scenario.geometry().outcomes)?;
+        let power = [level, LevelChoice::Auto].into_iter().find_map(|choice| choose(choice, scenario, COVER_CELLS).ok());
+        Ok(Self { guessing, power })
+    }
+}
+
 impl TryFrom<RequestDocument> for Request {
     type Error = Fault;
 
     fn try_from(document: RequestDocument) -> Result<Self, Fault> {
+        Self::read(document, None)
+    }
+}
+
+impl Request {
+    /// As the conversion, with starts that were found for the same choice in the same geometry with the same preparations exactly leak-free.
+    pub(crate) fn read(document: RequestDocument, starts: Option<Starts>) -> Result<Self, Fault> {
         let RequestDocument { scenario, counts, behaviour, scores, rounds, failure, level, entropy, lost_rounds, bracket } = document;
         let scenario = Scenario::try_from(scenario).map_err(|fault| fault.under("/scenario"))?;
         failure.check().map_err(|fault| fault.under("/failure"))?;
-        let start = choose(level, &scenario, scenario.geometry().outcomes)?;
-        let power_start = [level, LevelChoice::Auto].into_iter().find_map(|choice| choose(choice, &scenario, COVER_CELLS).ok());
+        let Starts { guessing: start, power: power_start } = starts.map_or_else(|| Starts::of(level, &scenario), Ok)?;
         if rounds == RoundModel::Memory {
             return Err(Fault::new("/rounds", "rounds with memory need a commitment recorded before the data: post them to the service"));
         }

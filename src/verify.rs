@@ -9,7 +9,7 @@ use serde_json::Value;
 
 use crate::{
     certificate::{Certificate, OutsideModel, Reason},
-    certify::{Draft, Evidence, certify_counted, evidence},
+    certify::{Draft, Evidence, Grounds, certify_counted, evidence},
     commitment::{Commitment, CommitmentFault},
     fault::Fault,
     request::{Failure, Request, RequestDocument, RoundModel},
@@ -113,7 +113,7 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
             if proves_contradiction(&witness, &bound, evidence.place()) {
                 return Err(claim("the numbers contradict the declaration, so there is no entropy to speak of"));
             }
-            draft.add(&request, *target, level, &witness, &bound, recorded.origin);
+            draft.add(&request, *target, &Grounds { level, witness: &witness, bound: &bound, origin: recorded.origin });
             if let Some(bracket) = recorded.bracket
                 && !draft.add_bracket(&request, &evidence, &witness, bracket.attack, bracket.residual)
             {
@@ -131,7 +131,8 @@ fn recompute(certificate: &Certificate, witnesses: &BTreeMap<String, &Witness>) 
                 let bound = power.bound(evidence.place(), request.scenario().leakage(), request.scenario().leakage_holds());
                 let bound =
                     bound.map_err(|error| Discrepancy::Witness { pointer: pointer.clone(), digest: recorded.witness.clone(), error })?;
-                draft.add_power(&request, *target, &evidence, recorded.level, &power, &bound, recorded.origin);
+                let grounds = Grounds { level: recorded.level, witness: &power, bound: &bound, origin: recorded.origin };
+                draft.add_power(&request, *target, &evidence, &grounds);
             }
         }
         draft.conclude().certificate

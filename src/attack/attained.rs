@@ -67,7 +67,7 @@ pub fn attained(model: &Model, geometry: Geometry, target: Setting, objective: O
         error: 0.0,
     };
     let total: f64 = model.parts.iter().map(|part| part.weight).sum();
-    if !((total - 1.0).abs() <= TOLERANCE) {
+    if is_off(total - 1.0) {
         return Err(ModelFault::Weights(total));
     }
     for (number, part) in model.parts.iter().enumerate() {
@@ -92,7 +92,7 @@ pub fn attained(model: &Model, geometry: Geometry, target: Setting, objective: O
         // A smaller carrier may be enlarged, which only lowers the leakage.
         let excess = rank - f64::from(carrier_dimension);
         let skew = (carrier * carrier - carrier).norm().max((carrier - carrier.adjoint()).norm()).max(excess);
-        if !(skew <= TOLERANCE) {
+        if skew.is_nan() || skew > TOLERANCE {
             return Err(ModelFault::Carrier(number));
         }
         let mut defect = 0.0f64;
@@ -106,7 +106,7 @@ pub fn attained(model: &Model, geometry: Geometry, target: Setting, objective: O
         let mut own = vec![vec![vec![0.0; outcomes]; measurements]; preparations];
         for (x, state) in part.strategy.states.iter().enumerate() {
             let norm = state.norm_squared();
-            if !((norm - 1.0).abs() <= TOLERANCE) {
+            if is_off(norm - 1.0) {
                 return Err(ModelFault::State { part: number, x });
             }
             let density: Matrix = state * state.adjoint() / Complex::from(norm);
@@ -155,4 +155,9 @@ fn defect_of(elements: &[Matrix]) -> Option<f64> {
 
 fn finite(matrix: &Matrix) -> bool {
     matrix.iter().all(|entry| entry.re.is_finite() && entry.im.is_finite())
+}
+
+/// Whether something that should vanish does not; what is no number does not.
+fn is_off(defect: f64) -> bool {
+    defect.is_nan() || defect.abs() > TOLERANCE
 }

@@ -242,7 +242,7 @@ impl Search {
         for start in 0..4 * self.space.geometry.outcomes {
             let start = self.random(start);
             let prices = hint.clone().unwrap_or_else(|| self.free());
-            let column = self.from_random(start, &prices, if hint.is_some() { self.effort.steps } else { 1 });
+            let column = self.climbed_from_random(start, &prices, if hint.is_some() { self.effort.steps } else { 1 });
             self.columns.push(column);
         }
         let centre = hint.unwrap_or_else(|| self.free());
@@ -322,7 +322,7 @@ impl Search {
         let mut found = Vec::new();
         for start in 0..starts {
             let start = self.random(start);
-            let column = self.from_random(start, climbed, self.effort.steps);
+            let column = self.climbed_from_random(start, climbed, self.effort.steps);
             self.keep(column, prices, &mut found);
         }
         found
@@ -335,7 +335,7 @@ impl Search {
         }
     }
 
-    fn from_random(&self, (outcome, start): (usize, Strategy), prices: &Prices, steps: usize) -> Column {
+    fn climbed_from_random(&self, (outcome, start): (usize, Strategy), prices: &Prices, steps: usize) -> Column {
         let outcomes = self.space.geometry.outcomes;
         let certain: Vec<f64> = (0..outcomes).map(|b| f64::from(u8::from(b == outcome % outcomes))).collect();
         let slope = self.space.objective.slope(&certain);

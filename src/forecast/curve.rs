@@ -9,7 +9,7 @@ use super::{
 use crate::{
     bound::Found,
     certificate::{Reason, Verdict},
-    certify::{Draft, Evidence, evidence, power_terms},
+    certify::{Draft, Evidence, Grounds, evidence, power_terms},
     commitment::{CommitmentDocument, Plan, best_power, expected_at},
     counts::{Behaviour, Counts, Table},
     entropy::{
@@ -216,10 +216,10 @@ impl<'a> Forecaster<'a> {
                 entropies.push(0.0);
                 continue;
             };
-            draft.add(&case.request, *target, by_guessing.level, &by_guessing.witness, bound, None);
+            draft.add(&case.request, *target, &grounds(by_guessing, bound));
             let mut entropy = 0.0;
             if let Some((by_power, bound)) = found.and_then(|found| bounded(&self.power, found, t)) {
-                draft.add_power(&case.request, *target, &case.evidence, by_power.level, &by_power.witness, bound, None);
+                draft.add_power(&case.request, *target, &case.evidence, &grounds(by_power, bound));
                 entropy = case.limit_entropy(*target, bound);
                 if case.request.rounds == RoundModel::PlugIn && entropy > 0.0 {
                     point.witnesses.push(by_power.witness.digest().to_owned());
@@ -401,6 +401,11 @@ impl Case {
         let largest = largest_power_entropy(&intervals, LIMIT_POWER) * std::f64::consts::LOG2_E;
         Some(entropy_in_bits(bound.exact())).filter(|entropy| *entropy <= largest).unwrap_or(0.0)
     }
+}
+
+/// A bound at a point as a certificate rests on it; nothing is said of where its witness comes from.
+fn grounds<'f>(found: &'f Found, bound: &'f CheckedBound) -> Grounds<'f> {
+    Grounds { level: found.level, witness: &found.witness, bound, origin: None }
 }
 
 fn plan(forecast: &ForecastRequest, scenario: Scenario, expected_behaviour: Table<f64>, rounds: u64) -> Option<Plan> {

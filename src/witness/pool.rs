@@ -94,19 +94,18 @@ pub struct Spot {
     roots: Vec<[f64; 2]>,
     leakage: Vec<f64>,
     leakage_holds: LeakageReading,
-    asked: Level,
 }
 
 impl Spot {
     /// The place of a batch: its region and its scenario's leakage.
-    pub fn new(scenario: &Scenario, region: &Table<[f64; 2]>, asked: Level) -> Self {
-        Self::of(scenario.geometry(), region, scenario.leakage().to_vec(), scenario.leakage_holds(), asked)
+    pub fn new(scenario: &Scenario, region: &Table<[f64; 2]>) -> Self {
+        Self::of(scenario.geometry(), region, scenario.leakage().to_vec(), scenario.leakage_holds())
     }
 
-    fn of(geometry: Geometry, region: &Table<[f64; 2]>, leakage: Vec<f64>, leakage_holds: LeakageReading, asked: Level) -> Self {
+    fn of(geometry: Geometry, region: &Table<[f64; 2]>, leakage: Vec<f64>, leakage_holds: LeakageReading) -> Self {
         let intervals: Vec<[f64; 2]> = region.iter().flatten().flatten().copied().collect();
         let roots = intervals.iter().map(|ends| ends.map(f64::sqrt)).collect();
-        Self { geometry, intervals, roots, leakage, leakage_holds, asked }
+        Self { geometry, intervals, roots, leakage, leakage_holds }
     }
 
     /// `D²` of the module's documentation, from where a witness was made. Infinite if the place is not near enough for it to mean anything.
@@ -218,7 +217,7 @@ impl Kept {
             return Err(inapplicable("it is of another level"));
         }
         let subject = Subject::of(&witness.claim).ok_or_else(|| inapplicable("scores are not kept"))?;
-        let spot = Spot::of(geometry, &made_for.region, made_for.leakage.clone(), made_for.leakage_holds, made_for.asked);
+        let spot = Spot::of(geometry, &made_for.region, made_for.leakage.clone(), made_for.leakage_holds);
         let quick = Quick::new(witness);
         let bits = in_bits(subject, quick.at(&spot));
         let document = RwLock::new(Some(witness.canonical_json().into()));
@@ -384,8 +383,9 @@ impl Pool {
         Some(dropped)
     }
 
-    /// The witness that gives the best bound at a place; for power entropies also at a power, in units of `2^-30`. `None` if none applies.
-    pub fn best(&self, subject: Subject, spot: &Spot, power: Option<u32>) -> Option<Best> {
+    /// The witness that gives the best bound at a place, for power entropies also at a power, in units of `2^-30`, and what a solve would give more
+    /// that begins at the level `asked`. `None` if none applies.
+    pub fn best(&self, subject: Subject, spot: &Spot, asked: Level, power: Option<u32>) -> Option<Best> {
         let family = self.families.get(&(spot.geometry, subject))?;
         let mut best: Option<(f64, &Arc<Kept>)> = None;
         // Least estimate, over where witnesses were made, of what a solve would give.
@@ -398,7 +398,7 @@ impl Pool {
             if best.is_none_or(|(most, _)| bits > most) {
                 best = Some((bits, kept));
             }
-            if kept.spot.asked >= spot.asked {
+            if kept.made_for.asked >= asked {
                 let mut loss = family.curvature() * spot.squared_distance(&kept.spot);
                 if let (Some(power), Some(of)) = (power, kept.power()) {
                     // η_β falls by at most half the mean of (ln p)² for each unit of β.

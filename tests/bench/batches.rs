@@ -12,7 +12,7 @@ pub fn scenario() -> Value {
 }
 
 pub fn profile() -> Value {
-    json!({ "scenario": scenario(), "rounds": "independent", "level": "standard" })
+    json!({ "scenario": scenario(), "rounds": "independent" })
 }
 
 /// Draws batches, no two alike.

@@ -62,7 +62,7 @@ pub fn run() -> Section {
 
 fn request(batches: &mut Batches, entropy: EntropyChoice) -> Request {
     let document = json!({
-        "scenario": scenario(), "counts": batches.draw(), "rounds": "independent", "level": "standard", "entropy": entropy,
+        "scenario": scenario(), "counts": batches.draw(), "rounds": "independent", "entropy": entropy,
     });
     let document: RequestDocument = serde_json::from_value(document).expect("a request");
     Request::try_from(document).expect("a valid request")
