@@ -92,11 +92,16 @@ pub struct Hints<'a> {
 ///
 /// `None` if the place does not fit the scenario, if nothing was found that obeys the leakage, or if the solver gave up.
 ///
-/// A hint is no more than that: where the best prices are not unique it may lead astray, and a search that did not settle is made again
-/// without it.
+/// A hint is no more than that: where the best prices are not unique it may lead astray, and a search that ends away from the bound is made
+/// again without it.
 pub fn attack(scenario: &Scenario, target: Setting, place: Place, objective: Objective, hints: Hints, effort: Effort) -> Option<Attack> {
     let first = attack_once(scenario, target, place, objective, hints, effort);
-    if hints.witness.is_none() || first.as_ref().is_some_and(|first| first.settled) {
+    let bound = hints.witness.and_then(|witness| witness.bound(place, scenario.leakage(), scenario.leakage_holds()).ok());
+    let reached = |first: &Attack| match (objective, &bound) {
+        (Objective::Guess, Some(bound)) => first.guessing_probability() > bound.rounded_up() - CLOSE,
+        _ => first.settled,
+    };
+    if hints.witness.is_none() || first.as_ref().is_some_and(reached) {
         return first;
     }
     let second = attack_once(scenario, target, place, objective, Hints { witness: None, ..hints }, effort);
@@ -112,6 +117,8 @@ pub fn attack(scenario: &Scenario, target: Setting, place: Place, objective: Obj
     }
 }
 
+/// This close to the bound a guessing probability is as good as it.
+const CLOSE: f64 = 1e-5;
 /// A residual that is due to rounding.
 const USUAL_RESIDUAL: f64 = 1e-10;
 

@@ -15,8 +15,11 @@ use std::process::ExitCode;
 
 use report::{Report, Section};
 
-/// A part of the bench: its name, and what measures it. Parts run in this order.
-const PARTS: [(&str, fn() -> Section); 3] = [("warm", warm::run), ("service", service::run), ("memory", memory::run)];
+/// A part of the bench: its name, and what measures it.
+type Part = (&'static str, fn() -> Section);
+
+/// Parts run in this order.
+const PARTS: [Part; 3] = [("warm", warm::run), ("service", service::run), ("memory", memory::run)];
 
 fn main() -> ExitCode {
     // Cargo passes flags of its own.
