@@ -19,6 +19,8 @@ from words import Refused, require
 ROUNDING = Fraction(1, 10**13)
 # Assumed variance of ln p from which the power of independent rounds is chosen. Any value would do that does not depend on the outcomes.
 VARIANCE = Decimal("0.4")
+# The power is one of sixteen in a factor of two.
+POWER_STEPS = 16
 DISTRIBUTION_BITS = 38
 # The power of a diagnostic: the entropy is Shannon's up to a millionth.
 SMALL_POWER = 2**10
@@ -253,13 +255,17 @@ class Bundle:
             drawn = self.record.get("entropy", "auto") != "guessing"
             share = self.failure["estimation"] / (len(self.scenario.targets) * (2 if drawn else 1))
             # The power may depend on the number of rounds and on nothing else that was observed.
-            chosen = min((2 * -ln(share) / (rounds * VARIANCE)).sqrt(), Decimal(1)) * 2**30
-            require(is_integer(power["power"], 1, 2**30) and abs(power["power"] - max(chosen, 1)) <= 1, f"{here}/power was not chosen ahead")
+            steps = min(log2(2 * -ln(share) / (rounds * VARIANCE)) / 2, Decimal(0)) * POWER_STEPS
+            # Doubles may take a number that is almost a whole one for its neighbour.
+            floors = {(steps + error).to_integral_value("ROUND_FLOOR") for error in (Decimal("-1e-9"), Decimal("1e-9"))}
+            chosen = [max((floor / POWER_STEPS * LN2).exp() * 2**30, Decimal(1)) for floor in floors]
+            require(any(abs(power["power"] - value) <= 1 for value in chosen), f"{here}/power was not chosen ahead")
             share = share if drawn else None
         require((power["failure"] is None) == (power["min_entropy"] is None) == (share is None), f"{here}: bits are drawn at a failure probability")
         witness = self.witness(power["witness"])
         require(witness.kind == "power" and tuple(witness.target) == setting, f"{here}/witness bounds something else")
-        require(witness.claim["power"] == power["power"], f"{here}/witness is for another power")
+        # The entropy falls as the power rises, so a witness for a larger power will do.
+        require(is_integer(power["power"], 1, witness.claim["power"]), f"{here}/witness is for a smaller power")
         require(witness.is_of_level(power["level"]), f"{here}/level is another one")
         entropy = -witness.bound(self.scenario, self.place)
         most = self.place.largest_power_entropy(*setting, power["power"])
