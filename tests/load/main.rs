@@ -14,10 +14,6 @@ use clap::{Parser, Subcommand};
 
 #[derive(Parser)]
 struct CommandLine {
-    /// Cargo says this to whatever it runs as a benchmark
-    #[arg(long, hide = true)]
-    bench: bool,
-
     #[command(subcommand)]
     command: Command,
 }
@@ -29,7 +25,8 @@ enum Command {
 }
 
 fn main() -> ExitCode {
-    let CommandLine { command, .. } = CommandLine::parse();
+    // Cargo puts its own flag last, after the subcommand.
+    let CommandLine { command } = CommandLine::parse_from(std::env::args_os().filter(|argument| argument != "--bench"));
     let well = match command {
         Command::Flood(flood) => flood.run(),
         Command::Soak(soak) => soak.run(),

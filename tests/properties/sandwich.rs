@@ -20,7 +20,7 @@ use nalgebra::Complex;
 use crate::rig::{code, counts, document, run};
 
 /// Cases of the short form.
-const SHORT: u64 = 6;
+const SHORT: u64 = 4;
 
 #[test]
 fn no_bound_lies_below_an_attack() {
