@@ -2,7 +2,7 @@
 //!
 //! A forecast takes a behaviour that is expected and draws up, for every point of a grid, the account that a batch with exactly the
 //! expected counts would get; for rounds with memory, the one of a commitment. Every figure follows from witnesses that passed the
-//! exact check. Neighbouring points share them ([`shared`] says by which rule and at what cost).
+//! exact check. Neighbouring points share them (`shared.rs` says by which rule and at what cost).
 //!
 //! A forecast is about data that nobody has seen. It is not recorded, and nothing may be released on it.
 

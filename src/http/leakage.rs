@@ -87,8 +87,7 @@ pub struct BudgetItem {
     #[schema(value_type = String, format = DateTime)]
     recorded_at: Stamp,
     carrier_dimension: u32,
-    #[serde(flatten)]
-    account: BudgetAccount,
+    budget: BudgetAccount,
 }
 
 /// Budgets, newest first.
@@ -138,6 +137,6 @@ pub async fn list(
 fn item(kept: &KeptBudget) -> Result<String, Problem> {
     let budget = Budget::try_from(kept.budget()?).map_err(|fault| Problem::internal(&fault))?;
     let carrier_dimension = budget.document().carrier_dimension;
-    let item = BudgetItem { recorded_at: kept.recorded_at, carrier_dimension, account: budget.account() };
+    let item = BudgetItem { recorded_at: kept.recorded_at, carrier_dimension, budget: budget.account() };
     serde_json::to_string(&item).map_err(|error| Problem::internal(&error))
 }

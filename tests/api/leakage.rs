@@ -72,12 +72,15 @@ fn a_budget_is_kept_under_its_digest() {
     let other = json!({ "carrier_dimension": 2, "contributions": [{ "source": "coherent", "mean_photon_number": 0.1 }] });
     let other = post(&client, &other).expect(201).json();
     let first = client.get("/v1/leakage?limit=1").expect(200);
-    assert_eq!(first.json()["items"][0]["digest"], other["digest"]);
-    assert_eq!((&first.json()["items"][0]["leakage"], &first.json()["items"][0]["carrier_dimension"]), (&other["leakage"], &json!(2)));
+    assert_eq!(first.json()["items"][0]["budget"]["digest"], other["digest"]);
+    assert_eq!(
+        (&first.json()["items"][0]["budget"]["leakage"], &first.json()["items"][0]["carrier_dimension"]),
+        (&other["leakage"], &json!(2))
+    );
     let next = first.header("link").unwrap().trim_start_matches('<').split('>').next().unwrap().to_owned();
     let second = client.get(&next).expect(200).json();
-    assert_eq!((&second["items"][0]["digest"], &second["next"]), (&json!(digest), &Value::Null));
-    assert_eq!((&second["items"][0]["failure"], second["items"].as_array().unwrap().len()), (&json!(4e-10), 1));
+    assert_eq!((&second["items"][0]["budget"]["digest"], &second["next"]), (&json!(digest), &Value::Null));
+    assert_eq!((&second["items"][0]["budget"]["failure"], second["items"].as_array().unwrap().len()), (&json!(4e-10), 1));
 
     let rows = running.rows();
     let statements = [
