@@ -34,7 +34,7 @@ const REGULARISATION: f64 = 1e-6;
 /// memory instead of failing. One block may have a side of 140, or fifty of them a side of 52.
 const MOST_SCALING_ENTRIES: usize = 100_000_000;
 
-/// Solves a programme; see [`super::solve`].
+/// Solves a programme; see [`super::solve_generally`].
 pub fn solve(program: &Program, limits: Limits) -> Candidate {
     lapack::keep_linked();
     let Some(form) = ConicForm::new(program) else { return failed(0) };
@@ -489,18 +489,18 @@ mod tests {
     #[test]
     fn stopping_early_is_not_solving() {
         let program = mixed(30, 4, 6, &[1, 2, 5, 20], 9);
-        let stopped = super::super::solve(&program, Limits { iterations: 3, ..Limits::default() });
+        let stopped = super::solve(&program, Limits { iterations: 3, ..Limits::default() });
         assert_eq!((stopped.status, stopped.iterations), (Status::Inaccurate, 3));
         assert_eq!(stopped.block_multipliers.len(), 4);
-        let unstarted = super::super::solve(&program, Limits { iterations: 0, ..Limits::default() });
+        let unstarted = super::solve(&program, Limits { iterations: 0, ..Limits::default() });
         assert_eq!((unstarted.status, unstarted.iterations), (Status::Failed, 0));
         for seconds in [0.0, -1.0, f64::NAN] {
-            let late = super::super::solve(&program, Limits { seconds, ..Limits::default() });
+            let late = super::solve(&program, Limits { seconds, ..Limits::default() });
             assert_eq!(late.status, Status::Failed);
         }
         // Without blocks there is nothing a check could repair.
         let linear = mixed(5, 2, 9, &[], 10);
-        let stopped = super::super::solve(&linear, Limits { iterations: 2, ..Limits::default() });
+        let stopped = super::solve(&linear, Limits { iterations: 2, ..Limits::default() });
         assert_eq!(stopped.status, Status::Failed);
     }
 

@@ -1,7 +1,7 @@
 //! A request to a numerical solver and what comes back: a candidate, never a proof.
 //!
 //! Two solvers stand behind it. `interior.rs` is made for the structure of programmes over moments and is several times faster; what it
-//! does not solve, and what has no solution, is left to the general one behind `clarabel.rs`.
+//! does not solve well, and what has no solution, is left to the general one behind `clarabel.rs`.
 
 mod clarabel;
 mod dense;
@@ -65,7 +65,7 @@ pub struct Candidate {
 ///
 /// ```
 /// use bitassay::relaxation::program::{Block, Program, Row, Term};
-/// use bitassay::solver::{Limits, Status, solve};
+/// use bitassay::solver::{Limits, Status, solve_generally};
 ///
 /// // The largest v such that the matrix with rows (w, v) and (v, w) is positive semidefinite, where w = 3.
 /// let term = |row, column, variable| Term { row, column, variable, coefficient: 1.0 };
@@ -75,22 +75,18 @@ pub struct Candidate {
 ///     inequalities: vec![],
 ///     blocks: vec![Block { side: 2, terms: vec![term(0, 0, 1), term(1, 0, 0), term(1, 1, 1)] }],
 /// };
-/// let candidate = solve(&program, Limits::default());
+/// let candidate = solve_generally(&program, Limits::default());
 /// assert_eq!(candidate.status, Status::Solved);
 /// assert!((candidate.values[0] - 3.0).abs() < 1e-6);
 /// ```
-pub fn solve(program: &Program, limits: Limits) -> Candidate {
-    solve_structured(program, limits).unwrap_or_else(|| solve_generally(program, limits))
-}
-
-/// The same with the solver that is made for programmes over moments alone; `None` where it has no useful answer.
-pub fn solve_structured(program: &Program, limits: Limits) -> Option<Candidate> {
-    interior::solve(program, limits)
-}
-
-/// The same with the general solver alone, which is slower and gets further where constraints have no interior.
 pub fn solve_generally(program: &Program, limits: Limits) -> Candidate {
     clarabel::solve(program, limits)
+}
+
+/// The same with the solver that is made for programmes over moments, several times faster; `None` where it has no useful answer: for one,
+/// where there is no solution.
+pub fn solve_structured(program: &Program, limits: Limits) -> Option<Candidate> {
+    interior::solve(program, limits)
 }
 
 /// Numbers that look random and are the same in every run.
