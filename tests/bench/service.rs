@@ -112,7 +112,8 @@ impl Served {
             });
         });
         let address = address.recv().expect("a server");
-        RECORD.get_or_init(|| first_record(address).into());
+        let record = first_record(address);
+        RECORD.get_or_init(|| record.into());
         BYTES.get_or_init(|| bytes_of_a_certification(address, &folder.path().join("ledger.sqlite")));
         Self { address, stop, thread, _folder: folder }
     }
