@@ -24,7 +24,7 @@ use uuid::{NoContext, Uuid};
 
 pub use self::{
     access::{AccessError, Caller, Scope},
-    budgets::ProfileError,
+    budgets::DocumentError,
     commitments::{Listed, OrderError},
     forecasts::ForecastError,
     solvers::{Certifier, SolveError, Solvers},

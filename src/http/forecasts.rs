@@ -15,8 +15,7 @@ use super::{
     wire::{Payload, Query, json},
 };
 use crate::{
-    fault::Fault,
-    forecast::{Forecast, ForecastDocument, ForecastRequest, csv, picture},
+    forecast::{Forecast, ForecastDocument, csv, picture},
     service::Service,
 };
 
@@ -43,9 +42,7 @@ pub async fn post(
     payload: Payload<FORECAST_LIMIT>,
 ) -> Result<Response<Body>, Problem> {
     let document: ForecastDocument = payload.object("A forecast's request")?;
-    let impossible = |fault: Fault| Problem::body(StatusCode::UNPROCESSABLE_ENTITY, fault);
-    let request = ForecastRequest::try_from(document).map_err(impossible)?;
-    let forecast = service.forecast(request).await?;
+    let forecast = service.forecast(service.read_forecast(document).await?).await?;
     let unwritable = |error: &(dyn std::error::Error + 'static)| Problem::internal(error);
     let vary = [(header::VARY, "Accept")];
     let body = match offer {

@@ -14,7 +14,7 @@ use crate::{
     batch::BatchFault,
     fault::Fault,
     ledger::{LedgerError, seal::SealError, writer::WriteError},
-    service::{Check, ForecastError, OrderError, ProfileError, SolveError, SubmitError},
+    service::{Check, DocumentError, ForecastError, OrderError, SolveError, SubmitError},
 };
 
 /// Media type of every error.
@@ -251,11 +251,11 @@ impl From<SealError> for Problem {
     }
 }
 
-impl From<ProfileError> for Problem {
-    fn from(error: ProfileError) -> Self {
+impl From<DocumentError> for Problem {
+    fn from(error: DocumentError) -> Self {
         match error {
-            ProfileError::Document(fault) => Self::body(StatusCode::UNPROCESSABLE_ENTITY, fault),
-            ProfileError::Ledger(error) => error.into(),
+            DocumentError::Document(fault) => Self::body(StatusCode::UNPROCESSABLE_ENTITY, fault),
+            DocumentError::Ledger(error) => error.into(),
         }
     }
 }

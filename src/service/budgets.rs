@@ -4,15 +4,16 @@ use super::Service;
 use crate::{
     clock::Stamp,
     fault::Fault,
+    forecast::{ForecastDocument, ForecastRequest},
     leakage::budget::Budget,
     ledger::{LedgerError, history::Page, rows::KeptBudget},
     profile::{Profile, ProfileDocument},
     scenario::LeakageDocument,
 };
 
-/// Why a profile was not taken. Nothing was recorded.
+/// Why a document was not taken. Nothing was recorded.
 #[derive(Debug, thiserror::Error)]
-pub enum ProfileError {
+pub enum DocumentError {
     #[error(transparent)]
     Document(#[from] Fault),
     #[error(transparent)]
@@ -49,9 +50,18 @@ impl Service {
     ///
     /// # Errors
     /// What is wrong with the document, or the ledger's.
-    pub async fn read_profile(&self, mut document: ProfileDocument) -> Result<Profile, ProfileError> {
+    pub async fn read_profile(&self, mut document: ProfileDocument) -> Result<Profile, DocumentError> {
         self.fetch_budget(&mut document.scenario.leakage).await?.map_err(|fault| fault.under("/scenario"))?;
         Ok(Profile::try_from(document)?)
+    }
+
+    /// A forecast's request from its document, in which a stored budget may be named likewise.
+    ///
+    /// # Errors
+    /// What is wrong with the document, or the ledger's.
+    pub async fn read_forecast(&self, mut document: ForecastDocument) -> Result<ForecastRequest, DocumentError> {
+        self.fetch_budget(&mut document.scenario.leakage).await?.map_err(|fault| fault.under("/scenario"))?;
+        Ok(ForecastRequest::try_from(document)?)
     }
 
     /// Puts a stored budget in the place of its digest. What is left then needs no ledger to be understood. The fault, if the digest is

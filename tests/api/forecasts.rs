@@ -101,6 +101,26 @@ fn what_cannot_be_forecast_is_refused_with_a_pointer() {
     }
 }
 
+/// A stored budget stands for its figure, as in a profile.
+#[test]
+fn a_forecast_may_name_a_stored_budget() {
+    let (running, client) = with_rig();
+    let budget = json!({ "carrier_dimension": 1, "contributions": [{ "source": "side-mode", "weight": 0.1 }] });
+    let digest = client.call("POST", "/v1/leakage", &[JSON], Some(budget.to_string().as_bytes())).json()["digest"].clone();
+    let sweep = json!({ "visibility": { "from": 0.9, "to": 1.0, "points": 2 } });
+    let forecast = |leakage: &Value| {
+        let mut request = request();
+        request["sweep"] = sweep.clone();
+        request["thresholds"] = json!({});
+        request["scenario"]["leakage"] = leakage.clone();
+        post(&running, &request, "*/*")
+    };
+    let (stored, stated) = (forecast(&digest).expect(200).json(), forecast(&json!(0.1)).expect(200).json());
+    assert_eq!(stored["curves"], stated["curves"]);
+    let unknown = json!(format!("sha256:{}", "0".repeat(64)));
+    assert_eq!(forecast(&unknown).expect(422).json()["pointer"], "/scenario/leakage");
+}
+
 /// Too much work is refused with the figure, and not begun.
 #[test]
 fn a_grid_that_would_take_too_long_is_refused() {
