@@ -249,6 +249,7 @@ fn level_name(forecast: &Forecast) -> &'static str {
         Level::Lean => "lean",
         Level::Standard => "standard",
         Level::Sharp => "sharp",
+        Level::Keen => "keen",
     }
 }
 

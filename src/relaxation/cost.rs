@@ -24,6 +24,7 @@ pub fn choose(choice: LevelChoice, scenario: &Scenario, groups: usize) -> Result
         LevelChoice::Lean => (Level::Lean, "/level", "this level"),
         LevelChoice::Standard => (Level::Standard, "/level", "this level"),
         LevelChoice::Sharp => (Level::Sharp, "/level", "this level"),
+        LevelChoice::Keen => (Level::Keen, "/level", "this level"),
         LevelChoice::Auto => {
             let affordable = |level: &Level| estimate(*level, scenario, groups) <= AUTO_BUDGET;
             (Level::ALL.into_iter().rev().find(affordable).unwrap_or(Level::Sparse), "/scenario", "every level")

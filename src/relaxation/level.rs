@@ -6,6 +6,14 @@
 //! | `lean` | `V M`, `R M`, `N R` | 19 + 14 |
 //! | `standard` | … and `R_x R_x'` (x ≠ x') | 25 + 20 |
 //! | `sharp` | … and `R M_y M_y'` (y ≠ y') | 33 + 28 |
+//! | `keen` | … and `R N M`, `N R_x R_x'`, `R_x N R_x'` (x ≠ x') | 59 + 54 |
+//!
+//! What leaks is what the products of two letters say little about: at leakages of 10⁻² and more the levels up to `sharp` stay 10⁻³ to 10⁻¹ above
+//! the best explicit attacks. Those of three letters with an `N` between or beside two others close that, where an adversary is held to her mean
+//! leakage, to 10⁻⁵ and less. Of the three kinds none can be left out (preparations 3, leakage 0.1 on average: 0.89742, 0.9155 and 0.9128 without one
+//! of them, 0.94331 at `sharp`, 0.89732 with all, 0.89732 the attack). With three outcomes and leakage in every emission something remains: the
+//! relaxation says of a group's states that they leak little on the whole, not that each does. `ε R_x − R_x N R_x ⪰ 0`, which holds
+//! since `R_x` has rank one, would say it, with witnesses that depend on the leakage.
 //!
 //! Every set is closed under reversal: a product stands for itself and its adjoint. `sparse` has no products of two preparations; the number of
 //! its moments grows linearly with X.
@@ -26,11 +34,12 @@ pub enum Level {
     Lean,
     Standard,
     Sharp,
+    Keen,
 }
 
 impl Level {
     /// Coarsest first.
-    pub const ALL: [Self; 4] = [Self::Sparse, Self::Lean, Self::Standard, Self::Sharp];
+    pub const ALL: [Self; 5] = [Self::Sparse, Self::Lean, Self::Standard, Self::Sharp, Self::Keen];
 
     /// The next coarser level, if there is one.
     pub fn coarser(self) -> Option<Self> {
@@ -39,6 +48,7 @@ impl Level {
             Self::Lean => Some(Self::Sparse),
             Self::Standard => Some(Self::Lean),
             Self::Sharp => Some(Self::Standard),
+            Self::Keen => Some(Self::Sharp),
         }
     }
 
@@ -51,7 +61,7 @@ impl Level {
             .collect();
         let families = match self {
             Self::Sparse => sparse(algebra, &states, &outcomes),
-            Self::Lean | Self::Standard | Self::Sharp => vec![self.monomials(algebra, &states, &outcomes)],
+            Self::Lean | Self::Standard | Self::Sharp | Self::Keen => vec![self.monomials(algebra, &states, &outcomes)],
         };
         families.iter().flat_map(|family| split(family, algebra)).filter(|basis| !basis.monomials.is_empty()).collect()
     }
@@ -84,8 +94,24 @@ impl Level {
                 }
             }
         }
+        if self >= Self::Keen {
+            monomials.extend(leaking(algebra, states, outcomes));
+        }
         monomials
     }
+}
+
+/// Products of three letters, one of them `N`: `R N M`, `N R R'` and `R N R'`.
+fn leaking(algebra: &Algebra, states: &[Letter], outcomes: &[Letter]) -> Vec<Monomial> {
+    let outside = Letter::Outside;
+    let leak: Vec<Letter> = states.iter().zip(algebra.exact()).filter(|(_, exact)| !**exact).map(|(state, _)| *state).collect();
+    let mut monomials = Vec::new();
+    for (i, state) in leak.iter().enumerate() {
+        monomials.extend(outcomes.iter().map(|outcome| Monomial::new([*state, outside, *outcome])));
+        monomials.extend(states.iter().filter(|other| *other != state).map(|other| Monomial::new([outside, *state, *other])));
+        monomials.extend(leak[i + 1..].iter().map(|other| Monomial::new([*state, outside, *other])));
+    }
+    monomials
 }
 
 fn of_two_measurements(one: &Letter, other: &Letter) -> bool {
@@ -133,4 +159,5 @@ pub enum LevelChoice {
     Lean,
     Standard,
     Sharp,
+    Keen,
 }

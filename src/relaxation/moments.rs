@@ -104,6 +104,7 @@ mod tests {
         assert_eq!(sides(4, 2, 2, false, Level::Lean), [19, 14]);
         assert_eq!(sides(4, 2, 2, false, Level::Standard), [25, 20]);
         assert_eq!(sides(4, 2, 2, false, Level::Sharp), [33, 28]);
+        assert_eq!(sides(4, 2, 2, false, Level::Keen), [59, 54]);
         assert_eq!(sides(4, 2, 2, true, Level::Standard), [21, 14]);
         assert_eq!(sides(8, 3, 2, true, Level::Lean), [36, 24]);
     }
@@ -112,7 +113,7 @@ mod tests {
     #[test]
     fn every_diagonal_entry_holds_a_moment() {
         for exact in [false, true] {
-            for (outcomes, level) in [(2, Level::Sharp), (3, Level::Sharp), (2, Level::Sparse), (3, Level::Sparse)] {
+            for (outcomes, level) in [(2, Level::Keen), (3, Level::Keen), (2, Level::Sparse), (3, Level::Sparse)] {
                 let geometry = Geometry { preparations: 3, measurements: 2, outcomes, carrier_dimension: 2 };
                 let moments = Moments::new(Algebra::new(geometry, &[exact; 3]), level).unwrap();
                 for entry in moments.blocks().iter().flatten().filter(|entry| entry.row == entry.column) {

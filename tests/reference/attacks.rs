@@ -39,6 +39,13 @@ fn noisy_two_to_one_code() {
     }
 }
 
+/// The level made for leakage leaves nothing between bound and attack.
+#[test]
+fn noisy_two_to_one_code_to_the_last_digits() {
+    let (bound, attack) = bracket(&scenario(4, 2, 2, 2, 1e-2), &code(2, 0.99), Level::Keen);
+    assert!(bound - attack.guessing_probability() < 1e-5, "{bound}");
+}
+
 /// Without a hint the search takes longer, and arrives at the same.
 #[test]
 fn a_search_without_hints_finds_the_same() {

@@ -76,6 +76,9 @@ def cases():
     for leakage, success in ((0.05, 0.51), (0.1, 0.6)):
         for reading in (average, every):
             add(f"three-states-{leakage}-{reading}", 1, leakage, reading, "lean", three_states(success), (1, 0))
+    for reading in (average, every):
+        add(f"three-of-the-code-keen-0.1-{reading}", 2, 0.1, reading, "keen", code(0.99)[:3])
+    add("three-of-the-code-keen-mixed-leakages", 2, [0.03, 0, 0.05], average, "keen", code(0.99)[:3])
     add("2to1-mixed-leakages", 2, [0, 0.001, 0.003, 0], average, "standard", code(0.98), (2, 0))
     add("2to1-mixed-leakages-every", 2, [0, 0.001, 0.003, 0], every, "lean", code(0.98), (2, 1))
     return found
@@ -87,10 +90,13 @@ def monomials(level, preparations, measurements, outcomes):
     letters = [("M", b, y) for y in range(measurements) for b in range(outcomes - 1)]
     words = [(r,) for r in states] + [(("V",),)]
     words += [(("V",), m) for m in letters] + [(r, m) for r in states for m in letters] + [(("N",), r) for r in states]
-    if level in ("standard", "sharp"):
+    if level in ("standard", "sharp", "keen"):
         words += [(one, two) for one in states for two in states if one != two]
-    if level == "sharp":
+    if level in ("sharp", "keen"):
         words += [(r, one, two) for r in states for one in letters for two in letters if one[2] != two[2]]
+    if level == "keen":
+        words += [(r, ("N",), m) for r in states for m in letters]
+        words += [word for one in states for two in states if one != two for word in ((("N",), one, two), (one, ("N",), two))]
     return sorted(set(words) | {word[::-1] for word in words})
 
 

@@ -14,7 +14,7 @@ OTHERS = {
     "rounds": ["independent", "plug-in", "memory"],
     "entropy": ["auto", "guessing", "power"],
     "verdict": ["certified", "refused", "estimate"],
-    "level": ["sparse", "lean", "standard", "sharp"],
+    "level": ["sparse", "lean", "standard", "sharp", "keen"],
     "parity": ["even", "odd"],
     "kind": ["guess", "power", "contradiction"],
     "reason": ["zero-bound", "outside-model", "unverified", "uncommitted"],

@@ -301,10 +301,14 @@ class Witness:
         else:
             wanted = [(r,) for r in states] + [(V,)] + [(V, m) for m in outcomes] + [(r, m) for r in states for m in outcomes]
             wanted += [(N, r) for r in states if not self.exact[r[1]]]
-            if level in ("standard", "sharp"):
+            if level in ("standard", "sharp", "keen"):
                 wanted += [(one, two) for one in states for two in states if one < two]
-            if level == "sharp":
+            if level in ("sharp", "keen"):
                 wanted += [(r, one, two) for r in states for one in outcomes for two in outcomes if one[2] != two[2]]
+            if level == "keen":
+                leaking = [r for r in states if not self.exact[r[1]]]
+                wanted += [(r, N, m) for r in leaking for m in outcomes] + [(N, r, other) for r in leaking for other in states if r != other]
+                wanted += [(one, N, two) for one in leaking for two in leaking if one < two]
             families = [wanted]
         # In the flat algebra the carrier is the identity.
         inner = lambda word: tuple(letter for letter in word if letter != V) if self.algebra.flat else word
