@@ -76,9 +76,9 @@ def cases():
     for leakage, success in ((0.05, 0.51), (0.1, 0.6)):
         for reading in (average, every):
             add(f"three-states-{leakage}-{reading}", 1, leakage, reading, "lean", three_states(success), (1, 0))
-    for reading in (average, every):
-        add(f"three-of-the-code-keen-0.1-{reading}", 2, 0.1, reading, "keen", code(0.99)[:3])
-    add("three-of-the-code-keen-mixed-leakages", 2, [0.03, 0, 0.05], average, "keen", code(0.99)[:3])
+    for leakage, reading in ((0.003, average), (0.01, every)):
+        add(f"three-of-the-code-keen-{leakage}-{reading}", 2, leakage, reading, "keen", code(0.99)[:3], (0, 1))
+    add("three-of-the-code-keen-mixed-leakages", 2, [0.003, 0, 0.005], average, "keen", code(0.99)[:3], (0, 1))
     add("2to1-mixed-leakages", 2, [0, 0.001, 0.003, 0], average, "standard", code(0.98), (2, 0))
     add("2to1-mixed-leakages-every", 2, [0, 0.001, 0.003, 0], every, "lean", code(0.98), (2, 1))
     return found
