@@ -96,12 +96,6 @@ impl Client {
         self.call("POST", &format!("/v1/rigs/{rig}/batches"), &headers, Some(batch.to_string().as_bytes()))
     }
 
-    /// As [`Self::post_batch`]; `None` if the server has gone.
-    pub fn try_post_batch(&self, rig: &str, key: &str, batch: &Value) -> Option<Reply> {
-        let headers = [("content-type", "application/json"), ("idempotency-key", key)];
-        self.try_call("POST", &format!("/v1/rigs/{rig}/batches"), &headers, Some(batch.to_string().as_bytes()))
-    }
-
     pub fn post_csv(&self, rig: &str, key: &str, query: &str, rows: &str) -> Reply {
         let headers = [("content-type", "text/csv"), ("idempotency-key", key)];
         self.call("POST", &format!("/v1/rigs/{rig}/batches?{query}"), &headers, Some(rows.as_bytes()))

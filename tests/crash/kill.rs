@@ -8,9 +8,10 @@ use std::{
 
 use bitassay::ledger::checkpoint::{Checkpoint, Verifier};
 use rand::{RngExt, SeedableRng, rngs::StdRng};
+use serde_json::Value;
 
 use crate::{
-    client::Reply,
+    client::{Client, Reply},
     process::{Process, Site, batch, bitassay, on, status},
 };
 
@@ -18,6 +19,12 @@ const POSTERS: u64 = 4;
 
 fn number(variable: &str, otherwise: u64) -> u64 {
     std::env::var(variable).map_or(otherwise, |text| text.parse().unwrap())
+}
+
+/// The answer, or `None` if the server has gone.
+fn post(client: &Client, key: &str, batch: &Value) -> Option<Reply> {
+    let headers = [("content-type", "application/json"), ("idempotency-key", key)];
+    client.try_call("POST", "/v1/rigs/bench/batches", &headers, Some(batch.to_string().as_bytes()))
 }
 
 #[test]
@@ -46,7 +53,7 @@ fn what_was_acknowledged_survives_every_kill() {
                             *next += 1;
                             *next - 1
                         };
-                        let reply = client.try_post_batch("bench", &format!("batch-{number}"), &batch(number, began));
+                        let reply = post(&client, &format!("batch-{number}"), &batch(number, began));
                         let Some(reply) = reply else { return };
                         answered.send((number, reply)).unwrap();
                     }
