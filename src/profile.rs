@@ -1,6 +1,6 @@
 //! What an operator declares about a rig.
 
-use std::fmt;
+use std::{fmt, str::FromStr};
 
 use serde::{Deserialize, Serialize};
 
@@ -31,6 +31,14 @@ impl TryFrom<String> for RigName {
         let letter = |byte: u8| byte.is_ascii_lowercase() || byte.is_ascii_digit();
         let fits = text.len() <= 63 && text.bytes().next().is_some_and(letter) && text.bytes().all(|byte| letter(byte) || byte == b'-');
         if fits { Ok(Self(text)) } else { Err(NoRigName) }
+    }
+}
+
+impl FromStr for RigName {
+    type Err = NoRigName;
+
+    fn from_str(text: &str) -> Result<Self, NoRigName> {
+        text.to_owned().try_into()
     }
 }
 

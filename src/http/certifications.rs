@@ -13,9 +13,10 @@ use utoipa::{IntoParams, ToSchema};
 
 use super::{
     access::Sees,
+    cursor,
     negotiation::{Offer, TakesJson, TakesTable},
     problem::{Problem, ProblemDocument},
-    wire::{CertificationPath, FromParameters, Parameters, Query, by_digest, cursor, json, link_next, no_certification, page},
+    wire::{CertificationPath, FromParameters, Parameters, Query, by_digest, json, link_next, no_certification, page},
 };
 use crate::{
     bundle::Standing,
@@ -228,7 +229,7 @@ pub async fn list(
     let within = sees.within(rig.as_ref())?;
     let filter = Filter { rig: rig.clone(), within, verdict: *verdict, since: *since, until: *until, before: *before };
     let Page { items, more } = service.history(&filter, *limit).await?;
-    let next = items.last().filter(|_| more).map(|last| cursor(CURSOR, last.entry));
+    let next = items.last().filter(|_| more).map(|last| cursor::write(CURSOR, last.entry));
     let link = next.as_deref().map(|next| link_next(&query.target(next)));
     let vary = [(header::VARY, "Accept")];
     let body = match offer {

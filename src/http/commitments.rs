@@ -13,12 +13,10 @@ use utoipa::{IntoParams, ToSchema};
 use uuid::Uuid;
 
 use super::{
+    cursor,
     negotiation::TakesJson,
     problem::{Problem, ProblemDocument},
-    wire::{
-        CommitmentPath, FromParameters, Parameters, Payload, Query, RigPath, by_digest, cursor, json, link_next, no_commitment, no_rig,
-        page,
-    },
+    wire::{CommitmentPath, FromParameters, Parameters, Payload, Query, RigPath, by_digest, json, link_next, no_commitment, no_rig, page},
 };
 use crate::{
     clock::Stamp,
@@ -197,7 +195,7 @@ pub async fn list(
 ) -> Result<Response<Body>, Problem> {
     let CommitmentsQuery { cursor: before, limit } = query;
     let Listed { page: found, current } = service.commitments(&rig, before, limit).await?.ok_or_else(no_rig)?;
-    let next = found.items.last().filter(|_| found.more).map(|last| cursor(CURSOR, last.number));
+    let next = found.items.last().filter(|_| found.more).map(|last| cursor::write(CURSOR, last.number));
     let link = next.as_deref().map(|next| link_next(&format!("/v1/rigs/{rig}/commitments?limit={limit}&cursor={next}")));
     let items = found.items.iter().map(|item| text(&item.committed, Some(current == Some(item.committed.id))));
     let items: Vec<String> = items.collect::<Result<_, _>>()?;

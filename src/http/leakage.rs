@@ -12,9 +12,10 @@ use serde::Serialize;
 use utoipa::{IntoParams, ToSchema};
 
 use super::{
+    cursor,
     negotiation::TakesJson,
     problem::{Problem, ProblemDocument},
-    wire::{BudgetPath, FromParameters, Parameters, Payload, Query, cursor, json, link_next, page},
+    wire::{BudgetPath, FromParameters, Parameters, Payload, Query, json, link_next, page},
 };
 use crate::{
     clock::Stamp,
@@ -128,7 +129,7 @@ pub async fn list(
 ) -> Result<Response<Body>, Problem> {
     let BudgetsQuery { cursor: before, limit } = query;
     let found = service.budgets(before, limit).await?;
-    let next = found.items.last().filter(|_| found.more).map(|last| cursor(CURSOR, last.number));
+    let next = found.items.last().filter(|_| found.more).map(|last| cursor::write(CURSOR, last.number));
     let link = next.as_deref().map(|next| link_next(&format!("/v1/leakage?limit={limit}&cursor={next}")));
     let items: Vec<String> = found.items.iter().map(item).collect::<Result<_, _>>()?;
     Ok((link, json(StatusCode::OK, page(items.into_iter(), next.as_deref()))).into_response())

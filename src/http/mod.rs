@@ -5,6 +5,7 @@ mod batches;
 mod certifications;
 mod commitments;
 mod condition;
+pub mod cursor;
 mod forecasts;
 mod health;
 mod intake;

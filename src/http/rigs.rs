@@ -13,9 +13,10 @@ use utoipa::{IntoParams, ToSchema};
 
 use super::{
     condition::{Expects, Holds, entity_tag},
+    cursor,
     negotiation::TakesJson,
     problem::{Problem, ProblemDocument},
-    wire::{FromParameters, Parameters, Payload, Query, RigPath, cursor, json, link_next, no_rig, page},
+    wire::{FromParameters, Parameters, Payload, Query, RigPath, json, link_next, no_rig, page},
 };
 use crate::{
     clock::Stamp,
@@ -141,21 +142,10 @@ pub struct RigPage {
 pub struct RigsQuery {
     /// Where the page begins: the `next` of the page before.
     #[param(value_type = Option<String>)]
-    cursor: Option<RigAfter>,
+    cursor: Option<RigName>,
     /// Items on the page.
     #[param(minimum = 1, maximum = 200, default = 50, value_type = Option<u32>)]
     limit: u32,
-}
-
-/// The rig that a page begins after.
-struct RigAfter(RigName);
-
-impl std::str::FromStr for RigAfter {
-    type Err = crate::profile::NoRigName;
-
-    fn from_str(text: &str) -> Result<Self, Self::Err> {
-        RigName::try_from(text.to_owned()).map(Self)
-    }
 }
 
 impl FromParameters for RigsQuery {
@@ -176,8 +166,8 @@ pub async fn list(
     State(service): State<Arc<Service>>,
 ) -> Result<Response<Body>, Problem> {
     let RigsQuery { cursor: after, limit } = query;
-    let found = service.rigs(after.map(|RigAfter(rig)| rig).as_ref(), limit).await?;
-    let next = found.items.last().filter(|_| found.more).map(|last| cursor(CURSOR, &last.rig));
+    let found = service.rigs(after.as_ref(), limit).await?;
+    let next = found.items.last().filter(|_| found.more).map(|last| cursor::write(CURSOR, &last.rig));
     let link = next.as_deref().map(|next| link_next(&format!("/v1/rigs?limit={limit}&cursor={next}")));
     let items: Result<Vec<String>, _> = found.items.into_iter().map(|item| serde_json::to_string(&RigItem::from(item))).collect();
     let text = page(items.map_err(|error| Problem::internal(&error))?.into_iter(), next.as_deref());

@@ -1,6 +1,6 @@
 //! What is taken from requests, and the shapes of answers that several resources share.
 
-use std::{str::FromStr, sync::Arc};
+use std::{fmt::Display, str::FromStr, sync::Arc};
 
 use axum::{
     body::{Body, Bytes, to_bytes},
@@ -8,12 +8,12 @@ use axum::{
     http::{HeaderMap, HeaderName, Response, StatusCode, Uri, header, request::Parts},
     response::IntoResponse,
 };
-use base64::{Engine, engine::general_purpose::URL_SAFE_NO_PAD};
 use serde::de::DeserializeOwned;
 use uuid::Uuid;
 
 use super::{
     access::Sees,
+    cursor,
     intake::too_large,
     problem::{Culprit, Problem},
 };
@@ -116,7 +116,7 @@ impl Parameters {
         Ok(Some(value))
     }
 
-    pub fn value<T: FromStr<Err: std::fmt::Display>>(&mut self, name: &str) -> Result<Option<T>, Problem> {
+    pub fn value<T: FromStr<Err: Display>>(&mut self, name: &str) -> Result<Option<T>, Problem> {
         let read = |text: String| text.parse().map_err(|error| Problem::parameter(name, format!("{name}: {error}")));
         self.text(name)?.map(read).transpose()
     }
@@ -143,13 +143,9 @@ impl Parameters {
     }
 
     /// Where a page begins; `kind` keeps the cursors of one collection out of another.
-    pub fn cursor<T: FromStr>(&mut self, kind: &str) -> Result<Option<T>, Problem> {
-        let read = |text: String| {
-            let bytes = URL_SAFE_NO_PAD.decode(&text).ok();
-            let place = bytes.as_deref().and_then(|bytes| str::from_utf8(bytes).ok()?.strip_prefix(kind)?.parse().ok());
-            place.ok_or_else(|| Problem::parameter("cursor", "This is no cursor of this collection; take it from `next` as it is."))
-        };
-        self.text("cursor")?.map(read).transpose()
+    pub fn cursor<T: FromStr + Display>(&mut self, kind: &str) -> Result<Option<T>, Problem> {
+        let wrong = || Problem::parameter("cursor", "This is no cursor of this collection; take it from `next` as it is.");
+        self.text("cursor")?.map(|text| cursor::read(kind, &text).ok_or_else(wrong)).transpose()
     }
 
     fn finish(self) -> Result<(), Problem> {
@@ -158,11 +154,6 @@ impl Parameters {
             None => Ok(()),
         }
     }
-}
-
-/// The cursor that [`Parameters::cursor`] reads.
-pub fn cursor(kind: &str, place: impl std::fmt::Display) -> String {
-    URL_SAFE_NO_PAD.encode(format!("{kind}{place}"))
 }
 
 /// What a resource takes from the query.

@@ -63,6 +63,9 @@ pub enum CheckError {
 
 /// Largest block side, and largest sum of sides over blocks, that is worth checking.
 const MAX_SIDE: usize = 512;
+/// Most letters of a monomial; those of the levels have three at most. What a product comes to doubles with every carrier in it, so without a
+/// limit a short document would keep the check busy for ever.
+const MAX_LETTERS: usize = 4;
 /// Every integer of a witness stays below this in size, so that any JSON reader keeps it.
 const MAX_INTEGER: i64 = 1 << 53;
 
@@ -194,6 +197,9 @@ fn check_shape(witness: &Witness) -> Result<(), CheckError> {
     let sides: Vec<usize> = witness.bases.iter().map(|span| span.monomials.len()).collect();
     if sides.iter().sum::<usize>() > MAX_SIDE {
         return malformed("the blocks are too large");
+    }
+    if witness.bases.iter().flat_map(|span| &span.monomials).any(|monomial| monomial.letters().len() > MAX_LETTERS) {
+        return malformed("a monomial is too long");
     }
     let triangular = |rows: &Vec<Vec<i64>>, side: usize| rows.len() == side && rows.iter().enumerate().all(|(i, row)| row.len() == i + 1);
     let complete =

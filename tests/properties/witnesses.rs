@@ -9,7 +9,7 @@ use bitassay::{
     solver::Limits,
     verify::verify,
     witness::{
-        check::{Place, check, proves_contradiction},
+        check::{CheckError, Place, check, proves_contradiction},
         witness::Witness,
     },
 };
@@ -79,6 +79,22 @@ fn a_witness_with_one_integer_changed_is_not_accepted() {
     assert!(changed > 300);
     // Where the change happens to cancel between two words, the document proves the same constant in another way.
     assert!(passed * 50 < changed, "{passed} of {changed} changed witnesses pass the exact check");
+}
+
+/// The check of a monomial takes twice as long with every carrier that it holds, so long ones are turned away unseen.
+#[test]
+fn a_witness_with_a_long_monomial_is_not_looked_at() {
+    let (_, witnesses) = certified();
+    let with = |monomial: &str| {
+        let mut witness = witnesses[0].clone();
+        witness.bases[0].monomials[0] = monomial.parse().unwrap();
+        check(&witness).unwrap_err()
+    };
+    assert_eq!(with("R0 V M0|0 V"), CheckError::Constants);
+    for carriers in [4, 60] {
+        let monomial = format!("R0{}", " V".repeat(carriers));
+        assert_eq!(with(&monomial), CheckError::Malformed("a monomial is too long".into()), "{carriers} carriers");
+    }
 }
 
 /// Any figure of a record that is changed is found.

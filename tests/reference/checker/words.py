@@ -29,7 +29,9 @@ def is_natural(text, below):
 def parse(text, geometry):
     """The letters of a monomial such as "R0 M0|1"."""
     letters = []
-    for part in text.split(" "):
+    parts = text.split(" ")
+    require(len(parts) <= 4, "a monomial has more than four letters")
+    for part in parts:
         if part in ("V", "N"):
             letters.append((part,))
         elif part.startswith("R") and is_natural(part[1:], geometry["preparations"]):

@@ -1,0 +1,1 @@
+//! Nothing: what is wanted is the archive that the dependency's build leaves.
