@@ -7,7 +7,7 @@ use crate::{
     fault::Fault,
     relaxation::{
         cells::COVER_CELLS,
-        cost::choose,
+        cost::{LIMIT, choose, estimate},
         level::{Level, LevelChoice},
     },
     scenario::{Scenario, ScenarioDocument, Setting},
@@ -156,7 +156,12 @@ impl Starts {
     /// As [`choose`].
     pub fn of(level: LevelChoice, scenario: &Scenario) -> Result<Self, Fault> {
         let guessing = choose(level, scenario, scenario.geometry().outcomes)?;
-        let power = [level, LevelChoice::Auto].into_iter().find_map(|choice| choose(choice, scenario, COVER_CELLS).ok());
+        // A level that was asked for may be too much for so many groups; then the next coarser one that is not.
+        let affordable = |level: &Level| estimate(*level, scenario, COVER_CELLS) <= LIMIT;
+        let power = match level {
+            LevelChoice::Auto => choose(level, scenario, COVER_CELLS).ok(),
+            _ => std::iter::successors(Some(guessing), |level| level.coarser()).find(affordable),
+        };
         Ok(Self { guessing, power })
     }
 }
@@ -259,5 +264,29 @@ impl Request {
             Data::Counts(counts) => Some(counts.rounds_at(setting)),
             Data::Behaviour(_) | Data::Scores(_) => None,
         }
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::scenario::{LeakageDocument, LeakageReading};
+    /// A level that is affordable for guessing probabilities alone is no reason to bound power entropies more loosely than the level below.
+    #[test]
+    fn a_sharper_level_starts_no_coarser_anywhere() {
+        let document = ScenarioDocument {
+            preparations: 4,
+            measurements: 2,
+            outcomes: 2,
+            carrier_dimension: 2,
+            leakage: LeakageDocument::Uniform(1e-2),
+            leakage_holds: LeakageReading::OnAverage,
+            targets: vec![Setting { x: 0, y: 0 }],
+        };
+        let scenario = Scenario::try_from(document).unwrap();
+        let [sharp, keen] = [LevelChoice::Sharp, LevelChoice::Keen].map(|level| Starts::of(level, &scenario).unwrap());
+        assert_eq!((keen.guessing, sharp.guessing), (Level::Keen, Level::Sharp));
+        assert!(keen.power >= sharp.power, "{keen:?} {sharp:?}");
+        assert!(choose(LevelChoice::Keen, &scenario, COVER_CELLS).is_err(), "nothing is tried here");
     }
 }

@@ -113,6 +113,7 @@ impl Service {
     pub fn new(ledger: Ledger, solvers: Solvers, clock: Arc<dyn Clock>) -> Arc<Self> {
         let turns = Arc::new(Turns::default());
         let metrics = Metrics::new(ledger.writer.group_sizes.clone());
+        let keys = access::Keys::watch(ledger.history.clone());
         Arc::new(Self {
             ledger,
             solvers,
@@ -120,7 +121,7 @@ impl Service {
             turns,
             kept: KeptWitnesses::default(),
             newest: Newest::default(),
-            keys: access::Keys::default(),
+            keys,
             metrics,
             accepting: AtomicBool::new(true),
             active: watch::Sender::new(0),

@@ -216,7 +216,8 @@ async fn prepare(connection: &mut SqliteConnection, key: &Key, fault: &Fault, no
         let body = [("key".to_owned(), current.into()), ("replaces".to_owned(), known.into())];
         let subject = number.to_string();
         let draft = Draft { kind: "key", subject, recorded_at: now, body: body.into_iter().collect(), texts: vec![] };
-        tree::append(&mut transaction, &draft).await?;
+        let mut frontier = tree::Frontier::read(&mut transaction).await?;
+        tree::append(&mut transaction, &mut frontier, &draft, tree::INSERT).await?;
     }
     transaction.commit().await?;
     Ok(())

@@ -154,7 +154,7 @@ mod tests {
         super::{
             MIGRATIONS,
             source::Draft,
-            tree::{append, leaf_hash},
+            tree::{Frontier, INSERT, append, leaf_hash},
         },
         *,
     };
@@ -165,11 +165,13 @@ mod tests {
     async fn stored_proofs_are_those_of_the_tree_in_memory() {
         let mut connection = SqliteConnection::connect("sqlite::memory:").await.unwrap();
         MIGRATIONS.run(&mut connection).await.unwrap();
+        let mut frontier = Frontier::default();
         let mut tree = MemoryBackedTree::<Sha256, String>::new();
         for size in 1..=33 {
             let recorded_at = Stamp::from_microseconds(size as i64).unwrap();
             let draft = Draft { kind: "key", subject: size.to_string(), recorded_at, body: serde_json::Map::new(), texts: vec![] };
-            append(&mut connection, &draft).await.unwrap();
+            append(&mut connection, &mut frontier, &draft, INSERT).await.unwrap();
+            assert_eq!(Frontier::read(&mut connection).await.unwrap(), frontier);
             let line: String =
                 sqlx::query_scalar("SELECT entry FROM tree_leaves ORDER BY leaf DESC").fetch_one(&mut connection).await.unwrap();
             tree.push(line);

@@ -91,7 +91,8 @@ impl Tokens {
             .bind(document)
             .execute(&mut *transaction)
             .await?;
-        tree::log(&mut transaction, &TOKEN, &format!("{}/{}", change.token(), change.kind())).await?;
+        let mut frontier = tree::Frontier::read(&mut transaction).await?;
+        tree::log(&mut transaction, &mut frontier, &TOKEN, &format!("{}/{}", change.token(), change.kind())).await?;
         transaction.commit().await?;
         Ok(())
     }

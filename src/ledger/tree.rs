@@ -22,7 +22,7 @@ use sha2::{Digest, Sha256};
 use sqlx::SqliteConnection;
 
 use super::{
-    LedgerError,
+    LedgerError, proofs,
     source::{Draft, SOURCES, Source},
 };
 use crate::clock::Stamp;
@@ -103,52 +103,64 @@ impl Frontier {
     }
 }
 
+impl Frontier {
+    /// Of the stored tree.
+    ///
+    /// # Errors
+    /// The database's.
+    pub(super) async fn read(connection: &mut SqliteConnection) -> Result<Self, LedgerError> {
+        let size = proofs::size(&mut *connection).await?;
+        let mut frontier = Self { size, peaks: Vec::new() };
+        let mut end = 0;
+        for level in (0..u64::BITS).rev().filter(|level| size >> level & 1 == 1) {
+            end += 1 << level;
+            frontier.peaks.push(proofs::root_of(&mut *connection, end - (1 << level), end).await?);
+        }
+        Ok(frontier)
+    }
+}
+
 /// Logs a row that was just written, in the same transaction; answers with the leaf's index.
 ///
 /// # Errors
 /// The database's, among them a row that is logged already.
-pub(super) async fn log(connection: &mut SqliteConnection, source: &Source, subject: &str) -> Result<u64, LedgerError> {
+pub(super) async fn log(
+    connection: &mut SqliteConnection,
+    frontier: &mut Frontier,
+    source: &Source,
+    subject: &str,
+) -> Result<u64, LedgerError> {
     let draft = source.draft(connection, subject).await?.ok_or(LedgerError::Unlogged { kind: source.kind })?;
-    append(connection, &draft).await
+    append(connection, frontier, &draft, INSERT).await
 }
 
-/// Appends an entry; answers with its index. Use [`log`] for what has a row of its own.
+/// Adds a leaf. What is written after it in the same text is executed with it.
+pub(super) const INSERT: &str = "INSERT INTO tree_leaves (leaf, kind, subject, entry, nodes) VALUES (?1, ?2, ?3, ?4, ?5)";
+
+/// Appends an entry to the stored tree, whose frontier is given, and grows with it; answers with its index. `insert` is [`INSERT`], or begins
+/// with it. Use [`log`] for what has a row of its own.
 ///
 /// # Errors
-/// The database's, among them a subject that is logged already.
-pub(super) async fn append(connection: &mut SqliteConnection, draft: &Draft) -> Result<u64, LedgerError> {
-    let sql = "SELECT leaf, nodes FROM tree_leaves ORDER BY leaf DESC LIMIT 1";
-    let last: Option<(i64, Vec<u8>)> = sqlx::query_as(sql).fetch_optional(&mut *connection).await?;
-    let mut place = 0;
-    // The subtrees that the new leaf completes lie to its left, each twice as large as the one before. The smallest is the leaf before.
-    let mut smaller = Vec::new();
-    if let Some((leaf, nodes)) = last {
-        place = leaf + 1;
-        smaller.push(node(&nodes, 0)?);
-    }
-    let merges = place.trailing_ones();
-    for level in 1..merges {
-        let end = place - (1 << level);
-        let sql = "SELECT nodes FROM tree_leaves WHERE leaf = ?";
-        let nodes: Vec<u8> = sqlx::query_scalar(sql).bind(end).fetch_one(&mut *connection).await?;
-        smaller.push(node(&nodes, level)?);
-    }
-    let index = u64::try_from(place).map_err(|_| LedgerError::OutOfRange { what: "index" })?;
+/// The database's, among them a subject that is logged already. The frontier is then as it was.
+pub(super) async fn append(
+    connection: &mut SqliteConnection,
+    frontier: &mut Frontier,
+    draft: &Draft,
+    insert: &'static str,
+) -> Result<u64, LedgerError> {
+    let index = frontier.size;
     let line = Leaf::new(index, draft).line();
-    let mut hash = leaf_hash(line.as_bytes());
-    let mut nodes = hash.to_vec();
-    for left in smaller.iter().take(merges as usize) {
-        hash = parent_hash(left, &hash);
-        nodes.extend(hash);
-    }
-    sqlx::query("INSERT INTO tree_leaves (leaf, kind, subject, entry, nodes) VALUES (?, ?, ?, ?, ?)")
-        .bind(place)
+    let mut grown = frontier.clone();
+    let nodes = grown.push(leaf_hash(line.as_bytes())).concat();
+    sqlx::query(insert)
+        .bind(i64::try_from(index).map_err(|_| LedgerError::OutOfRange { what: "index" })?)
         .bind(draft.kind)
         .bind(&draft.subject)
         .bind(line)
         .bind(nodes)
         .execute(connection)
         .await?;
+    *frontier = grown;
     Ok(index)
 }
 
@@ -169,8 +181,9 @@ pub(super) async fn log_older_rows(connection: &mut SqliteConnection) -> Result<
     }
     // Stable: rows of one time stay in the order in which they depend on each other.
     rows.sort_by_key(|(time, ..)| *time);
+    let mut frontier = Frontier::default();
     for (_, source, subject) in &rows {
-        log(connection, source, subject).await?;
+        log(connection, &mut frontier, source, subject).await?;
     }
     Ok(rows.len() as u64)
 }

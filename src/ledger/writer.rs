@@ -15,7 +15,7 @@ use super::{
     rows::{Answered, Entry, KeptRow, word},
     seal::Fault,
     source::{BUDGET, CERTIFICATION, COMMITMENT, PROFILE},
-    tree,
+    tree::{self, Frontier},
 };
 use crate::{
     clock::Stamp,
@@ -145,18 +145,18 @@ impl Item {
         }
     }
 
-    async fn write(self, connection: &mut SqliteConnection) -> Outcome {
+    async fn write(self, connection: &mut SqliteConnection, frontier: &mut Frontier) -> Outcome {
         match self {
             Self::Profile { rig, profile, expectation, recorded_at, answer } => {
-                let outcome = write_profile(connection, &rig, &profile, &expectation, recorded_at).await;
+                let outcome = write_profile(connection, frontier, &rig, &profile, &expectation, recorded_at).await;
                 Outcome::Profile(answer, outcome)
             }
-            Self::Entry { entry, answer } => Outcome::Entry(answer, write_entry(connection, *entry).await),
+            Self::Entry { entry, answer } => Outcome::Entry(answer, write_entry(connection, frontier, *entry).await),
             Self::Commitment { committed, witnesses, answer } => {
-                Outcome::Commitment(answer, write_commitment(connection, &committed, &witnesses).await)
+                Outcome::Commitment(answer, write_commitment(connection, frontier, &committed, &witnesses).await)
             }
             Self::Budget { digest, document, recorded_at, answer } => {
-                Outcome::Budget(answer, write_budget(connection, &digest, &document, recorded_at).await)
+                Outcome::Budget(answer, write_budget(connection, frontier, &digest, &document, recorded_at).await)
             }
             Self::Kept { added, dropped, answer } => Outcome::Kept(answer, write_kept(connection, &added, &dropped).await),
         }
@@ -257,8 +257,12 @@ impl Writer {
     }
 }
 
+/// Keeps what an item wrote, and opens a savepoint for the next one.
+const NEXT: &str = "RELEASE item; SAVEPOINT item";
+
 async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>, fault: Fault, group_sizes: Histogram) {
     let mut group = Vec::with_capacity(GROUP);
+    let mut frontier = Frontier::default();
     while items.recv_many(&mut group, GROUP).await > 0 {
         group_sizes.observe(group.len() as f64);
         if let Some(detail) = fault.get() {
@@ -266,7 +270,7 @@ async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>, 
             group.drain(..).for_each(|item| item.failed(&error).tell());
             continue;
         }
-        for outcome in commit(&mut connection, group.drain(..)).await {
+        for outcome in commit(&mut connection, &mut frontier, group.drain(..)).await {
             outcome.tell();
         }
     }
@@ -276,13 +280,15 @@ async fn run(mut connection: SqliteConnection, mut items: mpsc::Receiver<Item>, 
 }
 
 /// Writes a group of items in one transaction. An item that fails is undone alone; if the transaction fails, all of them have.
-async fn commit(connection: &mut SqliteConnection, items: impl Iterator<Item = Item>) -> Vec<Outcome> {
+///
+/// `frontier` is that of the tree as the last group left it. Others append to the tree too, between transactions.
+async fn commit(connection: &mut SqliteConnection, frontier: &mut Frontier, items: impl Iterator<Item = Item>) -> Vec<Outcome> {
     let mut outcomes = Vec::new();
-    let mut broken = execute(connection, "BEGIN IMMEDIATE; SAVEPOINT item").await.err();
+    let mut broken = begin(connection, frontier).await.err();
     for item in items {
         let outcome = match &broken {
             Some(error) => item.failed(error),
-            None => write_undoable(connection, item, &mut broken).await,
+            None => write_undoable(connection, frontier, item, &mut broken).await,
         };
         outcomes.push(outcome);
     }
@@ -290,18 +296,37 @@ async fn commit(connection: &mut SqliteConnection, items: impl Iterator<Item = I
         broken = execute(connection, "COMMIT").await.err();
     }
     let Some(error) = broken else { return outcomes };
+    *frontier = Frontier::default();
     // The transaction may be gone already, as it is when the disk is full; then this fails and nothing is lost.
     let _ = execute(connection, "ROLLBACK").await;
     tracing::error!(error = &error as &dyn std::error::Error, "a group of writes failed");
     outcomes.into_iter().map(|outcome| outcome.failed(&error)).collect()
 }
 
+async fn begin(connection: &mut SqliteConnection, frontier: &mut Frontier) -> Result<(), LedgerError> {
+    let sql = "BEGIN IMMEDIATE; SAVEPOINT item; SELECT COALESCE(MAX(leaf), -1) + 1 FROM tree_leaves";
+    let size: i64 = sqlx::query_scalar(sql).fetch_one(&mut *connection).await?;
+    if u64::try_from(size) != Ok(frontier.size()) {
+        *frontier = Frontier::read(connection).await?;
+    }
+    Ok(())
+}
+
 /// Writes one item inside the savepoint that is open, and opens it anew. `broken` is set if the transaction itself can no longer be trusted.
-async fn write_undoable(connection: &mut SqliteConnection, item: Item, broken: &mut Option<LedgerError>) -> Outcome {
-    let outcome = item.write(connection).await;
-    // Undone, the savepoint stays open for the next item.
-    let next = if outcome.broken().is_some() { "ROLLBACK TO item" } else { "RELEASE item; SAVEPOINT item" };
-    *broken = execute(connection, next).await.err();
+async fn write_undoable(
+    connection: &mut SqliteConnection,
+    frontier: &mut Frontier,
+    item: Item,
+    broken: &mut Option<LedgerError>,
+) -> Outcome {
+    let outcome = item.write(connection, frontier).await;
+    *broken = match &outcome {
+        // Undone, the savepoint stays open for the next item.
+        outcome if outcome.broken().is_some() => execute(connection, "ROLLBACK TO item").await.err(),
+        // It opened the next savepoint with its last word, or wrote nothing.
+        Outcome::Entry(..) => None,
+        _ => execute(connection, NEXT).await.err(),
+    };
     outcome
 }
 
@@ -312,6 +337,7 @@ async fn execute(connection: &mut SqliteConnection, sql: &'static str) -> Result
 
 async fn write_profile(
     connection: &mut SqliteConnection,
+    frontier: &mut Frontier,
     rig: &RigName,
     profile: &Profile,
     expectation: &Expectation,
@@ -346,13 +372,13 @@ async fn write_profile(
         .bind(text)
         .execute(&mut *connection)
         .await?;
-    tree::log(connection, &PROFILE, &format!("{rig}/{version}")).await?;
+    tree::log(connection, frontier, &PROFILE, &format!("{rig}/{version}")).await?;
     let kept = if version == 1 { Kept::Created } else { Kept::Updated };
     Ok((kept, u64::try_from(version).map_err(|_| LedgerError::OutOfRange { what: "version" })?))
 }
 
-async fn write_entry(connection: &mut SqliteConnection, entry: Entry) -> EntryAnswer {
-    if let Err(error) = insert_entry(connection, &entry).await {
+async fn write_entry(connection: &mut SqliteConnection, frontier: &mut Frontier, entry: Entry) -> EntryAnswer {
+    if let Err(error) = insert_entry(connection, frontier, &entry).await {
         // The key may stand for a batch already. To ask first would cost every batch a question, and hardly any has been sent before.
         execute(connection, "ROLLBACK TO item").await?;
         let Some(answered) = answered_within(connection, &entry.rig, &entry.submission.key).await? else { return Err(error.into()) };
@@ -379,8 +405,11 @@ static ENTRY: LazyLock<Arc<str>> = LazyLock::new(|| {
     format!("{inserts}{}", CERTIFICATION.row).into()
 });
 
+/// The leaf of a certification, with which the item ends: one question less to the database.
+static LEAF: LazyLock<String> = LazyLock::new(|| format!("{}; {NEXT}", tree::INSERT));
+
 /// Adds the certification as the next entry, with its witnesses and its submission, and logs it.
-async fn insert_entry(connection: &mut SqliteConnection, entry: &Entry) -> Result<(), LedgerError> {
+async fn insert_entry(connection: &mut SqliteConnection, frontier: &mut Frontier, entry: &Entry) -> Result<(), LedgerError> {
     for (digest, document) in &entry.witnesses {
         insert_witness(connection, digest, document).await?;
     }
@@ -404,11 +433,16 @@ async fn insert_entry(connection: &mut SqliteConnection, entry: &Entry) -> Resul
         .bind(&entry.refusal)
         .fetch_one(&mut *connection)
         .await?;
-    tree::append(connection, &CERTIFICATION.read(&row)?).await?;
+    tree::append(connection, frontier, &CERTIFICATION.read(&row)?, &LEAF).await?;
     Ok(())
 }
 
-async fn write_commitment(connection: &mut SqliteConnection, committed: &Committed, witnesses: &[(String, String)]) -> CommitmentAnswer {
+async fn write_commitment(
+    connection: &mut SqliteConnection,
+    frontier: &mut Frontier,
+    committed: &Committed,
+    witnesses: &[(String, String)],
+) -> CommitmentAnswer {
     let sql = "INSERT INTO commitments (commitment, id, rig, profile_version, recorded_at, level, digest, document) \
                VALUES ((SELECT COALESCE(MAX(commitment), -1) + 1 FROM commitments), ?, ?, ?, ?, ?, ?, ?) RETURNING commitment";
     let number: i64 = sqlx::query_scalar(sql)
@@ -426,18 +460,24 @@ async fn write_commitment(connection: &mut SqliteConnection, committed: &Committ
         let sql = "INSERT INTO commitment_witnesses (commitment, digest) VALUES (?, ?)";
         sqlx::query(sql).bind(number).bind(digest).execute(&mut *connection).await?;
     }
-    tree::log(connection, &COMMITMENT, &committed.id.to_string()).await?;
+    tree::log(connection, frontier, &COMMITMENT, &committed.id.to_string()).await?;
     Ok(())
 }
 
-async fn write_budget(connection: &mut SqliteConnection, digest: &str, document: &str, recorded_at: Stamp) -> BudgetAnswer {
+async fn write_budget(
+    connection: &mut SqliteConnection,
+    frontier: &mut Frontier,
+    digest: &str,
+    document: &str,
+    recorded_at: Stamp,
+) -> BudgetAnswer {
     let sql = "INSERT INTO leakage_budgets (budget, digest, recorded_at, document) \
                SELECT (SELECT COALESCE(MAX(budget), -1) + 1 FROM leakage_budgets), ?1, ?2, ?3 \
                WHERE NOT EXISTS (SELECT 1 FROM leakage_budgets WHERE digest = ?1)";
     let written = sqlx::query(sql).bind(digest).bind(recorded_at.microseconds()).bind(document).execute(&mut *connection).await?;
     let new = written.rows_affected() > 0;
     if new {
-        tree::log(connection, &BUDGET, digest).await?;
+        tree::log(connection, frontier, &BUDGET, digest).await?;
     }
     Ok(new)
 }

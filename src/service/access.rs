@@ -1,12 +1,13 @@
 //! Who asks, and what they may see.
 
-use std::sync::{Arc, Mutex, PoisonError};
+use std::sync::Arc;
 
+use tokio::sync::{mpsc, oneshot};
 use uuid::Uuid;
 
 use super::Service;
 use crate::{
-    ledger::LedgerError,
+    ledger::{LedgerError, history::History},
     profile::RigName,
     token::{Keyring, Role, Token, Unrecognised},
 };
@@ -59,25 +60,51 @@ impl Caller {
     }
 }
 
-/// The keyring as it was read last.
-#[derive(Default)]
-pub(super) struct Keys(Mutex<Arc<Keyring>>);
+/// Requests that one look at the ledger serves at most.
+const MANY: usize = 1024;
+
+type Asked = oneshot::Sender<Result<Arc<Keyring>, LedgerError>>;
+
+/// Who asks for the keyring, and the task that looks whether it changed: once for all who asked before it looked, so that everyone gets the
+/// tokens as of a moment after they asked, and a crowd costs the ledger no more than one of them.
+pub(super) struct Keys(mpsc::Sender<Asked>);
+
+impl Keys {
+    pub(super) fn watch(history: History) -> Self {
+        let (asks, mut asked) = mpsc::channel(MANY);
+        tokio::spawn(async move {
+            let mut known = Arc::new(Keyring::default());
+            let mut waiting: Vec<Asked> = Vec::new();
+            while asked.recv_many(&mut waiting, MANY).await > 0 {
+                let found = newest(&history, &known).await;
+                if let Ok(found) = &found {
+                    known = Arc::clone(found);
+                }
+                // Whoever has gone needs no answer.
+                waiting.drain(..).for_each(|answer| drop(answer.send(found.clone())));
+            }
+        });
+        Self(asks)
+    }
+}
+
+/// The keyring as it stands, read again only after a change.
+async fn newest(history: &History, known: &Arc<Keyring>) -> Result<Arc<Keyring>, LedgerError> {
+    if history.token_changes().await? == known.changes() {
+        return Ok(Arc::clone(known));
+    }
+    history.keyring().await.map(Arc::new)
+}
 
 impl Service {
-    /// All tokens, as of now. They are read again only after a change.
+    /// All tokens, as of now.
     ///
     /// # Errors
     /// The ledger's.
     pub async fn keyring(&self) -> Result<Arc<Keyring>, LedgerError> {
-        let changes = self.ledger.history.token_changes().await?;
-        // What is kept under the lock is replaced as a whole: a panic elsewhere cannot leave it half done.
-        let known = Arc::clone(&self.keys.0.lock().unwrap_or_else(PoisonError::into_inner));
-        if known.changes() == changes {
-            return Ok(known);
-        }
-        let read = Arc::new(self.ledger.history.keyring().await?);
-        *self.keys.0.lock().unwrap_or_else(PoisonError::into_inner) = Arc::clone(&read);
-        Ok(read)
+        let (answer, keyring) = oneshot::channel();
+        self.keys.0.send(answer).await.map_err(|_| LedgerError::Closed)?;
+        keyring.await.map_err(|_| LedgerError::Closed)?
     }
 
     /// Who presents this token, or none.

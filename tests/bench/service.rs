@@ -1,6 +1,7 @@
 //! The service over loopback, beside the same server on a route that only writes the same bytes durably, and one that does nothing.
 
 use std::{
+    borrow::Cow,
     net::SocketAddr,
     num::NonZeroU32,
     path::Path,
@@ -17,11 +18,14 @@ use axum::{
     routing::post,
 };
 use bitassay::{
+    certificate::Verdict,
     certify::certify,
-    clock::SystemClock,
+    clock::{Clock, SystemClock},
     http::{limits::Limits, server},
-    ledger::Ledger,
+    ledger::{Ledger, rows::Entry, writer::Expectation},
+    profile::{Profile, ProfileDocument, RigName},
     service::{Service, Solvers},
+    submission::{IdempotencyKey, Submission},
 };
 use sqlx::{
     ConnectOptions, SqliteConnection,
@@ -32,6 +36,7 @@ use tokio::{
     net::TcpListener,
     sync::{mpsc as channel, oneshot},
 };
+use uuid::Uuid;
 
 use crate::{
     batches::{Batches, profile},
@@ -54,6 +59,8 @@ pub fn run() -> Section {
          same settings, in groups",
         BYTES.get().map_or(0, String::len)
     ));
+    section
+        .note("store: the same requests, answered once the rows of a ready-made certification are in a ledger of their own: no certifying");
     section.note("nothing: the same requests, answered with a record's bytes");
     for clients in CLIENTS {
         let mut measure = |name: &str, path| {
@@ -66,8 +73,10 @@ pub fn run() -> Section {
         };
         let nothing: Outcome = measure("nothing", "/bench/nothing");
         let write = measure("write", "/bench/write");
+        let stored: Outcome = measure("store", "/bench/store");
         let certified = measure("certify", "/v1/rigs/bench/batches");
         section.figure(format!("{clients} clients: certify against write"), certified.rate() / write.rate(), "times");
+        section.figure(format!("{clients} clients: certify against store"), certified.rate() / stored.rate(), "times");
         section.figure(format!("{clients} clients: certify against nothing"), certified.rate() / nothing.rate(), "times");
         if clients == 64 {
             section.at_least("64 clients: durable certifications", certified.rate(), 2000.0, "per second");
@@ -96,7 +105,7 @@ impl Served {
     pub fn start() -> Self {
         // Beside the build, on the disk: a temporary folder may be in memory.
         let folder = tempfile::tempdir_in(concat!(env!("CARGO_MANIFEST_DIR"), "/target")).expect("a folder");
-        let (ledger, bytes) = (folder.path().join("ledger.sqlite"), folder.path().join("bytes.sqlite"));
+        let [ledger, bytes, rows] = ["ledger.sqlite", "bytes.sqlite", "rows.sqlite"].map(|name| folder.path().join(name));
         let (started, address) = mpsc::channel();
         let (stop, stopped) = oneshot::channel();
         let thread = std::thread::spawn(move || {
@@ -107,7 +116,7 @@ impl Served {
                 let service = Service::new(ledger, solvers, Arc::new(SystemClock));
                 let listener = TcpListener::bind("127.0.0.1:0").await.expect("a port");
                 started.send(listener.local_addr().expect("an address")).expect("the bench waits");
-                let beside = beside(&bytes).await;
+                let beside = beside(&bytes, &rows).await;
                 server::run_beside(listener, service, limits(), beside, async { drop(stopped.await) }).await.expect("a server");
             });
         });
@@ -163,18 +172,60 @@ fn bytes_of_a_certification(address: SocketAddr, ledger: &Path) -> String {
 }
 
 /// The routes that only the bench has.
-async fn beside(file: &Path) -> Router {
-    let writer = write_bytes(file).await;
+async fn beside(bytes: &Path, rows: &Path) -> Router {
+    let writer = write_bytes(bytes).await;
+    let ledger = ledger_with_rig(rows).await;
     let answer = || (StatusCode::CREATED, [(header::CONTENT_TYPE, "application/json")], RECORD.get().cloned().unwrap_or_default());
-    Router::new().route("/bench/nothing", post(async move |_: Bytes| answer().into_response())).route(
-        "/bench/write",
-        post(async move |_: Bytes| {
-            let (written, committed) = oneshot::channel();
-            writer.send(written).await.expect("a writer");
-            committed.await.expect("a commit");
-            answer().into_response()
-        }),
-    )
+    let nothing = async move |_: Bytes| answer().into_response();
+    let write = async move |_: Bytes| {
+        let (written, committed) = oneshot::channel();
+        writer.send(written).await.expect("a writer");
+        committed.await.expect("a commit");
+        answer().into_response()
+    };
+    let store = async move |_: Bytes| {
+        ledger.writer.keep_entry(entry()).await.expect("a ledger");
+        answer().into_response()
+    };
+    Router::new().route("/bench/nothing", post(nothing)).route("/bench/write", post(write)).route("/bench/store", post(store))
+}
+
+/// A ledger that knows the rig and nothing else.
+async fn ledger_with_rig(file: &Path) -> Arc<Ledger> {
+    let ledger = Ledger::open(file).await.expect("a ledger");
+    let document: ProfileDocument = serde_json::from_value(profile()).expect("a profile");
+    let profile = Profile::try_from(document).expect("a profile");
+    ledger.writer.keep_profile(rig(), profile, Expectation::Absent, SystemClock.now()).await.expect("a rig");
+    Arc::new(ledger)
+}
+
+fn rig() -> RigName {
+    RigName::try_from("bench".to_owned()).expect("a name")
+}
+
+/// The record of [`RECORD`] as an entry of its own. Of witnesses a certification from kept ones writes only digests, which are left out here.
+fn entry() -> Entry {
+    let record = RECORD.get().map_or(Cow::Borrowed(""), |record| String::from_utf8_lossy(record));
+    let id = Uuid::now_v7();
+    let submission =
+        Submission { key: IdempotencyKey::try_from(&*id.to_string()).expect("a key"), body_digest: format!("sha256:{}", "0".repeat(64)) };
+    Entry {
+        id,
+        rig: rig(),
+        profile_version: 1,
+        verdict: Verdict::Certified,
+        reason: None,
+        recorded_at: SystemClock.now(),
+        certified_bits: 1,
+        rounds: 8_000_000,
+        failure: Some(2e-10),
+        commitment: None,
+        record: record.into_owned(),
+        witnesses: vec![],
+        kept: vec![],
+        submission,
+        refusal: None,
+    }
 }
 
 /// A task that writes as many bytes as a certification for everyone who asks, in groups, and answers after the commit.
