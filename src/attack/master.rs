@@ -140,9 +140,6 @@ impl Limit {
 const RESOLUTION: f64 = 1e-9;
 /// Feasibility of the linear programmes.
 const FEASIBILITY: f64 = 1e-9;
-/// Columns worth less than their price by more than this are left out where weights are sought.
-const IDLE: f64 = 1e-4;
-
 impl Constraints {
     /// The last outcome follows from the others where all are points, and with two outcomes.
     fn limits(&self) -> Vec<Limit> {
@@ -216,11 +213,11 @@ impl Constraints {
         Some(Priced { prices: found, leans, value: solution.objective() })
     }
 
-    /// Weights of the best mixture, one per column, of those columns that are worth their price or nearly so. What they miss is reported by
-    /// the verification of the model.
-    pub fn weights(&self, columns: &[Column], prices: &Prices, penalty: f64) -> Option<Vec<f64>> {
+    /// Weights of the best mixture, one per column, of those columns that are worth their price, or less by no more than `idle`. What they miss is
+    /// reported by the verification of the model.
+    pub fn weights(&self, columns: &[Column], prices: &Prices, penalty: f64, idle: f64) -> Option<Vec<f64>> {
         let limits = self.limits();
-        let worth = |j: &usize| prices.gain(columns[*j].value, &columns[*j].behaviour, &columns[*j].leakage) > -IDLE;
+        let worth = |j: &usize| prices.gain(columns[*j].value, &columns[*j].behaviour, &columns[*j].leakage) > -idle;
         let kept: Vec<usize> = (0..columns.len()).filter(worth).collect();
         let mut problem = Problem::new(OptimizationDirection::Maximize);
         let variables: Vec<Variable> = kept.iter().map(|j| problem.add_var(columns[*j].value, (0.0, f64::INFINITY))).collect();

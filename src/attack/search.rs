@@ -131,15 +131,21 @@ fn attack_once(scenario: &Scenario, target: Setting, place: Place, objective: Ob
     let mut search = Search::new(scenario, target, intervals, objective, effort);
     search.add_known(hints.known);
     let (rounds, prices, settled) = search.run(hints.witness.and_then(|witness| Prices::of(witness, scenario)));
-    let (model, attained) = search.model(&prices?)?;
+    let prices = prices?;
     let allowed = |leakage: &[f64]| leakage.iter().zip(scenario.leakage()).all(|(found, limit)| found <= limit);
-    let obeyed = match scenario.leakage_holds() {
+    let obeyed = |attained: &Attained| match scenario.leakage_holds() {
         LeakageReading::OnAverage => allowed(&attained.mean_leakage),
         LeakageReading::EveryEmission => allowed(&attained.largest_leakage),
     };
+    // At an extremal behaviour those worth their price may not suffice for any mixture that obeys.
+    let mixed = [IDLE, f64::INFINITY].into_iter().filter_map(|idle| search.model(&prices, idle));
+    let (model, attained) = mixed.into_iter().find(|(_, attained)| obeyed(attained))?;
     let residual = residual(place, &attained);
-    obeyed.then_some(Attack { model, attained, residual, rounds, settled })
+    Some(Attack { model, attained, residual, rounds, settled })
 }
+
+/// Columns worth less than their price by more than this are left out where weights are sought.
+const IDLE: f64 = 1e-4;
 
 /// The place as intervals, those with a width a little narrower.
 fn narrowed(place: Place, geometry: Geometry) -> Option<Table<[f64; 2]>> {
@@ -370,9 +376,9 @@ impl Search {
         }
     }
 
-    /// The mixture as an explicit model, and what it attains.
-    fn model(&self, prices: &Prices) -> Option<(Model, Attained)> {
-        let weights = self.constraints.weights(&self.columns, prices, LAST_REACH)?;
+    /// The mixture of strategies that are worth their price, up to `idle`, as an explicit model, and what it attains.
+    fn model(&self, prices: &Prices, idle: f64) -> Option<(Model, Attained)> {
+        let weights = self.constraints.weights(&self.columns, prices, LAST_REACH, idle)?;
         let dimension = self.space.dimension;
         let carrier =
             Matrix::from_fn(dimension, dimension, |i, j| Complex::from(f64::from(u8::from(i == j && i < self.space.carrier_dimension))));
