@@ -69,4 +69,16 @@ mod tests {
         assert_eq!(extractable(100.5, &[40.0, 20.0]), 40);
         assert_eq!(extractable(f64::NAN, &[]), 0);
     }
+
+    #[test]
+    fn entropies_and_costs_are_rounded_against_the_user() {
+        let bits = min_entropy(1_000, 0.5);
+        assert!(bits < 500.0 && bits > 500.0 - 1e-12);
+        // −log2 0.8 = log2 5 − 2.
+        let h = min_entropy_per_round(0.8);
+        assert!(h < 0.321_928_094_887_362_4 && h > 0.321_928_094_887_362_4 - 1e-14, "{h}");
+        // 2 · 10 bits for a failure probability of 2⁻¹⁰.
+        let cost = hashing_cost(2f64.powi(-10));
+        assert!(cost > 20.0 && cost < 20.0 + 1e-13, "{cost}");
+    }
 }

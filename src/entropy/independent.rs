@@ -97,4 +97,48 @@ mod tests {
             }
         }
     }
+
+    /// At β = 1/2 the number 2 in 1/β counts: Φ = 3/4 for `E = 1/2`, and `log2(4/3) = 2 − log2 3`.
+    #[test]
+    fn a_smaller_power_multiplies_what_is_left() {
+        let entropy = block_min_entropy(&decimal(-0.5), 1000, 1 << 29, 2f64.powi(-20));
+        let exact = 2.0 * (415.037_499_278_843_8 - 20.0);
+        assert!(entropy < exact && entropy > exact - 1e-9, "{entropy}");
+    }
+
+    /// `√(2 · 23.02585 / (10⁶ · 0.4)) = 0.0107298…`, rounded down to a sixteenth of an octave.
+    #[test]
+    fn the_power_is_that_of_the_formula_or_a_step_below() {
+        let beta = power_value(power_for(1_000_000, 1e-10));
+        assert!(beta <= 0.010_729_83 && beta >= 0.010_729_82 * 2f64.powf(-1.0 / 16.0), "{beta}");
+        let steps = beta.log2() * 16.0;
+        assert!((steps - steps.round()).abs() < 1e-5, "{steps}");
+        // Almost as many rounds, the same power.
+        assert_eq!(power_for(1_000_000, 1e-10), power_for(1_002_000, 1e-10));
+    }
+
+    #[test]
+    fn nats_are_turned_into_bits() {
+        // ln 2 to more digits than a number holds, a little below it.
+        let bits = entropy_in_bits(&decimal(-0.693_147_180_559_945_2));
+        assert!(bits < 1.0 && bits > 1.0 - 1e-15 * 4.0, "{bits}");
+        assert_eq!(entropy_in_bits(&decimal(0.1)), 0.0);
+    }
+
+    /// By hand: at β = 1 a term is `p − p²`, at β = 1/2 it is `2 (p − p^{3/2})`, largest at 4/9 with 8/27; in sum no more than `ln B`.
+    #[test]
+    fn the_largest_entropy_is_attained() {
+        let half = 1u32 << 29;
+        for (intervals, power, exact) in [
+            (vec![[0.2, 0.3], [0.7, 0.8]], 1 << 30, 0.42),
+            (vec![[0.0, 1.0], [0.0, 1.0]], 1 << 30, 0.5),
+            (vec![[0.9, 0.9], [0.1, 0.1]], 1 << 30, 0.18),
+            (vec![[0.0, 0.0], [1.0, 1.0]], 1 << 30, 0.0),
+            (vec![[0.0, 1.0]; 3], half, 8.0 / 9.0),
+            (vec![[0.0, 1.0]; 2], 1 << 10, std::f64::consts::LN_2),
+        ] {
+            let bound = largest_power_entropy(&intervals, power);
+            assert!(bound >= exact && bound <= exact * (1.0 + 1e-11), "{intervals:?} {power}: {bound} {exact}");
+        }
+    }
 }

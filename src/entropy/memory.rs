@@ -233,4 +233,91 @@ mod tests {
         let entropy = block_min_entropy(40.0, 1 << 29, 2f64.powi(-10));
         assert!(entropy < 60.0 && entropy > 60.0 - 1e-11);
     }
+
+    /// At β = 1 the maximum of `q − q²` is 1/4: the bound is above it, by a relative `2⁻⁴⁴` and what the functions miss.
+    #[test]
+    fn the_largest_excess_is_rounded_up() {
+        let over = crate::exact::round_up(&(largest_excess(1 << 30) - decimal(0.25)));
+        assert!(over > 2f64.powi(-47) && over < 2f64.powi(-45), "{over}");
+    }
+
+    fn rational(value: f64) -> BigRational {
+        BigRational::from_float(value).unwrap()
+    }
+
+    /// `ν₀ + ν·p`.
+    fn value(bound: &RoundBound, behaviour: &Table<f64>) -> BigRational {
+        let cells = bound.linear.iter().flatten().flatten().zip(behaviour.iter().flatten().flatten());
+        &bound.constant + cells.map(|(value, p)| value * rational(*p)).sum::<BigRational>()
+    }
+
+    #[test]
+    fn power_witnesses_become_bounds_and_centring_changes_nothing() {
+        let nu: Table<BigRational> = [[3.0, -1.0], [0.5, 4.0]].iter().map(|row| vec![row.iter().map(|v| rational(*v)).collect()]).collect();
+        let behaviour = vec![vec![vec![0.75, 0.25]], vec![vec![0.125, 0.875]]];
+        // −η ≤ −1/4 + ν·p at β = 1/2 is Σ p^{1+β} = 1 − β η ≤ 7/8 + ν·p/2, and ν·p = 2 + 3.5625.
+        let bound = RoundBound::from_power(Setting { x: 0, y: 0 }, 1 << 29, &rational(-0.25), &nu);
+        assert_eq!(bound.constant, rational(0.875));
+        assert_eq!(value(&bound, &behaviour), rational(0.875 + 2.78125));
+        // The expected behaviour need not be normalised; where it is nothing, nothing is moved.
+        let centred = bound.clone().centred(&vec![vec![vec![0.5, 0.125]], vec![vec![0.0, 0.0]]]);
+        assert_eq!(value(&centred, &behaviour), value(&bound, &behaviour));
+        let [first, last] = [0, 1].map(|b| centred.linear[0][0][b].clone());
+        assert!((first * rational(0.5) + last * rational(0.125)).is_zero());
+        assert_eq!(centred.linear[1], bound.linear[1]);
+    }
+
+    /// Claim (2) of the documentation, as a sum over outcomes: where (1) holds with equality and `p − p^{1+β}` is at its largest at every
+    /// positive weight, nothing is given away but the slack for the setting distribution and the rounding of the excess.
+    #[test]
+    fn a_round_multiplies_by_one_at_most_and_nearly_so() {
+        let beta = 2f64.powi(-10);
+        let most = (-beta.ln_1p() / beta).exp();
+        let target_row = vec![most, most, 1.0 - 2.0 * most];
+        let behaviour = vec![vec![target_row.clone(), vec![0.5, 0.25, 0.25]], vec![target_row.clone(), vec![0.125, 0.5, 0.375]]];
+        let distribution = [vec![0.125, 0.375], vec![0.25, 0.25]];
+        let targets = [Setting { x: 0, y: 0 }, Setting { x: 1, y: 0 }];
+        let linear = [
+            [[[0.03, 0.02, 0.0], [0.1, -0.2, 0.05]], [[0.01, 0.04, 0.0], [-0.1, 0.3, 0.2]]],
+            [[[0.02, 0.05, 0.0], [-0.04, 0.1, -0.3]], [[0.06, 0.01, 0.0], [0.15, -0.1, 0.02]]],
+        ];
+        let sum: f64 = target_row.iter().map(|p| p.powf(1.0 + beta)).sum();
+        let bounds: Vec<RoundBound> = targets
+            .iter()
+            .zip(&linear)
+            .map(|(target, table)| {
+                let linear = table.iter().map(|t| t.iter().map(|row| row.iter().map(|v| rational(*v)).collect()).collect()).collect();
+                let mut bound = RoundBound { target: *target, constant: BigRational::zero(), linear };
+                bound.constant = rational(sum) - value(&bound, &behaviour);
+                bound
+            })
+            .collect();
+        let found = factors(&bounds, &distribution, 1 << 20).unwrap();
+        let mut expectation = 0.0;
+        for (x, y) in [(0, 0), (0, 1), (1, 0), (1, 1)] {
+            for (factor, p) in found[x][y].iter().zip(&behaviour[x][y]) {
+                let power = if targets.contains(&Setting { x, y }) { p.powf(1.0 + beta) } else { *p };
+                expectation += distribution[x][y] * factor * power;
+            }
+        }
+        let short = 1.0 - expectation;
+        assert!(short > 0.9 * 2f64.powi(-38) && short < 1.2 * 2f64.powi(-38), "{short:e}");
+    }
+
+    #[test]
+    fn what_gives_no_factors_is_refused() {
+        let linear = |value: f64| vec![vec![vec![rational(value), rational(-value)]; 2]; 2];
+        let bound = |x, y, value, constant| RoundBound { target: Setting { x, y }, constant: rational(constant), linear: linear(value) };
+        let of = |bounds: &[RoundBound]| factors(bounds, &[vec![0.25; 2], vec![0.25; 2]], 1 << 20);
+        assert!(of(&[bound(1, 1, 0.1, 1.0)]).is_ok());
+        assert_eq!(of(&[]), Err(FactorError::NoTarget));
+        assert_eq!(of(&[bound(1, 2, 0.1, 1.0)]), Err(FactorError::Shape));
+        assert_eq!(of(&[bound(2, 1, 0.1, 1.0)]), Err(FactorError::Shape));
+        let mut short = bound(1, 1, 0.1, 1.0);
+        short.linear[1].pop();
+        assert_eq!(of(&[bound(1, 1, 0.1, 1.0), short]), Err(FactorError::Shape));
+        // 1 − g ν with g about 1: the first outcome's is negative.
+        assert_eq!(of(&[bound(1, 1, 3.0, 1.0)]), Err(FactorError::NotPositive { x: 0, y: 0, b: 0 }));
+        assert_eq!(of(&[bound(1, 1, 0.0, -1.0)]), Err(FactorError::NoTarget));
+    }
 }

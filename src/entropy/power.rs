@@ -41,4 +41,18 @@ mod tests {
         assert_eq!(power_entropy_down(&[1.0, 0.0], 1 << 20), 0.0);
         assert!(power_entropy_down(&[1.0 - 1e-9, 1e-9], 1 << 10) > 1e-8);
     }
+
+    /// At β = 1 it is `1 − Σ p²`, which is exact for binary fractions; at β = 1/2 it is `2 (1 − Σ p^{3/2})`, and squares have exact roots.
+    #[test]
+    fn it_is_rounded_down_by_next_to_nothing() {
+        for (probabilities, power, exact) in [
+            (vec![0.5, 0.5], 1 << 30, 0.5),
+            (vec![0.25; 4], 1 << 30, 0.75),
+            (vec![0.25; 4], 1 << 29, 1.0),
+            (vec![0.5625, 0.25, 0.0625, 0.125], 1 << 29, 2.0 * (1.0 - 0.421_875 - 0.125 - 0.015_625 - 0.125 / 8f64.sqrt())),
+        ] {
+            let value = power_entropy_down(&probabilities, power);
+            assert!(value < exact && value > exact - 1e-13, "{probabilities:?} {power}: {value} {exact}");
+        }
+    }
 }

@@ -225,6 +225,13 @@ mod tests {
         }
     }
 
+    #[test]
+    fn there_is_no_bound_where_the_series_does_not_fall() {
+        for (k, n, p) in [(50u64, 100u64, 0.4), (50, 100, 0.49), (99, 100, 1e-9), (10, 10, 0.5), (10, 10, 0.999)] {
+            assert_eq!(ln_lower_tail_bound(k, n, p), 0.0, "{k} of {n} at {p}");
+        }
+    }
+
     /// Mills' ratio from a library's complementary error function.
     #[test]
     fn what_follows_is_bounded_closely() {
@@ -280,6 +287,42 @@ mod tests {
         let deviation = (p * (1.0 - p) / n as f64).sqrt();
         for distance in [(p - low) / deviation, (high - p) / deviation] {
             assert!((7.12..7.16).contains(&distance), "{distance}");
+        }
+    }
+
+    /// Where the series ends by itself nothing is above the exact tail but the allowance for rounding errors: 64 units in the last place of the
+    /// summands, whose sizes are computed here by adding logarithms one by one.
+    #[test]
+    fn rounding_errors_have_their_allowance() {
+        let ln_factorial = |n: u64| (1..=n).map(|i| (i as f64).ln()).sum::<f64>();
+        for (k, n, p) in [(3u64, 50u64, 0.3f64), (40, 400, 0.3), (600, 1200, 0.9)] {
+            let logarithms = k as f64 * p.ln().abs() + (n - k) as f64 * (1.0 - p).ln().abs();
+            let [all, hits, misses] = [n, k, n - k].map(ln_factorial);
+            // Few factors are multiplied out, and every partial sum is rounded.
+            let choices = if k <= FACTORS { k as f64 * (1.0 + all - hits - misses) } else { all + hits + misses };
+            let size = f64::EPSILON * (logarithms + choices);
+            let over = ln_lower_tail_bound(k, n, p) - crate::exact::round_up(&exact_tail(k, n, p)).ln();
+            assert!(over > 60.0 * size && over < 70.0 * size + 1e-13, "{k} of {n}: {over:e} {size:e}");
+        }
+    }
+
+    /// Towards the ends of the interval Newton's steps and the first guess decide how long it takes, never what is confirmed; wherever they
+    /// lead, the endpoint is one at which the tail is small enough, and hardly beyond the first such.
+    #[test]
+    fn endpoints_are_confirmed_and_close_for_all_sizes() {
+        for (k, n) in [(0u64, 1u64), (1, 2), (7, 4000), (64, 300), (3999, 4000), (100_000, 1 << 26), (1 << 25, 1 << 26)] {
+            for alpha in [0.9f64, 1e-2, 1e-9, 1e-200] {
+                let high = upper(k, n, alpha);
+                if high == 1.0 {
+                    assert!(k + 1 >= n && alpha == 1e-200, "{k} of {n} at {alpha}");
+                    continue;
+                }
+                let allowed = alpha.ln() - LN_2;
+                assert!(ln_lower_tail_bound(k, n, high) <= allowed, "{k} of {n} at {alpha}");
+                // A thousandth of the way to the frequency, and more than rounding moves it.
+                let inside = high - 1e-3 * (high - k as f64 / n as f64) - 1e-13 * high;
+                assert!(ln_lower_tail_bound(k, n, inside) > allowed, "{k} of {n} at {alpha} is too wide: {high}");
+            }
         }
     }
 }

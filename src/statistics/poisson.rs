@@ -197,4 +197,21 @@ mod tests {
             assert!((7.02..7.06).contains(&distance), "{distance}");
         }
     }
+
+    /// As `P(X ≤ k)` sums all its terms, nothing is above the exact tail but the allowance: 64 units in the last place of the summands.
+    #[test]
+    fn rounding_errors_have_their_allowance() {
+        for (k, mean) in [(3u64, 9.5f64), (40, 60.0), (90, 150.0)] {
+            let size = mean + k as f64 * mean.ln() + (1..=k).map(|i| (i as f64).ln()).sum::<f64>();
+            let exact = decimal(mean);
+            let over = ln_lower_tail_bound(k, mean) - round_up(&(partial(k, &exact) / &exponential(&exact)[0])).ln();
+            let units = over / (f64::EPSILON * (size + 1.0));
+            assert!(units > 60.0 && units < 75.0, "{k} {mean}: {units}");
+        }
+    }
+
+    #[test]
+    fn an_interval_spends_half_of_the_failure_at_each_end() {
+        assert_eq!(garwood(12, 1e-6), [lower_limit(12, 5e-7), upper_limit(12, 5e-7)]);
+    }
 }

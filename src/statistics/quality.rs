@@ -308,10 +308,31 @@ mod tests {
         let uniform = vec![vec![0.125; 2]; 4];
         let with = |significance| Expectations { distribution: Some(&uniform), previous: Some(&before), least_rounds: 0, significance };
         assert!(examine(&now, &with(0.05)).unwrap().is_empty());
+        // As significant as asked for is not below it.
+        assert!(examine(&now, &with(9.0 * single.p_value)).unwrap().is_empty());
         let found = examine(&now, &with(0.12)).unwrap();
         assert!(
             matches!(found.as_slice(), [Finding::OutcomeDrift { corrected_p_value, .. }] if *corrected_p_value == 9.0 * single.p_value)
         );
+    }
+
+    /// A setting with one outcome cannot drift, and is no reason to correct for one test more.
+    #[test]
+    fn tests_that_cannot_fail_are_not_counted() {
+        let before = counts(vec![vec![vec![500, 500], vec![1000, 0]]]);
+        let now = counts(vec![vec![vec![600, 400], vec![1000, 0]]]);
+        let expectations = Expectations { distribution: None, previous: Some(&before), least_rounds: 0, significance: 0.05 };
+        let found = examine(&now, &expectations).unwrap();
+        let [Finding::OutcomeDrift { test, corrected_p_value, .. }] = found.as_slice() else { panic!("{found:?}") };
+        assert_eq!(*corrected_p_value, test.p_value);
+    }
+
+    /// Decimals of probabilities need not add up to 1 exactly: the expected rounds do add up to the total.
+    #[test]
+    fn expected_rounds_add_up_to_the_total() {
+        let p = 0.25 * (1.0 + 0.5 * NORMALISATION_SLACK);
+        let test = setting_balance(&counts(vec![vec![vec![1 << 50, 1 << 50]; 2]; 2]), &[vec![p; 2], vec![p; 2]]).unwrap();
+        assert!(test.statistic < 1e-9, "{}", test.statistic);
     }
 
     #[test]
