@@ -7,6 +7,7 @@ mod entropies;
 mod extraction;
 mod guessing;
 mod intervals;
+mod known;
 mod leakage;
 mod memory;
 mod relaxation;

@@ -6,7 +6,7 @@
 //! implementation alone accepts what is still proved but not what `certify` writes, such as a claim in which the last digit was rounded the
 //! other way, or counts moved by less than the widening of the intervals; `verify` makes the record again and turns it away.
 
-use std::{collections::BTreeMap, path::Path, process::Command};
+use std::{collections::BTreeMap, fmt, path::Path, process::Command};
 
 use bitassay::{
     bundle::Bundle,
@@ -250,21 +250,37 @@ fn claims(record: &Value) -> Vec<f64> {
     claims
 }
 
-#[test]
-fn both_implementations_agree_on_records_and_on_mutations() {
+/// What both implementations made of the corpus and of mutations of it.
+pub struct Agreement {
+    pub records: usize,
+    pub mutations: usize,
+    /// Mutations that both turn away.
+    pub rejected: usize,
+    /// Mutations that both accept, by what was changed.
+    theorems: BTreeMap<String, usize>,
+    /// Mutations that the second implementation alone accepts.
+    weaker: BTreeMap<String, usize>,
+    /// What must not happen.
+    pub violations: Vec<String>,
+}
+
+/// Has both implementations look at the corpus and at so many mutations of it; the seed chooses which.
+pub fn agreement(mutations: usize, seed: u64) -> Agreement {
     let folder = tempfile::tempdir().unwrap();
     let corpus = written(folder.path());
     let files: Vec<String> = corpus.iter().map(|(file, _)| file.clone()).collect();
+    let mut violations = Vec::new();
     for (file, bundle) in &corpus {
-        assert_eq!(Bundle::read(bundle.to_string().as_bytes()).unwrap().verify(), Ok(()), "{file}");
+        if let Err(error) = Bundle::read(bundle.to_string().as_bytes()).unwrap().verify() {
+            violations.push(format!("the program does not believe its own {file}: {error:?}"));
+        }
     }
     let said = python(&["--eliminate"], &files);
     assert_eq!(said.lines().count(), corpus.len());
-    assert!(said.lines().all(|line| line.ends_with(": believed")), "{said}");
+    violations.extend(said.lines().filter(|line| !line.ends_with(": believed")).map(str::to_owned));
 
-    let mutations = std::env::var("BITASSAY_MUTATIONS").unwrap_or_else(|_| "1200".into());
-    let said = python(&["--mutate", &mutations], &files);
-    let mut disagreements = Vec::new();
+    let said = python(&["--mutate", &mutations.to_string(), "--seed", &seed.to_string()], &files);
+    assert_eq!(said.lines().count(), mutations);
     let (mut rejected, mut theorems, mut weaker) = (0, BTreeMap::new(), BTreeMap::new());
     for line in said.lines() {
         let line: Value = serde_json::from_str(line).unwrap();
@@ -275,20 +291,36 @@ fn both_implementations_agree_on_records_and_on_mutations() {
         let brief = |line: &Value| format!("{} {} {}", line["file"], line["steps"][0], line["problem"]);
         if !believed {
             rejected += usize::from(!verified);
-            disagreements.extend(verified.then(|| format!("only the program believes {}", brief(&line))));
+            violations.extend(verified.then(|| format!("only the program believes {}", brief(&line))));
             continue;
         }
         let what = line["what"].as_str().unwrap();
         let integers = what.starts_with("witnesses/") && !HARMLESS_IN_A_WITNESS.contains(&what);
-        disagreements.extend(integers.then(|| format!("a changed witness is believed: {}", brief(&line))));
+        violations.extend(integers.then(|| format!("a changed witness is believed: {}", brief(&line))));
         let more = claims(&mutated["record"]).into_iter().zip(claims(&original["record"])).any(|(new, old)| new > old + 1e-12 * old.abs());
-        disagreements.extend(more.then(|| format!("a mutation claims more and is believed: {}", brief(&line))));
+        violations.extend(more.then(|| format!("a mutation claims more and is believed: {}", brief(&line))));
         *if verified { &mut theorems } else { &mut weaker }.entry(what.to_owned()).or_insert(0) += 1;
     }
-    let count = |kinds: &BTreeMap<String, usize>| kinds.values().sum::<usize>();
-    println!("{} records, {mutations} mutations: {rejected} rejected by both", corpus.len());
-    println!("{} are still theorems: {theorems:?}", count(&theorems));
-    println!("{} claim no more than is proved, but are not what certify writes: {weaker:?}", count(&weaker));
-    assert!(disagreements.is_empty(), "{disagreements:#?}");
-    assert!(rejected * 5 > 4 * said.lines().count(), "so many harmless mutations say that the mutations are bad ones");
+    // Fewer do not get round to every section of the records.
+    if mutations >= 1000 && rejected * 5 <= 4 * mutations {
+        violations.push(format!("{} of {mutations} mutations are harmless, so the mutations are bad ones", mutations - rejected));
+    }
+    Agreement { records: corpus.len(), mutations, rejected, theorems, weaker, violations }
+}
+
+impl fmt::Display for Agreement {
+    fn fmt(&self, formatter: &mut fmt::Formatter) -> fmt::Result {
+        let Self { records, mutations, rejected, theorems, weaker, .. } = self;
+        let count = |kinds: &BTreeMap<String, usize>| kinds.values().sum::<usize>();
+        writeln!(formatter, "{records} records, {mutations} mutations: {rejected} rejected by both")?;
+        writeln!(formatter, "{} are still theorems: {theorems:?}", count(theorems))?;
+        writeln!(formatter, "{} claim no more than is proved, but are not what certify writes: {weaker:?}", count(weaker))
+    }
+}
+
+#[test]
+fn both_implementations_agree_on_records_and_on_mutations() {
+    let agreement = agreement(1200, 1);
+    print!("{agreement}");
+    assert_eq!(agreement.violations, Vec::<String>::new());
 }
