@@ -234,7 +234,7 @@ fn map<T>(table: &Table<T>, of: impl Fn(&T) -> [f64; 2]) -> Table<[f64; 2]> {
 }
 
 /// The most by which the behaviour of an attack that is recorded may miss the data.
-const LARGEST_RESIDUAL: f64 = 1e-6;
+pub(crate) const LARGEST_RESIDUAL: f64 = 1e-6;
 
 pub(crate) fn evidence(request: &Request) -> Evidence {
     match (&request.data, request.rounds) {

@@ -18,8 +18,8 @@ use super::document;
 /// Compute what would be certified over leakage, visibility or rounds
 ///
 /// FILE is a JSON document with the members `scenario`, `behaviour` (or the `counts` of an earlier batch), `rounds` (a list of round models), `sweep`,
-/// and optionally `entropy`, `total_rounds`, `setting_distribution`, `visibility`, `failure`, `level`, `loss`, `thresholds` and `wanted_bits`; `-` reads standard
-/// input. For example:
+/// and optionally `entropy`, `total_rounds`, `setting_distribution`, `visibility`, `failure`, `level`, `loss`, `thresholds`, `wanted_bits`, `bracket`
+/// and `attacks`; `-` reads standard input. For example:
 ///
 ///   "sweep": { "leakage": { "from": 1e-5, "to": 0.1, "points": 60 } }, "thresholds": { "leakage": 0.01 }
 ///
@@ -80,10 +80,10 @@ fn watched(request: &ForecastRequest) -> anyhow::Result<Outcome> {
     if !errors.is_terminal() {
         return Ok(forecast(request, |_| {}));
     }
-    let outcome = forecast(request, |Progress { kind, settled, points, solves }| {
+    let outcome = forecast(request, |Progress { kind, settled, points, solves, attacks }| {
         let words = kind.in_words(bitassay::forecast::Swept::Rounds, None);
         // Progress that cannot be shown is no reason to stop.
-        let _ = write!(errors, "\r\x1b[K{words}: {settled} of {points} points settled, {solves} solves so far");
+        let _ = write!(errors, "\r\x1b[K{words}: {settled} of {points} points settled, {solves} solves so far, {attacks} attacks");
         let _ = errors.flush();
     });
     write!(std::io::stderr(), "\r\x1b[K").context("standard error is gone")?;

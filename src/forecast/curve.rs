@@ -3,6 +3,7 @@
 use serde::{Deserialize, Serialize};
 
 use super::{
+    bracket::PointBracket,
     request::{ForecastRequest, Setup},
     shared::{Shared, Spot, Standing},
 };
@@ -25,7 +26,7 @@ use crate::{
 };
 
 /// The power at which an entropy is as good as its limit of many rounds, the Shannon entropy: `β = 2^-16`, which gives away some 10⁻⁵ bit.
-const LIMIT_POWER: u32 = 1 << (POWER_BITS - 16);
+pub(super) const LIMIT_POWER: u32 = 1 << (POWER_BITS - 16);
 
 /// What solving anew may gain, in bits, without being tried when every point is to be solved.
 const NOTHING: f64 = 1e-7;
@@ -64,6 +65,9 @@ pub struct Point {
     pub solved: bool,
     /// What sharing costs at most, in bits per target round; 0 where there was a solve.
     pub loss: f64,
+    /// Where an explicit attack was sought and found.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub bracket: Option<PointBracket>,
 }
 
 /// What may be solved for an answer.
@@ -86,14 +90,16 @@ pub struct Progress {
     pub points: usize,
     /// Solves of the whole forecast so far.
     pub solves: usize,
+    /// Points of this curve that were attacked.
+    pub attacks: usize,
 }
 
 /// Kept witnesses, and what is made of them.
 pub(super) struct Forecaster<'a> {
-    request: &'a ForecastRequest,
+    pub(super) request: &'a ForecastRequest,
     /// One for each target.
-    guessing: Vec<Shared>,
-    power: Vec<Shared>,
+    pub(super) guessing: Vec<Shared>,
+    pub(super) power: Vec<Shared>,
 }
 
 /// What is known of each target at one point, and whether that took a solve.
@@ -185,7 +191,7 @@ impl<'a> Forecaster<'a> {
         let mut solves = before;
         for (shared, spots) in kept.iter_mut().zip(spots) {
             let so_far = solves - shared.solves;
-            let mut tell = |settled, of_target| told(Progress { kind, settled, points, solves: so_far + of_target });
+            let mut tell = |settled, of_target| told(Progress { kind, settled, points, solves: so_far + of_target, attacks: 0 });
             let found = match effort {
                 Effort::Kept => spots.iter().map(|spot| (shared.standing(spot), false)).collect(),
                 Effort::Within(loss) => shared.settle(spots, loss, &mut tell),
@@ -338,23 +344,24 @@ impl Point {
             witnesses: vec![],
             solved: false,
             loss: 0.0,
+            bracket: None,
         }
     }
 }
 
 /// A setup as something that can be certified.
-struct Case {
+pub(super) struct Case {
     /// Drawn up as a certificate; for rounds with memory, of the expected behaviour.
-    request: Request,
-    evidence: Evidence,
-    leakage: Vec<f64>,
+    pub request: Request,
+    pub evidence: Evidence,
+    pub leakage: Vec<f64>,
     /// Rounds with memory only.
     plan: Option<Plan>,
 }
 
 impl Case {
     /// `None` if there are too few rounds for every setting to be used.
-    fn new(forecast: &ForecastRequest, kind: Kind, setup: &Setup) -> Option<Self> {
+    pub fn new(forecast: &ForecastRequest, kind: Kind, setup: &Setup) -> Option<Self> {
         let scenario = forecast.scenario.clone().with_leakage(LeakageDocument::PerPreparation(setup.leakage.clone())).ok()?;
         let expected = mixed(forecast.behaviour.table(), setup.visibility);
         let (data, rounds) = match kind.rounds {

@@ -6,6 +6,7 @@
 //!
 //! A forecast is about data that nobody has seen. It is not recorded, and nothing may be released on it.
 
+mod bracket;
 mod curve;
 #[cfg(feature = "service")]
 mod figure;
@@ -20,15 +21,16 @@ mod threshold;
 
 use serde::{Deserialize, Serialize};
 
-use self::{
-    curve::{Effort, Forecaster},
-    request::Setup,
-};
 pub use self::{
+    bracket::PointBracket,
     curve::{Kind, Point, Progress},
     request::{ForecastDocument, ForecastRequest, ThresholdsDocument},
     sweep::{Grid, MAX_POINTS, Spacing, Sweep, Swept},
     threshold::{RoundsNeeded, Threshold},
+};
+use self::{
+    curve::{Effort, Forecaster},
+    request::Setup,
 };
 #[cfg(feature = "service")]
 pub use self::{
@@ -106,7 +108,11 @@ pub fn forecast(request: &ForecastRequest, mut told: impl FnMut(Progress)) -> Fo
     let setups: Vec<Setup> = request.values.iter().map(|value| request.setup(swept, *value)).collect();
     let mut curves = Vec::new();
     for kind in &request.kinds {
-        curves.push(Curve { kind: *kind, points: forecaster.points(*kind, &setups, Effort::Within(request.loss), &mut told) });
+        let mut points = forecaster.points(*kind, &setups, Effort::Within(request.loss), &mut told);
+        if kind.rounds == RoundModel::PlugIn {
+            forecaster.add_brackets(*kind, &setups, &mut points, &mut told);
+        }
+        curves.push(Curve { kind: *kind, points });
     }
     let solves = forecaster.solves();
     let (mut thresholds, mut rounds_needed) = (Vec::new(), Vec::new());

@@ -39,6 +39,10 @@ const MARKERS: usize = 9;
 const GUESSING: RGBColor = RGBColor(16, 62, 120);
 const POWER: RGBColor = RGBColor(206, 92, 24);
 
+/// How much of its colour fills what is between a curve and the attacks on it, and half the width of the tick at an attack.
+const BETWEEN: f64 = 0.25;
+const TICK: i32 = 5;
+
 /// Dash, gap and marker of a curve.
 struct Style {
     colour: RGBColor,
@@ -92,6 +96,7 @@ impl Style {
 pub fn picture(forecast: &Forecast) -> Result<String, PictureError> {
     let mut svg = String::new();
     let rows = forecast.curves.len() as u32;
+    let rows = rows + u32::from(is_bracketed(forecast));
     let height = TITLE_HEIGHT + PLOT_HEIGHT + LINE_HEIGHT * (rows + 2);
     let failed = |error: DrawingAreaErrorKind<_>| PictureError(error.to_string());
     {
@@ -156,7 +161,8 @@ where
     X: AsRangedCoord<Value = f64>,
     X::CoordDescType: ValueFormatter<f64>,
 {
-    let most = forecast.curves.iter().flat_map(|curve| &curve.points).map(|point| point.bits_per_target_round).fold(0.0, f64::max);
+    let shown = |point: &Point| point.bracket.map_or(point.bits_per_target_round, |bracket| bracket.attack.max(bracket.bound));
+    let most = forecast.curves.iter().flat_map(|curve| &curve.points).map(shown).fold(0.0, f64::max);
     let top = if most > 0.0 { most * 1.08 } else { 1.0 };
     let mut chart = ChartBuilder::on(area)
         .margin_right(30)
@@ -183,6 +189,19 @@ where
         .bold_line_style(BLACK.mix(0.18))
         .light_line_style(BLACK.mix(0.06))
         .draw()?;
+    for curve in &forecast.curves {
+        let colour = Style::of(curve.kind).colour;
+        for run in brackets(curve, forecast.swept) {
+            let above = run.iter().map(|between| (between.x, between.attack));
+            let below = run.iter().rev().map(|between| (between.x, between.bound));
+            chart.draw_series([Polygon::new(above.chain(below).collect::<Vec<_>>(), colour.mix(BETWEEN))])?;
+            for between in run.iter().filter(|between| between.attacked) {
+                let (x, y) = chart.backend_coord(&(between.x, between.attack));
+                let (left, top) = area.get_base_pixel();
+                area.draw(&PathElement::new([(x - left - TICK, y - top), (x - left + TICK, y - top)], colour.stroke_width(2)))?;
+            }
+        }
+    }
     for curve in &forecast.curves {
         let style = Style::of(curve.kind);
         for run in runs(curve, forecast.swept) {
@@ -236,7 +255,16 @@ fn draw_legend(forecast: &Forecast, area: &Canvas) -> Drawn {
         let label = font(14).pos(Pos::new(HPos::Left, VPos::Center));
         area.draw(&Text::new(label_of(forecast, curve), (154, y), label))?;
     }
-    let last = (LINE_HEIGHT * forecast.curves.len() as u32) as i32;
+    let mut last = (LINE_HEIGHT * forecast.curves.len() as u32) as i32;
+    if is_bracketed(forecast) {
+        let y = last + (LINE_HEIGHT / 2) as i32;
+        area.draw(&Rectangle::new([(84, y - 6), (140, y + 6)], BLACK.mix(BETWEEN).filled()))?;
+        area.draw(&PathElement::new([(112 - TICK, y - 6), (112 + TICK, y - 6)], BLACK.stroke_width(2)))?;
+        let label = font(14).pos(Pos::new(HPos::Left, VPos::Center));
+        let words = "what an explicit attack with the same behaviour leaves, at the ticks: no method could certify more";
+        area.draw(&Text::new(words, (154, y), label))?;
+        last += LINE_HEIGHT as i32;
+    }
     let note = "A forecast from an expected behaviour, not from data: nothing may be released on it.";
     let level = format!("Every figure follows from witnesses that were checked exactly; relaxation level {}.", level_name(forecast));
     area.draw(&Text::new(level, (84, last + 8), font(12)))?;
@@ -300,6 +328,41 @@ impl Point {
             (Swept::Rounds, _) => self.total_rounds.map(|rounds| rounds as f64),
         }
     }
+}
+
+fn is_bracketed(forecast: &Forecast) -> bool {
+    forecast.curves.iter().flat_map(|curve| &curve.points).any(|point| point.bracket.is_some())
+}
+
+/// What is between a curve and the attacks on it, at one point.
+struct Between {
+    x: f64,
+    bound: f64,
+    attack: f64,
+    /// If not, the distance is interpolated.
+    attacked: bool,
+}
+
+/// The brackets of a curve, from attack to attack, without gaps.
+fn brackets(curve: &Curve, swept: Swept) -> Vec<Vec<Between>> {
+    let attacked: Vec<usize> = (0..curve.points.len()).filter(|i| curve.points[*i].bracket.is_some()).collect();
+    let gap = |i: usize| curve.points[i].bracket.map_or(0.0, |bracket| bracket.attack - bracket.bound);
+    let mut runs: Vec<Vec<Between>> = vec![];
+    for pair in attacked.windows(2) {
+        let &[first, last] = pair else { continue };
+        let span = &curve.points[first..=last];
+        if span.iter().any(|point| point.reason == Some(Reason::OutsideModel) || point.reason == Some(Reason::Unverified)) {
+            continue;
+        }
+        let between = |(i, point): (usize, &Point)| {
+            let share = i as f64 / (last - first) as f64;
+            let bound = point.bits_per_target_round;
+            let attack = bound + (1.0 - share) * gap(first) + share * gap(last);
+            Some(Between { x: point.value(swept)?, bound, attack, attacked: point.bracket.is_some() })
+        };
+        runs.push(span.iter().enumerate().filter_map(between).collect());
+    }
+    runs
 }
 
 /// The points of a curve, without gaps: what is outside the model or was not verified interrupts it.

@@ -23,6 +23,8 @@ pub fn csv(forecast: &Forecast) -> Result<String, csv::Error> {
         "certified_bits",
         "solved",
         "loss",
+        "attack",
+        "attack_residual",
     ])?;
     for curve in &forecast.curves {
         for point in &curve.points {
@@ -41,6 +43,8 @@ pub fn csv(forecast: &Forecast) -> Result<String, csv::Error> {
                 number(point.certified_bits),
                 point.solved.to_string(),
                 point.loss.to_string(),
+                point.bracket.map_or_else(String::new, |bracket| bracket.attack.to_string()),
+                point.bracket.map_or_else(String::new, |bracket| bracket.residual.to_string()),
             ])?;
         }
     }
@@ -64,14 +68,22 @@ pub fn table(forecast: &Forecast) -> String {
     for (i, curve) in forecast.curves.iter().enumerate() {
         lines.push(format!("  [{}] {}", i + 1, words(forecast, curve.kind, curve.points.first())));
     }
-    let heads: String = (1..=forecast.curves.len()).map(|i| format!("{:>15}", format!("[{i}]"))).collect();
+    let bracketed = forecast.curves.iter().flat_map(|curve| &curve.points).any(|point| point.bracket.is_some());
+    let width = if bracketed { 22 } else { 15 };
+    let heads: String = (1..=forecast.curves.len()).map(|i| format!("{:>width$}", format!("[{i}]"))).collect();
     lines.extend([String::new(), format!("{name:>14}{heads}")]);
     let rows = forecast.curves.iter().map(|curve| curve.points.len()).max().unwrap_or(0);
     for row in 0..rows {
         let points: Vec<Option<&Point>> = forecast.curves.iter().map(|curve| curve.points.get(row)).collect();
         let value = points.iter().flatten().find_map(|point| point.value(forecast.swept));
-        let cells: String = points.iter().map(|point| format!("{:>15}", point.map_or_else(String::new, cell))).collect();
+        let cells: String = points.iter().map(|point| format!("{:>width$}", point.map_or_else(String::new, cell))).collect();
         lines.push(format!("{:>14}{cells}", value.map_or_else(String::new, plain)));
+    }
+    if bracketed {
+        lines.extend([
+            String::new(),
+            "a..b: certified is a; an explicit attack with the expected behaviour leaves b, so no method could certify more.".to_owned(),
+        ]);
     }
     if !forecast.thresholds.is_empty() || !forecast.rounds_needed.is_empty() {
         lines.push(String::new());
@@ -114,9 +126,11 @@ fn words(forecast: &Forecast, kind: Kind, point: Option<&Point>) -> String {
 }
 
 fn cell(point: &Point) -> String {
-    match point.reason {
-        Some(reason) => word(&reason),
-        None => format!("{:.6}", point.bits_per_target_round),
+    match (point.reason, point.bracket) {
+        (Some(reason), None) => word(&reason),
+        (Some(reason), Some(bracket)) => format!("{}..{:.6}", word(&reason), bracket.attack),
+        (None, Some(bracket)) => format!("{:.6}..{:.6}", point.bits_per_target_round, bracket.attack),
+        (None, None) => format!("{:.6}", point.bits_per_target_round),
     }
 }
 

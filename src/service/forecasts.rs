@@ -1,4 +1,4 @@
-//! Forecasts: computed on a solver thread, and not kept.
+//! Forecasts: computed on a solver thread, between whose solves batches have precedence, and not kept.
 
 use super::{Service, SolveError};
 use crate::{
@@ -6,8 +6,8 @@ use crate::{
     forecast::{Forecast, ForecastRequest, forecast},
 };
 
-/// Nothing above this is computed: some minutes of one solver thread, in the unit of [`crate::relaxation::cost`].
-const LIMIT: f64 = 4e11;
+/// Nothing above this is computed, in seconds of one solver thread if no point shared a witness.
+const LIMIT: f64 = 300.0;
 
 /// Why there is no forecast.
 #[derive(Debug, thiserror::Error)]
@@ -27,11 +27,11 @@ impl Service {
         let cost = request.cost();
         if cost > LIMIT {
             let detail = format!(
-                "the forecast is estimated at {cost:.1e} steps if no point shared a witness, the limit is {LIMIT:.0e}: ask for fewer points or \
+                "the forecast is estimated to take {cost:.0} s if no point shared a witness, the limit is {LIMIT} s: ask for fewer points or \
                  curves, or a coarser level"
             );
             return Err(Fault::new("/sweep", detail).into());
         }
-        Ok(self.solvers.run(move || forecast(&request, |_| {})).await?.outcome)
+        Ok(self.solvers.run_long(move |pause| forecast(&request, |_| pause())).await?)
     }
 }

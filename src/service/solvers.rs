@@ -1,5 +1,6 @@
 //! A fixed number of threads that solve, behind a queue of fixed length. What nobody waits for has a queue of its own: it is done when nothing
-//! else is to be done, and never on all threads at once, so that one is always there for who waits.
+//! else is to be done, and never on all threads at once, so that one is always there for who waits. So has what takes long and consists of many
+//! solves: it begins when nothing else waits, leaves one thread alone if there are two, and between its solves does what has come in the meantime.
 
 use std::{
     collections::VecDeque,
@@ -44,6 +45,8 @@ pub(super) struct Solved<T> {
 
 /// Something to do on a solver thread, with its answer already addressed.
 type Job = Box<dyn FnOnce(&Load) + Send>;
+/// The same for a job that makes pauses.
+type LongJob = Box<dyn FnOnce(Pause) + Send>;
 
 /// What callers and threads share.
 #[derive(Debug, Default)]
@@ -63,15 +66,31 @@ impl Load {
 
 /// Most jobs that wait though nobody waits for them.
 const SPARE: usize = 4;
+/// Most long jobs that wait, and when it is worth to ask again.
+const LONG: usize = 8;
+const LONG_RETRY: Duration = Duration::from_secs(60);
+
+/// What a long job calls between its solves.
+pub(super) type Pause<'a> = &'a dyn Fn();
 
 /// What waits.
 #[derive(Default)]
 struct Queue {
     jobs: VecDeque<Job>,
+    long: VecDeque<LongJob>,
     spare: VecDeque<Job>,
-    /// Threads that are at a spare job.
-    at_spare: usize,
+    /// Threads that are at a long or a spare job.
+    at_leisure: usize,
     closed: bool,
+}
+
+impl Queue {
+    /// The next job that somebody waits for.
+    fn next(&mut self, load: &Load) -> Option<Job> {
+        let job = self.jobs.pop_front()?;
+        load.waiting.store(self.jobs.len(), Ordering::Relaxed);
+        Some(job)
+    }
 }
 
 /// The queue, and the news that something changed about it.
@@ -149,6 +168,31 @@ impl Solvers {
         outcome.await.unwrap_or(Err(SolveError::Stopped))
     }
 
+    /// Runs a long job, once a thread has nothing else to do. Whenever it pauses, its thread does the other jobs that wait by then.
+    ///
+    /// # Errors
+    /// Too many long jobs, a panic inside the job, or closed solvers.
+    pub(super) async fn run_long<T: Send + 'static>(&self, job: impl FnOnce(Pause) -> T + Send + 'static) -> Result<T, SolveError> {
+        let (answer, outcome) = oneshot::channel();
+        {
+            let mut queue = own(&self.waiting.queue);
+            if queue.closed {
+                return Err(SolveError::Stopped);
+            }
+            let waiting = queue.long.len();
+            if waiting >= LONG {
+                return Err(SolveError::QueueFull { waiting, retry_after: LONG_RETRY });
+            }
+            queue.long.push_back(Box::new(move |pause| {
+                // As for other jobs.
+                let outcome = catch_unwind(AssertUnwindSafe(|| job(pause)));
+                drop(answer.send(outcome.map_err(|_| SolveError::Panicked)));
+            }));
+            self.waiting.changed.notify_one();
+        }
+        outcome.await.unwrap_or(Err(SolveError::Stopped))
+    }
+
     fn enqueue(&self, job: Job) -> Result<(), SolveError> {
         let mut queue = own(&self.waiting.queue);
         if queue.closed {
@@ -191,6 +235,7 @@ impl Solvers {
             let mut queue = own(&self.waiting.queue);
             queue.closed = true;
             queue.spare.clear();
+            queue.long.clear();
         }
         self.waiting.changed.notify_all();
         let threads = std::mem::take(&mut *own(&self.threads));
@@ -209,23 +254,121 @@ fn own<T>(mutex: &Mutex<T>) -> MutexGuard<'_, T> {
 fn work(waiting: &Waiting, threads: usize, load: &Load) {
     let mut queue = own(&waiting.queue);
     loop {
-        if let Some(job) = queue.jobs.pop_front() {
-            load.waiting.store(queue.jobs.len(), Ordering::Relaxed);
+        let leisure = queue.at_leisure + 1 < threads;
+        if let Some(job) = queue.next(load) {
             drop(queue);
             job(load);
             queue = own(&waiting.queue);
         } else if queue.closed {
             return;
-        } else if queue.at_spare + 1 < threads
-            && let Some(job) = queue.spare.pop_front()
+        } else if (leisure || threads == 1)
+            && let Some(job) = queue.long.pop_front()
         {
-            queue.at_spare += 1;
-            drop(queue);
-            job(load);
-            queue = own(&waiting.queue);
-            queue.at_spare -= 1;
+            queue = aside(waiting, queue, || job(&|| catch_up(waiting, load)));
+        } else if leisure && let Some(job) = queue.spare.pop_front() {
+            queue = aside(waiting, queue, || job(load));
         } else {
             queue = waiting.changed.wait(queue).unwrap_or_else(|poisoned| poisoned.into_inner());
         }
+    }
+}
+
+/// Does a job that leaves a thread to the others.
+fn aside<'w>(waiting: &'w Waiting, mut queue: MutexGuard<'w, Queue>, job: impl FnOnce()) -> MutexGuard<'w, Queue> {
+    queue.at_leisure += 1;
+    drop(queue);
+    job();
+    let mut queue = own(&waiting.queue);
+    queue.at_leisure -= 1;
+    queue
+}
+
+/// Does what waits.
+fn catch_up(waiting: &Waiting, load: &Load) {
+    while let Some(job) = {
+        let mut queue = own(&waiting.queue);
+        queue.next(load)
+    } {
+        job(load);
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use std::sync::atomic::AtomicBool;
+
+    use super::*;
+
+    fn solvers(number: usize) -> Arc<Solvers> {
+        Arc::new(Solvers::start(number, 4, Arc::new(crate::certify::certify)).unwrap())
+    }
+
+    /// With a single thread: nothing else could have done the job.
+    #[tokio::test]
+    async fn what_comes_during_a_long_job_is_done_in_its_pauses() {
+        let solvers = solvers(1);
+        let (begun, waits) = oneshot::channel();
+        let (go, may_go) = std::sync::mpsc::channel();
+        let done = Arc::new(AtomicBool::new(false));
+        let long = tokio::spawn({
+            let (solvers, done) = (Arc::clone(&solvers), Arc::clone(&done));
+            async move {
+                let job = move |pause: Pause| {
+                    begun.send(()).unwrap();
+                    may_go.recv().unwrap();
+                    let before = done.load(Ordering::SeqCst);
+                    pause();
+                    (before, done.load(Ordering::SeqCst))
+                };
+                solvers.run_long(job).await
+            }
+        });
+        waits.await.unwrap();
+        let short = tokio::spawn({
+            let (solvers, done) = (Arc::clone(&solvers), Arc::clone(&done));
+            async move { solvers.run(move || done.store(true, Ordering::SeqCst)).await.map(|_| ()) }
+        });
+        while solvers.waiting() == 0 {
+            tokio::task::yield_now().await;
+        }
+        go.send(()).unwrap();
+        assert_eq!(long.await.unwrap(), Ok((false, true)));
+        assert_eq!(short.await.unwrap(), Ok(()));
+        solvers.close().await;
+    }
+
+    #[tokio::test]
+    async fn long_jobs_leave_one_of_two_threads_alone() {
+        let solvers = solvers(2);
+        let (running, most) = (Arc::new(AtomicUsize::new(0)), Arc::new(AtomicUsize::new(0)));
+        let jobs: Vec<_> = (0..4)
+            .map(|_| {
+                let (solvers, running, most) = (Arc::clone(&solvers), Arc::clone(&running), Arc::clone(&most));
+                tokio::spawn(async move {
+                    let job = move |_: Pause| {
+                        most.fetch_max(running.fetch_add(1, Ordering::SeqCst) + 1, Ordering::SeqCst);
+                        std::thread::sleep(Duration::from_millis(20));
+                        running.fetch_sub(1, Ordering::SeqCst);
+                    };
+                    solvers.run_long(job).await
+                })
+            })
+            .collect();
+        for job in jobs {
+            assert_eq!(job.await.unwrap(), Ok(()));
+        }
+        assert_eq!(most.load(Ordering::SeqCst), 1);
+        solvers.close().await;
+    }
+
+    /// Nobody else is the worse for it.
+    #[tokio::test]
+    async fn a_long_job_that_panics_is_an_answer() {
+        let solvers = solvers(1);
+        let panics = |_: Pause| -> u8 { panic!("as a test wants it") };
+        assert_eq!(solvers.run_long(panics).await, Err(SolveError::Panicked));
+        assert_eq!(solvers.run_long(|_| 3).await, Ok(3));
+        solvers.close().await;
+        assert_eq!(solvers.run_long(|_| 3).await, Err(SolveError::Stopped));
     }
 }

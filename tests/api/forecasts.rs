@@ -128,12 +128,12 @@ fn a_grid_that_would_take_too_long_is_refused() {
     let even = |outcomes: usize| vec![1.0 / outcomes as f64; outcomes];
     let request = json!({
         "scenario": { "preparations": 4, "measurements": 2, "outcomes": 2, "carrier_dimension": 2, "leakage": 0.001, "targets": [[0, 0]] },
-        "behaviour": vec![vec![even(2); 2]; 4], "rounds": ["plug-in"], "entropy": "guessing", "level": "sharp",
+        "behaviour": vec![vec![even(2); 2]; 4], "rounds": ["plug-in"], "entropy": "guessing", "level": "keen",
         "sweep": { "leakage": { "from": 1e-5, "to": 0.1, "points": 500 } },
     });
     let problem = post(&running, &request, "*/*").expect(422).json();
     assert_eq!(problem["pointer"], "/sweep");
-    assert!(problem["detail"].as_str().unwrap().contains("the limit is 4e11"), "{problem}");
+    assert!(problem["detail"].as_str().unwrap().contains("the limit is 300 s"), "{problem}");
 }
 
 #[test]
@@ -162,6 +162,18 @@ fn the_command_prints_and_draws() {
     let forecast: Value = serde_json::from_str(&run("json")).unwrap();
     assert_eq!(forecast["swept"], "leakage");
     assert_eq!(run("csv").lines().count(), 25);
+
+    let mut bracketed = request();
+    (bracketed["bracket"], bracketed["attacks"]) = (json!(true), json!(4));
+    std::fs::write(&file, bracketed.to_string()).unwrap();
+    let table = run("table");
+    assert!(table.contains("an explicit attack with the expected behaviour leaves b"), "{table}");
+    assert_eq!(table.matches("..0.").count(), 2, "what is outside the model is not attacked: {table}");
+    let picture = std::fs::read_to_string(&picture).unwrap();
+    assert!(picture.contains("<polygon") && picture.contains("what an explicit attack with the same behaviour leaves"), "{picture}");
+    let rows = run("csv");
+    let attacked = |row: &str| row.split(',').nth(12).unwrap().parse::<f64>().is_ok();
+    assert_eq!(rows.lines().skip(1).filter(|row| attacked(row)).count(), 2, "{rows}");
 
     std::fs::write(&file, "{}").unwrap();
     let output = Command::new(env!("CARGO_BIN_EXE_bitassay")).arg("forecast").arg(&file).output().unwrap();

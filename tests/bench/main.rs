@@ -4,6 +4,10 @@
 //! same machine, by the same clock. Requirements that do not hold are marked; the exit status is 1 then.
 
 mod batches;
+mod cold;
+mod cost;
+mod forecast;
+mod general;
 mod machine;
 mod memory;
 mod report;
@@ -19,7 +23,14 @@ use report::{Report, Section};
 type Part = (&'static str, fn() -> Section);
 
 /// Parts run in this order.
-const PARTS: [Part; 3] = [("warm", warm::run), ("service", service::run), ("memory", memory::run)];
+const PARTS: [Part; 6] = [
+    ("cold", cold::run),
+    ("cost", cost::run),
+    ("forecast", forecast::run),
+    ("warm", warm::run),
+    ("service", service::run),
+    ("memory", memory::run),
+];
 
 fn main() -> ExitCode {
     // Cargo passes flags of its own.

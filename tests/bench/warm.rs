@@ -28,28 +28,14 @@ pub fn run() -> Section {
     let mut section = Section::default();
     section.note(format!("processor time per certification, mean over {BATCHES} distinct batches: region, pool, exact bound, certificate"));
     for (name, entropy) in [("guessing", EntropyChoice::Guessing), ("power", EntropyChoice::Power)] {
-        let mut batches = Batches::new(1);
-        let first = request(&mut batches, entropy);
-        let solved = keepable(&first, &certify(&first));
-        assert!(!solved.is_empty(), "the first batch was not certified");
-        let requests: Vec<Request> = (0..BATCHES).map(|_| request(&mut batches, entropy)).collect();
         for size in POOLS {
-            let mut pool = Pool::new(size, 4 * size);
-            for (witness, made_for) in &solved {
-                for i in 0..size {
-                    let kept = Kept::try_new(&variant(witness, i), made_for.clone()).expect("a variant holds too");
-                    pool.add(Arc::new(kept));
-                }
-            }
-            let before = thread_time();
-            let certified = requests.iter().filter(|request| black_box(certify_from(&pool, request, f64::MAX)).is_some()).count();
-            let each = (thread_time() - before).as_secs_f64() / BATCHES as f64 * 1e6;
-            assert_eq!(certified, BATCHES, "some batches were not certified from the pool");
+            let each = certification(entropy, size);
             section.figure(format!("{name} entropy, pool of {size}"), each, "µs");
             if size == 100 {
                 section.below(format!("{name} entropy, pool of {size}"), each, 50.0, "µs");
             }
         }
+        let requests = requests(&mut Batches::new(1), entropy);
         let before = thread_time();
         requests.iter().for_each(|request| {
             let Data::Counts(counts) = request.data() else { return };
@@ -58,6 +44,31 @@ pub fn run() -> Section {
         section.figure("of that, the confidence region", (thread_time() - before).as_secs_f64() / BATCHES as f64 * 1e6, "µs");
     }
     section
+}
+
+/// Processor time of a certification from a pool of so many witnesses, in microseconds.
+pub fn certification(entropy: EntropyChoice, size: usize) -> f64 {
+    let mut batches = Batches::new(1);
+    let first = request(&mut batches, entropy);
+    let solved = keepable(&first, &certify(&first));
+    assert!(!solved.is_empty(), "the first batch was not certified");
+    let mut pool = Pool::new(size, 4 * size);
+    for (witness, made_for) in &solved {
+        for i in 0..size {
+            let kept = Kept::try_new(&variant(witness, i), made_for.clone()).expect("a variant holds too");
+            pool.add(Arc::new(kept));
+        }
+    }
+    let requests = requests(&mut batches, entropy);
+    let before = thread_time();
+    let certified = requests.iter().filter(|request| black_box(certify_from(&pool, request, f64::MAX)).is_some()).count();
+    let each = (thread_time() - before).as_secs_f64() / BATCHES as f64 * 1e6;
+    assert_eq!(certified, BATCHES, "some batches were not certified from the pool");
+    each
+}
+
+fn requests(batches: &mut Batches, entropy: EntropyChoice) -> Vec<Request> {
+    (0..BATCHES).map(|_| request(batches, entropy)).collect()
 }
 
 fn request(batches: &mut Batches, entropy: EntropyChoice) -> Request {

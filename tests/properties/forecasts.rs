@@ -131,6 +131,32 @@ fn brackets_hold_the_true_threshold() {
     assert!(certifies >= truth && not <= truth + 1e-3 && certifies - not <= 1e-3);
 }
 
+/// By the same derivation an attack leaves nothing from ε = (3/4)(1−1/√3)/2 on. It leaves no less than the bound, and little more.
+#[test]
+fn a_bracket_holds_the_bound_and_closes_at_the_true_threshold() {
+    let truth = 0.375 * (1.0 - 1.0 / 3f64.sqrt());
+    let sweep = json!({ "leakage": { "from": 0.07, "to": 0.2, "points": 15, "spacing": "linear" } });
+    let request = with(vacuum(0.75, 0.1), json!({ "sweep": sweep, "entropy": "power", "bracket": true, "attacks": 6, "loss": 1e-4 }));
+    for curve in run(&request).curves {
+        let attacked: Vec<&Point> = curve.points.iter().filter(|point| point.bracket.is_some()).collect();
+        assert_eq!(attacked.len(), 6);
+        assert!(curve.points[0].bracket.is_some() && curve.points[1].bracket.is_none() && curve.points[14].bracket.is_some());
+        for point in attacked {
+            let bracket = point.bracket.unwrap();
+            println!("{:?} {:?} {bracket:?}", curve.kind, point.leakage);
+            assert_eq!(bracket.bound, bits(point));
+            assert!(bracket.attack >= bracket.bound && bracket.attack <= bracket.bound + 2e-3, "{point:?}");
+            let LeakageDocument::Uniform(leakage) = point.leakage else { panic!("{point:?}") };
+            assert_eq!(bracket.attack < 1e-6, leakage > truth, "{point:?}");
+        }
+    }
+    // A finite number of rounds has no bracket.
+    let both = json!({ "rounds": ["independent", "plug-in"], "total_rounds": 1_000_000, "bracket": true, "attacks": 1 });
+    let curves = run(&with(vacuum(0.75, 0.1), both)).curves;
+    let attacked = |i: usize| curves[i].points.iter().filter(|point| point.bracket.is_some()).count();
+    assert_eq!((attacked(0), attacked(1)), (0, 1));
+}
+
 #[test]
 fn what_is_outside_the_model_is_said() {
     // Success is at most 1/2 + √(ε(1−ε)): at 0.75 the leakage is at least 0.067.
@@ -232,6 +258,9 @@ fn what_cannot_be_forecast_is_placed() {
         (json!({ "loss": -1 }), "/loss"),
         (json!({ "thresholds": { "leakage": 0.0 } }), "/thresholds/leakage"),
         (json!({ "thresholds": { "visibility": 2.0 } }), "/thresholds/visibility"),
+        (json!({ "attacks": 3 }), "/attacks"),
+        (json!({ "bracket": true, "attacks": 0 }), "/attacks"),
+        (with(finite.clone(), json!({ "bracket": true })), "/bracket"),
         (json!({ "behaviour": null }), "/behaviour"),
         (json!({ "counts": [[[1, 1]], [[1, 1]]] }), "/behaviour"),
         (json!({ "behaviour": null, "counts": [[[1, 1]], [[0, 0]]] }), "/counts/1/0"),

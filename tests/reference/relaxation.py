@@ -141,7 +141,11 @@ class Moments:
         return sp.csr_matrix((values, (rows, columns)), shape=(self.side**2, len(self.numbers)))
 
 
-def solve(case, solver):
+def solve(case, solver, seconds=float("inf")):
+    """Value, status, seconds of modelling and solving, by the clock or of the processor, whichever is less, and the side of the matrix.
+
+    A solver that runs out of time says so in its status.
+    """
     behaviour = case["behaviour"]
     x_size, y_size, b_size = len(behaviour), len(behaviour[0]), len(behaviour[0][0])
     exact = [leakage == 0 for leakage in case["leakage"]]
@@ -150,9 +154,10 @@ def solve(case, solver):
     probabilities = {(x, y, b): moments.form(algebra.probability(x, y, b)) for x in range(x_size) for y in range(y_size) for b in range(b_size)}
     leaks = [moments.form(algebra.trace((("N",), ("R", x)))) for x in range(x_size)]
     groups = range(b_size)
+    matrix = moments.matrix()
+    begun = time.perf_counter(), time.process_time()
     m = [cp.Variable(len(moments.numbers)) for _ in groups]
     at = lambda form, e: sum(c * m[e][k] for k, c in form.items()) if form else 0
-    matrix = moments.matrix()
     constraints = [sum(m[e][0] for e in groups) == 1]
     for e in groups:
         gamma = cp.reshape(matrix @ m[e], (moments.side, moments.side), order="C")
@@ -168,17 +173,20 @@ def solve(case, solver):
     problem = cp.Problem(cp.Maximize(sum(at(probabilities[*case["target"], e], e) for e in groups)), constraints)
     # Without the regularisation Clarabel stops a few 1e-6 above the value on the larger cases, which have almost no interior.
     clarabel = dict(tol_gap_abs=1e-8, tol_gap_rel=1e-8, tol_feas=1e-8, static_regularization_constant=1e-6, static_regularization_proportional=0.0)
-    settings = {"CLARABEL": clarabel, "SCS": dict(eps_abs=1e-7, eps_rel=1e-7, max_iters=200000)}
-    begun = time.perf_counter()
+    scs = dict(eps_abs=1e-7, eps_rel=1e-7, max_iters=200000)
+    if seconds < float("inf"):
+        clarabel["time_limit"], scs["time_limit_secs"] = seconds, seconds
+    settings = {"CLARABEL": clarabel, "SCS": scs}
     problem.solve(solver=solver, **settings[solver])
-    return float(problem.value), problem.status, time.perf_counter() - begun, moments.side
+    value = float("nan") if problem.value is None else float(problem.value)
+    return value, problem.status, min(time.perf_counter() - begun[0], time.process_time() - begun[1]), moments.side
 
 
 def main():
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     parser.add_argument("--case", choices=sorted(cases()), metavar="NAME")
     parser.add_argument("--solver", choices=["CLARABEL", "SCS"], default="CLARABEL")
-    parser.add_argument("--time", action="store_true", help="say how many seconds the solve took, the modelling layer included")
+    parser.add_argument("--time", action="store_true", help="say how many seconds modelling and solving took")
     options = parser.parse_args()
     chosen = {options.case: cases()[options.case]} if options.case else cases()
     solved = []
