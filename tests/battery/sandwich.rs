@@ -30,9 +30,9 @@ pub struct Sandwich {
     /// Number of the first of them.
     #[arg(long, default_value_t = 0)]
     first: u64,
-    /// Those whose bound at the sharpest level takes more steps than this are passed over; a second is about 10⁹ steps.
+    /// Those whose bound at the sharpest level is estimated to take more seconds than this are passed over.
     #[arg(long, default_value_t = f64::INFINITY)]
-    steps: f64,
+    seconds: f64,
     /// Cases at a time.
     #[arg(long, default_value_t = 2)]
     threads: usize,
@@ -42,7 +42,7 @@ impl Sandwich {
     /// Runs the cases. What they are like is put into words.
     pub fn run(&self) -> (Summary, String) {
         let numbers = self.first..self.first + self.cases;
-        let cases: Vec<Case> = numbers.filter_map(case).filter(|case| steps(case) <= self.steps).collect();
+        let cases: Vec<Case> = numbers.filter_map(case).filter(|case| seconds(case) <= self.seconds).collect();
         let (next, done) = (AtomicUsize::new(0), Mutex::new(Vec::new()));
         std::thread::scope(|scope| {
             for _ in 0..self.threads.max(1) {
@@ -74,8 +74,8 @@ impl Sandwich {
     }
 }
 
-/// Estimated steps of a solve at the sharpest level that is tried.
-fn steps(case: &Case) -> f64 {
+/// Estimated seconds of a solve at the sharpest level that is tried.
+fn seconds(case: &Case) -> f64 {
     let groups = case.scenario.geometry().outcomes;
     choose(LevelChoice::Auto, &case.scenario, groups).map_or(f64::INFINITY, |level| estimate(level, &case.scenario, groups))
 }
