@@ -320,7 +320,7 @@ impl fmt::Display for Agreement {
 
 #[test]
 fn both_implementations_agree_on_records_and_on_mutations() {
-    let agreement = agreement(1200, 1);
+    let agreement = agreement(200, 1);
     print!("{agreement}");
     assert_eq!(agreement.violations, Vec::<String>::new());
 }
