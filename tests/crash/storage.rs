@@ -74,6 +74,34 @@ fn a_disk_that_takes_no_more_writes_loses_nothing() {
     }
 }
 
+/// Files that cannot be changed any more, beneath a running server. Needs a file system and a user that can make them so.
+#[cfg(target_os = "linux")]
+#[test]
+fn files_that_become_read_only_are_waited_for() {
+    let site = Site::new();
+    let process = Process::start(site.command(Command::new(env!("CARGO_BIN_EXE_bitassay")), &site.database()));
+    let began = declare(&process.client);
+    let replies: Vec<Reply> = (0..3).map(|number| process.post(number, &began)).collect();
+    let mut log = site.database().into_os_string();
+    log.push("-wal");
+    let change =
+        |flag: &str| Command::new("chattr").arg(flag).arg(site.database()).arg(&log).output().is_ok_and(|output| output.status.success());
+    if !change("+i") {
+        change("-i");
+        println!("not run: this machine does not let the test make files immutable");
+        return;
+    }
+    let refused = [process.post(3, &began), process.post(3, &began)];
+    let read = [process.client.get("/livez"), process.client.get("/v1/certifications")];
+    // Before anything can fail: nobody could remove the folder otherwise.
+    assert!(change("-i"));
+    for reply in refused {
+        assert_eq!(reply.expect(503).json()["type"], PROBLEM);
+    }
+    read.into_iter().for_each(|reply| drop(reply.expect(200)));
+    recovered(&process, &began, &replies);
+}
+
 /// A file system of its own, of three megabytes, in a name space that ends with the server. Needs the right to make one.
 #[cfg(target_os = "linux")]
 fn small_disk(site: &Site, then: &str) -> Option<(Command, PathBuf)> {
