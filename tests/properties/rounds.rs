@@ -129,12 +129,10 @@ fn largest_excess(commitment: &Commitment, witnesses: &[Witness], rounds: &[Roun
     let mut largest = f64::NEG_INFINITY;
     for Round { behaviour, leakage } in rounds {
         let mut expectation = 0.0;
-        for x in 0..4 {
-            for y in 0..2 {
-                for (p, factor) in behaviour[x][y].iter().zip(&commitment.factors[x][y]) {
-                    let reward = if targets.contains(&Setting { x, y }) { p.powf(beta) } else { 1.0 };
-                    expectation += commitment.setting_distribution[x][y] * p * factor * reward;
-                }
+        for Setting { x, y } in commitment.scenario.geometry().settings() {
+            for (p, factor) in behaviour[x][y].iter().zip(&commitment.factors[x][y]) {
+                let reward = if targets.contains(&Setting { x, y }) { p.powf(beta) } else { 1.0 };
+                expectation += commitment.setting_distribution[x][y] * p * factor * reward;
             }
         }
         // g is close to 1; for leakages above the declared one the larger value of g, below it the smaller one is on the safe side.
