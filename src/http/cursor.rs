@@ -11,7 +11,7 @@ pub fn write(kind: &str, place: impl Display) -> String {
     URL_SAFE_NO_PAD.encode(format!("{kind}{place}"))
 }
 
-/// The place that [`write`] wrote for the same kind. `None` for any other text: each place has one cursor.
+/// The place that [`write()`] wrote for the same kind. `None` for any other text: each place has one cursor.
 pub fn read<T: FromStr + Display>(kind: &str, text: &str) -> Option<T> {
     let bytes = URL_SAFE_NO_PAD.decode(text).ok()?;
     let written = str::from_utf8(&bytes).ok()?.strip_prefix(kind)?;
