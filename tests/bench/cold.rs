@@ -25,7 +25,7 @@ const VISIBILITY: f64 = 0.99;
 const SECONDS: f64 = 1.0;
 const MOST_OFTEN: u32 = 20;
 /// After so long by the clock a general solver is stopped.
-const PATIENCE: f64 = 150.0;
+const PATIENCE: f64 = 60.0;
 /// By how much a bound may exceed the general route's: what rounding to an exact witness may cost.
 const LOOSER: f64 = 2e-6;
 
