@@ -20,7 +20,8 @@ use crate::{
     witness::check::{CheckedWitness, Place},
 };
 
-/// The most that could be certified in the limit of many rounds lies between these two, up to the residual.
+/// The least entropy of the curve's kind that a model within the declaration leaves lies between these two, up to the residual. Another kind of
+/// entropy may certify more: the power entropy is often above what an attack leaves of the min-entropy.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
 #[cfg_attr(feature = "service", derive(utoipa::ToSchema))]
 #[serde(deny_unknown_fields)]

@@ -261,7 +261,7 @@ fn draw_legend(forecast: &Forecast, area: &Canvas) -> Drawn {
         area.draw(&Rectangle::new([(84, y - 6), (140, y + 6)], BLACK.mix(BETWEEN).filled()))?;
         area.draw(&PathElement::new([(112 - TICK, y - 6), (112 + TICK, y - 6)], BLACK.stroke_width(2)))?;
         let label = font(14).pos(Pos::new(HPos::Left, VPos::Center));
-        let words = "what an explicit attack with the same behaviour leaves, at the ticks: no method could certify more";
+        let words = "what an explicit attack leaves of this entropy, at the ticks: no bound on it can be higher";
         area.draw(&Text::new(words, (154, y), label))?;
         last += LINE_HEIGHT as i32;
     }

@@ -82,7 +82,7 @@ pub fn table(forecast: &Forecast) -> String {
     if bracketed {
         lines.extend([
             String::new(),
-            "a..b: certified is a; an explicit attack with the expected behaviour leaves b, so no method could certify more.".to_owned(),
+            "a..b: certified is a; an explicit attack with the expected behaviour leaves b of this entropy, so no bound on it can be higher.".to_owned(),
         ]);
     }
     if !forecast.thresholds.is_empty() || !forecast.rounds_needed.is_empty() {
