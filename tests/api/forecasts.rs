@@ -167,10 +167,17 @@ fn the_command_prints_and_draws() {
     (bracketed["bracket"], bracketed["attacks"]) = (json!(true), json!(4));
     std::fs::write(&file, bracketed.to_string()).unwrap();
     let table = run("table");
-    assert!(table.contains("an explicit attack with the expected behaviour leaves b"), "{table}");
+    assert!(
+        table.contains("an explicit attack with the expected behaviour leaves b of this entropy, so no bound on it can be higher"),
+        "{table}"
+    );
     assert_eq!(table.matches("..0.").count(), 2, "what is outside the model is not attacked: {table}");
     let picture = std::fs::read_to_string(&picture).unwrap();
-    assert!(picture.contains("<polygon") && picture.contains("what an explicit attack with the same behaviour leaves"), "{picture}");
+    assert!(
+        picture.contains("<polygon")
+            && picture.contains("what an explicit attack leaves of this entropy, at the ticks: no bound on it can be higher"),
+        "{picture}"
+    );
     let rows = run("csv");
     let attacked = |row: &str| row.split(',').nth(12).unwrap().parse::<f64>().is_ok();
     assert_eq!(rows.lines().skip(1).filter(|row| attacked(row)).count(), 2, "{rows}");
